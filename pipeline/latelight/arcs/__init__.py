@@ -1,0 +1,1 @@
+"""Find faint extended arcs in a difference."""

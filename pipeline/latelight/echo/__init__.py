@@ -1,0 +1,1 @@
+"""Light-echo geometry: pure physics, no pixels."""

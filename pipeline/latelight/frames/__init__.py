@@ -1,0 +1,1 @@
+"""Read FITS frames: pixels, variance, mask, header words."""

@@ -1,0 +1,1 @@
+"""Bring two frames to one PSF and one flux scale."""

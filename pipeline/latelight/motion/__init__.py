@@ -1,0 +1,1 @@
+"""Measure how an arc moves along its normal."""

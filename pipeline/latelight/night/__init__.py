@@ -1,0 +1,1 @@
+"""A night's work: pairing, the chain of stages, engines."""

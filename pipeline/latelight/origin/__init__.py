@@ -1,0 +1,1 @@
+"""Score which listed source an arc came from."""

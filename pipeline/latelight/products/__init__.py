@@ -1,0 +1,1 @@
+"""Write catalogues and cutouts."""

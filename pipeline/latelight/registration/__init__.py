@@ -1,0 +1,1 @@
+"""Star lists, alignment and resampling."""

@@ -1,0 +1,1 @@
+"""Synthetic frames with exact truth."""

@@ -1,0 +1,1 @@
+"""The difference of two matched frames and its noise."""

@@ -1,0 +1,61 @@
+"""How many threads this process may use, and how a kernel is spread over them.
+
+Compiled kernels release the interpreter lock and work on a block of rows, so
+plain threads share them; results do not depend on how many there are.
+"""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable
+from concurrent.futures import ThreadPoolExecutor
+
+__all__ = ["n_threads", "over_rows", "set_threads"]
+
+_threads = max(1, os.cpu_count() or 1)
+
+
+def set_threads(count: int) -> None:
+    """Set how many threads this process may use.
+
+    Parameters
+    ----------
+    count : int
+        At least 1.
+
+    Raises
+    ------
+    ValueError
+        If ``count`` is below 1.
+    """
+    global _threads
+    if count < 1:
+        msg = f"count must be at least 1, got {count}"
+        raise ValueError(msg)
+    _threads = count
+
+
+def n_threads() -> int:
+    """Return how many threads this process may use."""
+    return _threads
+
+
+def over_rows(kernel: Callable[[int, int], None], n_rows: int) -> None:
+    """Call ``kernel(first, last)`` on blocks of rows until all are done.
+
+    Parameters
+    ----------
+    kernel : callable
+        Writes rows ``first <= row < last`` of its output and nothing else.
+    n_rows : int
+        Rows in all.
+    """
+    count = min(_threads, n_rows)
+    if count <= 1:
+        kernel(0, n_rows)
+        return
+    # Several blocks a thread, so that an uneven frame keeps both busy.
+    n_blocks = min(4 * count, n_rows)
+    edges = [n_rows * i // n_blocks for i in range(n_blocks + 1)]
+    with ThreadPoolExecutor(count) as pool:
+        list(pool.map(kernel, edges[:-1], edges[1:]))
