@@ -1,0 +1,42 @@
+"""Blocks of rows cover every row once, whatever the number of threads."""
+
+import numpy as np
+import pytest
+
+from latelight import threads
+
+
+@pytest.fixture
+def keep_threads():
+    before = threads.n_threads()
+    yield
+    threads.set_threads(before)
+
+
+@pytest.mark.parametrize("count", [1, 2, 5])
+@pytest.mark.parametrize("n_rows", [1, 3, 1000])
+def test_every_row_once(count, n_rows, keep_threads):
+    threads.set_threads(count)
+    hits = np.zeros(n_rows, int)
+
+    def kernel(first, last):
+        hits[first:last] += 1
+
+    threads.over_rows(kernel, n_rows)
+    assert (hits == 1).all()
+
+
+def test_a_failing_block_is_not_swallowed(keep_threads):
+    threads.set_threads(2)
+
+    def kernel(first, last):
+        msg = "bad block"
+        raise RuntimeError(msg)
+
+    with pytest.raises(RuntimeError, match="bad block"):
+        threads.over_rows(kernel, 10)
+
+
+def test_count_below_one_is_refused(keep_threads):
+    with pytest.raises(ValueError, match="count must be at least 1, got 0"):
+        threads.set_threads(0)
