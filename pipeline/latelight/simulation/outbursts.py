@@ -1,0 +1,297 @@
+"""Draw outbursts and the echoes they light in a field."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from latelight.echo.geometry import delay_yr, depth_pc
+from latelight.records import Source
+from latelight.simulation.astrometry import PlateCoordinates
+from latelight.simulation.dust import DustSheet, filamentary_texture
+from latelight.simulation.echoes import (
+    Echo,
+    Viewpoint,
+    age_yr,
+    sheet_slopes,
+)
+from latelight.simulation.exposures import Exposure
+from latelight.simulation.measuring import ridge_peak
+from latelight.simulation.outburst import LIGHT_CURVES, LightCurve
+from latelight.sky import offset_position, pixel_scale_arcsec, position_angle
+
+__all__ = ["EchoPlan", "Outburst", "flat_speed", "place_echoes", "random_outburst"]
+
+SPEEDS = (1.5, 30.0)
+SHIFTS_ARCSEC = (1.5, 15.0)
+STEEPEST_SLOPE = 2.5
+# The fainter lobe of a difference over the brighter one.
+LEAST_LOBE_RATIO = 0.3
+
+
+@dataclass(frozen=True, slots=True)
+class Outburst:
+    """A source and its light curve."""
+
+    source: Source
+    light_curve: LightCurve
+
+
+@dataclass(frozen=True, slots=True)
+class EchoPlan:
+    """What the echoes of a field should be like.
+
+    Attributes
+    ----------
+    count : int
+        How many.
+    brightness : (float, float)
+        Range of the peak surface brightness, mag/arcsec^2.
+    lengths : (float, float)
+        Range of the clouds' lengths along the front, arcsec.
+    turn_deg : float
+        1 sigma of the angle by which sheets turn the motion, degrees.
+    """
+
+    count: int
+    brightness: tuple[float, float] = (21.5, 24.5)
+    lengths: tuple[float, float] = (20.0, 70.0)
+    turn_deg: float = 6.0
+
+
+def random_outburst(
+    rng: np.random.Generator,
+    *,
+    name: str,
+    ra: float,
+    dec: float,
+    mjd: float,
+    far: bool,
+) -> Outburst:
+    """Draw an outburst outside a field whose echoes there move at usual speeds.
+
+    Parameters
+    ----------
+    rng : numpy.random.Generator
+        Source of the randomness.
+    name : str
+        What to call it.
+    ra, dec : float
+        Centre of the field, degrees.
+    mjd : float
+        When its age holds.
+    far : bool
+        At 42-58 kpc; otherwise at 2.5-10 kpc.
+    """
+    while True:
+        distance = rng.uniform(42e3, 58e3) if far else 2.5e3 * 4.0 ** rng.random()
+        age = 10.0 ** rng.uniform(2.0, 2.95)
+        away = rng.uniform(0.25, 1.2) if far else rng.uniform(0.6, 4.0)
+        place = offset_position(ra, dec, rng.uniform(0.0, 360.0), away)
+        source = Source(
+            name=name,
+            ra=float(place[0]),
+            dec=float(place[1]),
+            distance_pc=float(distance),
+            distance_err_pc=float(distance * rng.uniform(0.03, 0.1)),
+            age_yr=float(age),
+            age_err_yr=0.0,
+            age_at_mjd=mjd,
+        )
+        if SPEEDS[0] * 1.1 < flat_speed(source, ra, dec, mjd) < SPEEDS[1] / 1.3:
+            break
+    light_curve = LightCurve(
+        shape=LIGHT_CURVES[int(rng.integers(len(LIGHT_CURVES)))],
+        duration_d=float(20.0 * 10.0 ** rng.random()),
+        rise=float(rng.uniform(0.05, 0.3)),
+    )
+    return Outburst(source=source, light_curve=light_curve)
+
+
+def flat_speed(source: Source, ra: float, dec: float, mjd: float) -> float:
+    """Return the speed of an echo on a sheet across the line of sight, arcsec/yr."""
+    distance, age = float(source.distance_pc or 0.0), age_yr(source, mjd)
+    theta = PlateCoordinates(ra, dec).angle_from(
+        source.ra, source.dec, np.zeros(2), np.zeros(2)
+    )
+    h = 1e-4 * theta
+    z = depth_pc(theta, age, distance)
+    rise = delay_yr(theta + h, z, distance) - delay_yr(theta - h, z, distance)
+    return float((7200.0 * h / rise)[0])
+
+
+def place_echoes(
+    rng: np.random.Generator,
+    outbursts: tuple[Outburst, ...],
+    *,
+    plan: EchoPlan,
+    science: Exposure,
+    template: Exposure,
+) -> tuple[Echo, ...]:
+    """Draw echoes well inside a frame that do not overlap.
+
+    Parameters
+    ----------
+    rng : numpy.random.Generator
+        Source of the randomness.
+    outbursts : tuple of Outburst
+        What lights them; the first lights most.
+    plan : EchoPlan
+        Their number, brightness and length.
+    science, template : Exposure
+        The epochs between which they must move.
+
+    Raises
+    ------
+    ValueError
+        If they do not fit into the frame.
+    """
+    echoes: list[Echo] = []
+    boxes: list[_Footprint] = []
+    for _ in range(400 * plan.count):
+        if len(echoes) == plan.count:
+            break
+        first = len(outbursts) == 1 or rng.random() < 0.65
+        outburst = outbursts[0] if first else outbursts[1]
+        drawn = _draw(rng, outburst, plan, science, template)
+        if drawn is None or any(drawn.overlaps(box) for box in boxes):
+            continue
+        echo = _build(rng, outburst, drawn, plan, science, template)
+        if echo is not None:
+            echoes.append(echo)
+            boxes.append(drawn)
+    if len(echoes) < plan.count:
+        msg = (
+            f"count must fit into a frame of {science.camera.shape} pixels, got "
+            f"{plan.count}; ask for fewer echoes or a larger frame"
+        )
+        raise ValueError(msg)
+    return tuple(echoes)
+
+
+@dataclass(frozen=True, slots=True)
+class _Footprint:
+    """Where one echo will lie: place, motion and the room it takes."""
+
+    x: float
+    y: float
+    ra: float
+    dec: float
+    pa: float
+    speed: float
+    length: float
+    reach: float
+    scale: float
+
+    def overlaps(self, other: _Footprint) -> bool:
+        """Say whether two echoes come within 8 arcsec of each other."""
+        angle = np.radians(self.pa)
+        # East is left and north up, give or take the frame's rotation.
+        east, north = -(other.x - self.x), other.y - self.y
+        across = abs(east * np.sin(angle) + north * np.cos(angle)) * self.scale
+        along = abs(east * np.cos(angle) - north * np.sin(angle)) * self.scale
+        return bool(
+            along < 0.5 * (self.length + other.length) + 8.0
+            and across < 0.5 * (self.reach + other.reach) + 8.0
+        )
+
+
+def _draw(
+    rng: np.random.Generator,
+    outburst: Outburst,
+    plan: EchoPlan,
+    science: Exposure,
+    template: Exposure,
+) -> _Footprint | None:
+    """Draw place and motion; None when the shift would be out of range."""
+    ny, nx = science.camera.shape
+    margin = min(130.0, 0.2 * min(ny, nx))
+    x, y = rng.uniform(margin, nx - margin), rng.uniform(margin, ny - margin)
+    ra, dec = (float(v) for v in science.wcs.all_pix2world(x, y, 0))
+    source = outburst.source
+    middle = 0.5 * (science.mjd + template.mjd)
+    speed = flat_speed(source, ra, dec, middle) * 10.0 ** rng.uniform(-0.2, 0.2)
+    turn = rng.normal(0.0, plan.turn_deg)
+    length = rng.uniform(*plan.lengths)
+    shift = speed * abs(science.mjd - template.mjd) / 365.25
+    inside = SPEEDS[0] < speed < SPEEDS[1]
+    if not inside or not SHIFTS_ARCSEC[0] < shift < SHIFTS_ARCSEC[1]:
+        return None
+    # Away from the source at the echo: the way to it, turned round.
+    away = float(position_angle(ra, dec, source.ra, source.dec)) + 180.0
+    width = speed * outburst.light_curve.duration_d / 365.25
+    return _Footprint(
+        x=x,
+        y=y,
+        ra=ra,
+        dec=dec,
+        pa=(away + turn) % 360.0,
+        speed=speed,
+        length=length,
+        reach=shift + 2.0 * width + 6.0,
+        scale=science.camera.scale_arcsec,
+    )
+
+
+def _build(
+    rng: np.random.Generator,
+    outburst: Outburst,
+    place: _Footprint,
+    plan: EchoPlan,
+    science: Exposure,
+    template: Exposure,
+) -> Echo | None:
+    """Make the dust for one echo; None when it will not do."""
+    source = outburst.source
+    distance = float(source.distance_pc or 0.0)
+    age = age_yr(source, 0.5 * (science.mjd + template.mjd))
+    theta = PlateCoordinates(place.ra, place.dec).angle_from(
+        source.ra, source.dec, np.zeros(1), np.zeros(1)
+    )
+    depth = float(depth_pc(theta, age, distance)[0])
+    slopes = sheet_slopes(
+        source,
+        ra=place.ra,
+        dec=place.dec,
+        depth_pc=depth,
+        speed=place.speed,
+        pa=place.pa,
+    )
+    if np.hypot(*slopes) > STEEPEST_SLOPE:
+        return None
+    # A thickness that would blur a lasting flash to 0.3-2.5 arcsec, FWHM.
+    blur = 0.3 * 10.0 ** rng.uniform(0.0, 0.92) / 2.355
+    step = 1e-4 * distance
+    delays = delay_yr(theta, np.array([depth - step, depth + step]), distance)
+    per_pc = abs(float(delays[1] - delays[0])) / (2.0 * step)
+    sheet = DustSheet(
+        ra=place.ra,
+        dec=place.dec,
+        depth_pc=depth,
+        slope_east=slopes[0],
+        slope_north=slopes[1],
+        thickness_pc=blur / place.speed / per_pc,
+        texture=filamentary_texture(
+            rng,
+            along_arcsec=place.length,
+            across_arcsec=place.reach * float(rng.uniform(1.0, 1.6)),
+            along_pa=place.pa + 90.0 + float(rng.normal(0.0, 8.0)),
+        ),
+    )
+    echo = Echo(source, outburst.light_curve, sheet, amplitude=1.0)
+    return _brighten(echo, float(rng.uniform(*plan.brightness)), science, template)
+
+
+def _brighten(
+    echo: Echo, brightness: float, science: Exposure, template: Exposure
+) -> Echo | None:
+    """Set the dust column so that the ridge peaks as asked at the science epoch."""
+    view = Viewpoint.of(echo, science)
+    now = ridge_peak(echo, view)
+    then = ridge_peak(echo, replace(view, mjd=template.mjd))
+    if not LEAST_LOBE_RATIO < then / now < 1.0 / LEAST_LOBE_RATIO:
+        return None
+    scale = pixel_scale_arcsec(science.wcs, view.psf_x, view.psf_y)
+    wanted = 10.0 ** (0.4 * (science.zero_point - brightness)) * scale**2
+    return replace(echo, amplitude=wanted / now)

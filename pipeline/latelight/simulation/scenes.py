@@ -1,0 +1,331 @@
+"""Random pairs of frames with exact truth."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Literal
+
+import numpy as np
+
+from latelight.simulation.astrometry import frame_wcs, misstate
+from latelight.simulation.exposures import BadColumn, Camera, Exposure
+from latelight.simulation.objects import random_galaxies, random_stars
+from latelight.simulation.observing import (
+    Clutter,
+    Scene,
+    SimulatedFrame,
+    observe,
+    pair_truth,
+)
+from latelight.simulation.optics import random_psf
+from latelight.simulation.outbursts import (
+    EchoPlan,
+    Outburst,
+    flat_speed,
+    place_echoes,
+    random_outburst,
+)
+from latelight.simulation.truth import PairTruth
+from latelight.simulation.writing import STANDARD_WORDS, frame_header, write_hdus
+
+__all__ = ["SimulatedPair", "random_camera", "random_exposure", "random_pair"]
+
+Kind = Literal["echoes", "nuisances"]
+
+# Stars of 13-23 mag per square arcminute at the default density.
+STARS_PER_ARCMIN2 = 18.0
+MARGIN_ARCSEC = 30.0
+# Magnitude of one count in 120 s: a 1.5-m telescope at 1.5 electrons a count.
+ZERO_POINT = 28.8
+EXPOSURE_S = 120.0
+OBSERVATORY = "Larkspur Hill 1.5-m"
+
+
+@dataclass(frozen=True, slots=True)
+class SimulatedPair:
+    """Two epochs of one field, and the truth.
+
+    Attributes
+    ----------
+    template, science : SimulatedFrame
+        The frames.
+    truth : PairTruth
+        What is exactly known about them.
+    """
+
+    template: SimulatedFrame
+    science: SimulatedFrame
+    truth: PairTruth
+
+    def write(self, folder: Path) -> tuple[Path, Path]:
+        """Write ``template.fits`` and ``science.fits``; return their paths."""
+        return tuple(  # type: ignore[return-value]
+            write_hdus(
+                Path(folder) / f"{name}.fits",
+                [("", frame.pixels, frame.header)],
+                primary=frame.header,
+            )
+            for name, frame in (("template", self.template), ("science", self.science))
+        )
+
+
+def random_pair(
+    seed: int,
+    *,
+    kind: Kind = "echoes",
+    size: int = 1024,
+    science_sharper: bool = False,
+    template_later: bool = False,
+    n_stars: int | None = None,
+) -> SimulatedPair:
+    """Make two epochs of a random field.
+
+    Parameters
+    ----------
+    seed : int
+        The same seed and arguments give the same pair.
+    kind : {"echoes", "nuisances"}
+        6-8 echoes (fewer in small frames) among ordinary sky and moderate
+        nuisances; or no echo and plenty of nuisances.
+    size : int
+        Side of the frames, pixels, at least 256.
+    science_sharper : bool
+        Whether the science frame has the better seeing.
+    template_later : bool
+        Whether the template was taken after the science frame.
+    n_stars : int, optional
+        Stars of 13 to 23 mag on a frame; by default 18 per square arcminute.
+
+    Raises
+    ------
+    ValueError
+        If ``kind`` is unknown or ``size`` too small.
+    """
+    if kind not in ("echoes", "nuisances"):
+        msg = f'kind must be "echoes" or "nuisances", got {kind!r}'
+        raise ValueError(msg)
+    if size < 256:
+        msg = f"size must be at least 256 pixels, got {size}"
+        raise ValueError(msg)
+    streams = [np.random.default_rng(s) for s in np.random.SeedSequence(seed).spawn(5)]
+    conditions, sky, dust, first, second = streams
+    camera = random_camera(conditions, (size, size), many_columns=kind == "nuisances")
+    ra, dec = conditions.uniform(0.0, 360.0), conditions.uniform(-65.0, 65.0)
+    mjd = conditions.uniform(60_000.0, 61_500.0)
+    outbursts = _random_outbursts(conditions, ra, dec, mjd)
+    days = _random_interval(conditions, outbursts, ra, dec, mjd)
+    sharp = conditions.uniform(1.0, 1.4) / camera.scale_arcsec
+    broad = sharp * conditions.uniform(1.06, 1.4)
+    pixels = (sharp, broad) if science_sharper else (broad, sharp)
+    moments = (mjd, mjd + days if template_later else mjd - days)
+    science, template = (
+        random_exposure(
+            conditions,
+            camera,
+            ra=ra,
+            dec=dec,
+            mjd=moment,
+            fwhm_px=fwhm,
+            field=f"SIM-{seed}",
+        )
+        for moment, fwhm in zip(moments, pixels, strict=True)
+    )
+
+    echoes = ()
+    if kind == "echoes":
+        room = min(1.0, (size / 1024) ** 2)
+        plan = EchoPlan(count=max(1, round(int(dust.integers(6, 9)) * room)))
+        echoes = place_echoes(
+            dust, outbursts, plan=plan, science=science, template=template
+        )
+    scene = _random_sky(sky, ra, dec, size, n_stars, kind, echoes)
+    taken = [
+        observe(
+            scene,
+            exposure,
+            epoch=epoch,
+            clutter=_random_clutter(rng, size, kind),
+            header=frame_header(
+                exposure, words=STANDARD_WORDS, observatory=OBSERVATORY
+            ),
+            rng=rng,
+        )
+        for epoch, (exposure, rng) in enumerate(((template, first), (science, second)))
+    ]
+    truth = pair_truth(
+        scene,
+        science=(science, taken[1][1]),
+        template=(template, taken[0][1]),
+        sources=tuple(o.source for o in outbursts),
+    )
+    return SimulatedPair(template=taken[0][0], science=taken[1][0], truth=truth)
+
+
+def random_camera(
+    rng: np.random.Generator, shape: tuple[int, int], *, many_columns: bool
+) -> Camera:
+    """Draw a camera: its optical axis, its spikes and its faulty columns."""
+    ny, nx = shape
+    count = int(rng.integers(4, 8) if many_columns else rng.integers(1, 4))
+    columns = []
+    for _ in range(count):
+        whole = rng.random() < 0.5
+        columns.append(
+            BadColumn(
+                col=int(rng.integers(5, nx - 5)),
+                first=0 if whole else int(rng.integers(0, ny // 2)),
+                last=ny,
+                gain=float(rng.choice([0.0, 0.4, 1.0])),
+                excess=float(rng.choice([0.0, 150.0, 3000.0])),
+            )
+        )
+    return Camera(
+        shape=shape,
+        spike_angle=float(rng.uniform(0.0, 90.0)),
+        axis_x=nx * float(rng.uniform(0.45, 0.55)),
+        axis_y=ny * float(rng.uniform(0.45, 0.55)),
+        bad_columns=tuple(columns),
+    )
+
+
+def random_exposure(
+    rng: np.random.Generator,
+    camera: Camera,
+    *,
+    ra: float,
+    dec: float,
+    mjd: float,
+    fwhm_px: float,
+    field: str,
+    filter_word: str = "r",
+) -> Exposure:
+    """Draw the conditions of one exposure of a field.
+
+    Parameters
+    ----------
+    rng : numpy.random.Generator
+        Source of the randomness.
+    camera : Camera
+        The camera.
+    ra, dec : float
+        Where the telescope should point, degrees.
+    mjd : float
+        Middle of the exposure.
+    fwhm_px : float
+        Seeing, pixels.
+    field, filter_word : str
+        Words for the header.
+    """
+    # The optics' own distortion, and a little that changes with every exposure.
+    own = np.array([2.0, 0.3, 0.5, -0.3, 0.2, -0.4, 0.25, 0.3])
+    distortion = own + rng.normal(0.0, 0.12, 8)
+    # Most nights the rotator is right to a quarter of a degree, some nights not.
+    turn = rng.normal(0.0, 0.2) if rng.random() < 0.85 else rng.normal(0.0, 1.0)
+    wcs = frame_wcs(
+        ra=ra,
+        dec=dec,
+        shape=camera.shape,
+        scale_arcsec=camera.scale_arcsec,
+        rotation_deg=float(turn),
+        offset_px=(float(rng.uniform(-15, 15)), float(rng.uniform(-15, 15))),
+        distortion=distortion,
+    )
+    stated = misstate(
+        wcs,
+        rng,
+        error_px=float(abs(rng.normal(0.0, 2.0))),
+        rotation_err_deg=0.01,
+    )
+    sky_mag = rng.uniform(20.5, 21.3)
+    haze = -2.5 * np.log10(rng.uniform(0.7, 1.0))
+    sky = 10.0 ** (0.4 * (ZERO_POINT - sky_mag)) * camera.scale_arcsec**2
+    return Exposure(
+        camera=camera,
+        mjd=mjd,
+        exposure_s=EXPOSURE_S,
+        filter=filter_word,
+        field=field,
+        wcs=wcs,
+        stated_wcs=stated,
+        psf=random_psf(rng, fwhm_px=fwhm_px, shape=camera.shape),
+        zero_point=float(ZERO_POINT - haze),
+        sky_counts=float(sky),
+        sky_terms=tuple(rng.normal(0.0, [0.03, 0.03, 0.01, 0.01, 0.01]).tolist()),
+    )
+
+
+def _random_outbursts(
+    rng: np.random.Generator, ra: float, dec: float, mjd: float
+) -> tuple[Outburst, ...]:
+    far = rng.random() < 0.5
+    count = 2 if rng.random() < 0.15 else 1
+    return tuple(
+        random_outburst(rng, name=name, ra=ra, dec=dec, mjd=mjd, far=far)
+        for name in ("outburst A", "outburst B")[:count]
+    )
+
+
+def _random_interval(
+    rng: np.random.Generator,
+    outbursts: tuple[Outburst, ...],
+    ra: float,
+    dec: float,
+    mjd: float,
+) -> float:
+    """Draw days between the epochs so that the echoes move 2.2-11 arcsec."""
+    speeds = [flat_speed(o.source, ra, dec, mjd) for o in outbursts]
+    shift = 2.2 * 5.0 ** rng.random()
+    return float(np.clip(shift / np.mean(speeds), 20 / 365.25, 4.0) * 365.25)
+
+
+def _random_sky(
+    rng: np.random.Generator,
+    ra: float,
+    dec: float,
+    size: int,
+    n_stars: int | None,
+    kind: Kind,
+    echoes: tuple,
+) -> Scene:
+    scale = Camera(shape=(size, size)).scale_arcsec
+    half = 0.5 * size * scale + MARGIN_ARCSEC
+    arcmin2 = (size * scale / 60.0) ** 2
+    wanted = STARS_PER_ARCMIN2 * arcmin2 if n_stars is None else n_stars
+    count = round(wanted * (2.0 * half / (size * scale)) ** 2)
+    many = kind == "nuisances"
+    return Scene(
+        stars=random_stars(
+            rng,
+            ra=ra,
+            dec=dec,
+            half_size_arcsec=half,
+            count=count,
+            n_epochs=2,
+            variable_share=0.04 if many else 0.015,
+            very_bright=int(rng.integers(1, 4)) if many else int(rng.random() < 0.3),
+        ),
+        galaxies=random_galaxies(
+            rng,
+            ra=ra,
+            dec=dec,
+            half_size_arcsec=half,
+            count=round(arcmin2 * (2.0 if many else 0.8)),
+        ),
+        echoes=echoes,
+    )
+
+
+def _random_clutter(rng: np.random.Generator, size: int, kind: Kind) -> Clutter:
+    area = (size / 1024) ** 2
+    if kind == "nuisances":
+        return Clutter(
+            trails=int(rng.integers(0, 3)),
+            cosmic_rays=int(rng.poisson(140 * area)),
+            movers=int(rng.poisson(4 * area)),
+        )
+    return Clutter(
+        trails=int(rng.random() < 0.25),
+        cosmic_rays=int(rng.poisson(70 * area)),
+        movers=int(rng.poisson(1 * area)),
+    )
