@@ -1,0 +1,266 @@
+"""Which frame is subtracted from which, and why the others are not."""
+
+from __future__ import annotations
+
+from collections import defaultdict
+from collections.abc import Callable, Iterable, Mapping, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+
+from latelight.frames.headers import FrameHeader
+from latelight.night.overlap import overlap_fraction
+from latelight.night.settings import PairSettings
+from latelight.products.rows import PairRow
+
+__all__ = ["Pair", "Plan", "failed_frame", "failed_pair", "plan_pairs", "set_aside"]
+
+# Two readings of one clock; no exposure is shorter than this apart from the next.
+_SAME_MOMENT_DAYS = 1e-6
+
+
+@dataclass(frozen=True, slots=True)
+class Pair:
+    """Two frames to be compared.
+
+    Attributes
+    ----------
+    name : str
+        Unique in a night.
+    template, science : FrameHeader
+        The frame that is subtracted, and the one it is subtracted from.
+    """
+
+    name: str
+    template: FrameHeader
+    science: FrameHeader
+
+
+@dataclass(frozen=True, slots=True)
+class Plan:
+    """What will be done with a set of frames.
+
+    Attributes
+    ----------
+    pairs : tuple of Pair
+        Ordered by field, filter, chip and epoch.
+    failed : tuple of PairRow
+        Frames that cannot take part, with the reason.
+    remarks : tuple of str
+        Frames left out as is right, in words for the log.
+    """
+
+    pairs: tuple[Pair, ...]
+    failed: tuple[PairRow, ...]
+    remarks: tuple[str, ...]
+
+
+def set_aside(
+    headers: Iterable[FrameHeader], digests: Mapping[Path, str]
+) -> tuple[tuple[FrameHeader, ...], tuple[PairRow, ...]]:
+    """Part frames from copies of them: the first by path stays.
+
+    Parameters
+    ----------
+    headers : iterable of FrameHeader
+        Frames.
+    digests : mapping
+        Digest of every file.
+
+    Returns
+    -------
+    kept : tuple of FrameHeader
+        Ordered by path and chip.
+    failed : tuple of PairRow
+        The copies: files of the same bytes, or frames of the same chip, filter,
+        field and moment.
+    """
+    kept: list[FrameHeader] = []
+    failed: list[PairRow] = []
+    of_words: dict[tuple[str, str, str], list[FrameHeader]] = defaultdict(list)
+    for header in sorted(headers, key=lambda h: (str(h.path), h.chip)):
+        alike = of_words[header.chip, header.filter, header.field]
+        twin = next((k for k in alike if _is_copy(header, k, digests)), None)
+        if twin is None:
+            kept.append(header)
+            alike.append(header)
+            continue
+        how = (
+            "the files are byte for byte the same"
+            if digests[header.path] == digests[twin.path]
+            else f"same chip, filter and field at MJD {header.mjd:.6f}"
+        )
+        reason = f"duplicate of {twin.path.name} ({how}): left out; remove one of them"
+        failed.append(failed_frame(header, reason))
+    return tuple(kept), tuple(failed)
+
+
+def _is_copy(a: FrameHeader, b: FrameHeader, digests: Mapping[Path, str]) -> bool:
+    """Whether two frames of the same chip, filter and field are one."""
+    if a.path == b.path:
+        return False
+    return _days(a, b) < _SAME_MOMENT_DAYS or digests[a.path] == digests[b.path]
+
+
+def plan_pairs(
+    headers: Sequence[FrameHeader],
+    *,
+    settings: PairSettings,
+    rank: Callable[[FrameHeader], float],
+    templates: Sequence[FrameHeader] = (),
+) -> Plan:
+    """Choose a template for every frame.
+
+    Parameters
+    ----------
+    headers : sequence of FrameHeader
+        Frames without copies.
+    settings : PairSettings
+        Least time between epochs, least overlap.
+    rank : callable
+        The frame of lowest rank among those of one place and filter is their
+        template; ties go to the earlier frame.
+    templates : sequence of FrameHeader
+        When given, templates are taken from these alone.
+
+    Notes
+    -----
+    Frames are of one place when they share field word and chip; where a frame
+    has no field word, when they overlap on the sky; where a WCS is missing too,
+    when they share the chip.
+    """
+    pairs: list[Pair] = []
+    failed: list[PairRow] = []
+    remarks: list[str] = []
+    given = {t.path for t in templates}
+    known = _Neighbours(templates or headers)
+    for science in sorted(headers, key=_order):
+        if science.path in given:
+            continue
+        rivals = known.of(science, min_overlap=settings.min_overlap)
+        apart = [h for h in rivals if _days(h, science) >= settings.min_days]
+        if not apart:
+            why = _why_alone(science, rivals, settings, given=bool(templates))
+            failed.append(failed_frame(science, why))
+            continue
+        template = min(rivals, key=lambda h: (rank(h), h.mjd, h.name))
+        if template is science:
+            continue
+        if _days(template, science) < settings.min_days:
+            remarks.append(
+                f"{science.name}: of the same epoch as its template {template.name} "
+                f"(pairs.min_days = {settings.min_days:g}), not compared with it"
+            )
+            continue
+        pairs.append(Pair(f"{science.name}-{template.name}", template, science))
+    return Plan(_with_unique_names(pairs), tuple(failed), tuple(remarks))
+
+
+def _order(header: FrameHeader) -> tuple[str, str, str, float, str]:
+    return (header.field, header.filter, header.chip, header.mjd, str(header.path))
+
+
+def _days(a: FrameHeader, b: FrameHeader) -> float:
+    return abs(a.mjd - b.mjd)
+
+
+class _Neighbours:
+    """Frames by their words, so that a night of many chips is searched quickly."""
+
+    def __init__(self, headers: Sequence[FrameHeader]) -> None:
+        self._with_field: dict[tuple[str, str, str], list[FrameHeader]] = defaultdict(
+            list
+        )
+        self._of_filter: dict[str, list[FrameHeader]] = defaultdict(list)
+        self._without_field: dict[str, list[FrameHeader]] = defaultdict(list)
+        for header in headers:
+            self._of_filter[header.filter].append(header)
+            if header.field:
+                self._with_field[_words(header)].append(header)
+            else:
+                self._without_field[header.filter].append(header)
+
+    def of(self, frame: FrameHeader, *, min_overlap: float) -> list[FrameHeader]:
+        """Return the frames that show the same place through the same filter."""
+        if not frame.field:
+            near = self._of_filter[frame.filter]
+            return [h for h in near if _meet(h, frame, min_overlap)]
+        near = self._without_field[frame.filter]
+        return self._with_field[_words(frame)] + [
+            h for h in near if _meet(h, frame, min_overlap)
+        ]
+
+
+def _words(header: FrameHeader) -> tuple[str, str, str]:
+    return (header.filter, header.field, header.chip)
+
+
+def _meet(a: FrameHeader, b: FrameHeader, min_overlap: float) -> bool:
+    """Whether two frames, not both with a field word, are of one place."""
+    if a is b:
+        return True
+    if a.footprint is not None and b.footprint is not None:
+        return overlap_fraction(a.footprint, b.footprint) >= min_overlap
+    return (a.field, a.chip) == (b.field, b.chip)
+
+
+def _why_alone(
+    science: FrameHeader,
+    rivals: Sequence[FrameHeader],
+    settings: PairSettings,
+    *,
+    given: bool,
+) -> str:
+    """Say why a frame has nothing to be compared with."""
+    place = f"field {science.field!r}" if science.field else "its place on the sky"
+    what = f"{place}, filter {science.filter!r}"
+    if science.chip and science.field:
+        what += f", chip {science.chip!r}"
+    if given and not rivals:
+        return f"pairs.template does not show {what}; choose another template"
+    if len(rivals) > 1 or given:
+        return (
+            f"one epoch only of {what}: its {len(rivals)} frames lie within "
+            f"pairs.min_days = {settings.min_days:g} d; add frames of another epoch"
+        )
+    return f"one epoch only: no other frame of {what}; add frames of another epoch"
+
+
+def _with_unique_names(pairs: Sequence[Pair]) -> tuple[Pair, ...]:
+    """Put numbers on the names that frames of the same name in two folders share."""
+    seen: dict[str, int] = {}
+    unique: list[Pair] = []
+    for pair in pairs:
+        count = seen[pair.name] = seen.get(pair.name, 0) + 1
+        name = pair.name if count == 1 else f"{pair.name}-{count}"
+        unique.append(Pair(name, pair.template, pair.science))
+    return tuple(unique)
+
+
+def failed_frame(header: FrameHeader, reason: str) -> PairRow:
+    """Return the row of a frame that takes part in no pair."""
+    return PairRow(
+        pair=header.name,
+        field=header.field,
+        filter=header.filter,
+        template="",
+        science=header.name,
+        mjd_template=None,
+        mjd_science=header.mjd,
+        status="failed",
+        reason=reason,
+    )
+
+
+def failed_pair(pair: Pair, reason: str) -> PairRow:
+    """Return the row of a pair that could not be finished."""
+    return PairRow(
+        pair=pair.name,
+        field=pair.science.field,
+        filter=pair.science.filter,
+        template=pair.template.name,
+        science=pair.science.name,
+        mjd_template=pair.template.mjd,
+        mjd_science=pair.science.mjd,
+        status="failed",
+        reason=reason,
+    )
