@@ -1,0 +1,255 @@
+"""Robust weighted polynomials over a frame."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from latelight.records import BoolArray, FloatArray
+from latelight.statistics import robust_sigma
+
+__all__ = ["Polynomial", "fit_displacement", "fit_surface", "terms"]
+
+_CLIP_ROUNDS = 10
+# Stars for each term of a polynomial before it is thought of at all.
+_STARS_PER_TERM = 3
+# Halvings of the logarithm of a range of 10^7: a part in a thousand.
+_MAX_SCATTER_PX, _BISECTIONS = 10.0, 14
+
+
+@dataclass(frozen=True, slots=True)
+class Polynomial:
+    """A displacement over a frame, fitted to stars.
+
+    Attributes
+    ----------
+    coefficients : float64 array, shape (n_terms, 2)
+        Of the terms of :func:`terms`, for x and y, pixels.
+    covariance : float64 array, shape (n_terms, n_terms)
+        Of the coefficients of one coordinate, pixels squared.
+    degree : int
+        Total degree.
+    shape : (int, int)
+        Shape (ny, nx) of the frame.
+    kept : bool array, shape (n_stars,)
+        Stars that were not clipped.
+    rms : float
+        Residual of the kept stars, per coordinate, pixels.
+    """
+
+    coefficients: FloatArray
+    covariance: FloatArray
+    degree: int
+    shape: tuple[int, int]
+    kept: BoolArray
+    rms: float
+
+    def at(self, places: FloatArray) -> FloatArray:
+        """Return the displacement at places (x, y), shape (..., 2), pixels."""
+        return terms(places, self.shape, self.degree) @ self.coefficients
+
+    def error_at(self, places: FloatArray) -> FloatArray:
+        """Return its 1-sigma error in each coordinate, shape (...,), pixels."""
+        design = terms(places, self.shape, self.degree)
+        return np.sqrt(np.sum((design @ self.covariance) * design, axis=-1))
+
+
+def terms(places: FloatArray, shape: tuple[int, int], degree: int) -> FloatArray:
+    """Return the terms ``u^i v^j``, ``i + j <= degree``, shape (..., n_terms).
+
+    Places (x, y) have shape (..., 2); ``u`` and ``v`` run from -1 to 1 over the
+    frame.
+    """
+    u = 2.0 * places[..., 0] / max(shape[1] - 1, 1) - 1.0
+    v = 2.0 * places[..., 1] / max(shape[0] - 1, 1) - 1.0
+    powers = [(n - j, j) for n in range(degree + 1) for j in range(n + 1)]
+    return np.stack([u**i * v**j for i, j in powers], axis=-1)
+
+
+def fit_displacement(
+    places: FloatArray,
+    displacement: FloatArray,
+    error: FloatArray,
+    *,
+    shape: tuple[int, int],
+    degrees: tuple[int, int],
+    clip_sigma: float,
+    error_floor: float,
+) -> Polynomial:
+    """Fit the displacement of stars by a polynomial of position.
+
+    Parameters
+    ----------
+    places : float64 array, shape (n, 2)
+        Where the stars are (x, y), pixels.
+    displacement : float64 array, shape (n, 2)
+        In x and y, pixels.
+    error : float64 array, shape (n,)
+        1 sigma of each coordinate, pixels.
+    shape : (int, int)
+        Shape (ny, nx) of the frame.
+    degrees : (int, int)
+        Lowest and highest degree.
+    clip_sigma : float
+        Stars farther off are left out.
+    error_floor : float
+        Least scatter added to every error, pixels.
+
+    Returns
+    -------
+    Polynomial
+        Of the degree with the lowest information criterion.
+
+    Notes
+    -----
+    Weights are ``1 / (error^2 + s^2)``: the scatter s that the errors do not
+    know of (blends, the shape of the PSF) is found from the stars themselves by
+    maximum likelihood, so that the brightest do not carry the map alone.  The
+    degree is that of the lowest AICc (Hurvich & Tsai 1989, Biometrika 76, 297,
+    doi:10.1093/biomet/76.2.297) on one set of stars and weights.
+    """
+    low, high = degrees
+    while high > low and error.size < _STARS_PER_TERM * _n_terms(high):
+        high -= 1
+    data = _Stars(places, displacement, error, shape)
+    full = _clipped_fit(data, high, clip_sigma, error_floor)
+    if high == low:
+        return full.polynomial
+    scores = [
+        _aicc(data, full.polynomial.kept, full.variance, degree)
+        for degree in range(low, high + 1)
+    ]
+    best = low + int(np.argmin(scores))
+    if best == high:
+        return full.polynomial
+    return _clipped_fit(data, best, clip_sigma, error_floor).polynomial
+
+
+def fit_surface(
+    places: FloatArray, values: FloatArray, shape: tuple[int, int]
+) -> FloatArray:
+    """Return a smooth surface through scattered values, at their own places.
+
+    Outliers are clipped while the degree rises from 0 to at most 2.
+    """
+    surface = np.full(values.size, np.median(values))
+    for degree in (1, 1, 2, 2):
+        residual = values - surface
+        near = np.abs(residual) <= 3.0 * robust_sigma(residual, center=0.0)
+        if near.sum() < 5 * _n_terms(degree):
+            break
+        design = terms(places, shape, degree)
+        solution = np.linalg.lstsq(design[near], values[near], rcond=None)[0]
+        surface = design @ solution
+    return surface
+
+
+@dataclass(frozen=True, slots=True)
+class _Stars:
+    places: FloatArray
+    displacement: FloatArray
+    error: FloatArray
+    shape: tuple[int, int]
+
+    def design(self, degree: int) -> FloatArray:
+        return terms(self.places, self.shape, degree)
+
+
+@dataclass(frozen=True, slots=True)
+class _Fit:
+    polynomial: Polynomial
+    variance: FloatArray
+
+
+def _n_terms(degree: int) -> int:
+    return (degree + 1) * (degree + 2) // 2
+
+
+def _clipped_fit(data: _Stars, degree: int, clip: float, floor: float) -> _Fit:
+    design = data.design(degree)
+    n_terms = design.shape[1]
+    kept = np.ones(data.error.size, dtype=bool)
+    variance = data.error**2 + floor**2
+    for turn in range(_CLIP_ROUNDS):
+        solution, inverse = _solve(design, data.displacement, variance, kept)
+        residual = data.displacement - design @ solution
+        # The median first: wild stars would blow up a likelihood.
+        scatter_of = _median_scatter if turn < 2 else _likely_scatter
+        freedom = max(kept.sum() - n_terms, 1) / kept.sum()
+        scatter = scatter_of(residual[kept], data.error[kept], freedom)
+        variance = data.error**2 + max(scatter, floor) ** 2
+        pull = np.abs(residual).max(axis=1) / np.sqrt(variance)
+        now = pull <= clip
+        if now.sum() <= n_terms + 1:
+            break
+        if turn >= 3 and np.array_equal(now, kept):
+            break
+        kept = now
+    solution, inverse = _solve(design, data.displacement, variance, kept)
+    residual = (data.displacement - design @ solution)[kept]
+    freedom = 2 * max(int(kept.sum()) - n_terms, 1)
+    chi2 = float(np.sum(residual**2 / variance[kept, None])) / freedom
+    polynomial = Polynomial(
+        coefficients=solution,
+        covariance=inverse * max(chi2, 1.0),
+        degree=degree,
+        shape=data.shape,
+        kept=kept,
+        rms=float(np.sqrt(np.mean(residual**2))),
+    )
+    return _Fit(polynomial, variance)
+
+
+def _solve(
+    design: FloatArray, values: FloatArray, variance: FloatArray, kept: BoolArray
+) -> tuple[FloatArray, FloatArray]:
+    """Weighted least squares; the solution and its covariance."""
+    weighted = design[kept] / np.sqrt(variance[kept])[:, None]
+    right = values[kept] / np.sqrt(variance[kept])[:, None]
+    # The pseudo-inverse: stars in one line leave a term undetermined.
+    inverse = np.linalg.pinv(weighted.T @ weighted, hermitian=True).astype(float)
+    return inverse @ (weighted.T @ right), inverse
+
+
+def _median_scatter(residual: FloatArray, error: FloatArray, freedom: float) -> float:
+    """Scatter beyond the errors that makes the median deviation that of sigma."""
+
+    def excess(scatter: float) -> float:
+        pulls = residual / np.sqrt(error**2 + scatter**2)[:, None]
+        return robust_sigma(pulls, center=0.0) ** 2 / freedom - 1.0
+
+    return _bisect(excess)
+
+
+def _likely_scatter(residual: FloatArray, error: FloatArray, freedom: float) -> float:
+    """Scatter beyond the errors of maximum likelihood, normal residuals."""
+    square = np.mean(residual**2, axis=1) / freedom
+
+    def excess(scatter: float) -> float:
+        variance = error**2 + scatter**2
+        return float(np.sum((square - variance) / variance**2))
+
+    return _bisect(excess)
+
+
+def _bisect(excess: Callable[[float], float]) -> float:
+    """Root of a falling function between 1e-6 and 10 px; 0 when it starts below."""
+    low, high = 1e-6, _MAX_SCATTER_PX
+    if excess(low) <= 0.0:
+        return 0.0
+    for _ in range(_BISECTIONS):
+        middle = np.sqrt(low * high)
+        low, high = (middle, high) if excess(middle) > 0.0 else (low, middle)
+    return float(high)
+
+
+def _aicc(data: _Stars, kept: BoolArray, variance: FloatArray, degree: int) -> float:
+    design = data.design(degree)
+    solution, _ = _solve(design, data.displacement, variance, kept)
+    residual = (data.displacement - design @ solution)[kept]
+    chi2 = float(np.sum(residual**2 / variance[kept, None]))
+    free = design.shape[1] * 2
+    values = 2 * int(kept.sum())
+    return chi2 + 2.0 * free * values / max(values - free - 1, 1)
