@@ -1,0 +1,378 @@
+"""Compiled loops of the search for arcs."""
+
+from __future__ import annotations
+
+import numpy as np
+from numba import njit
+
+__all__ = [
+    "block_matches",
+    "filter_rows",
+    "lobe_sums",
+    "polar_sums",
+    "search_bends",
+    "search_lobes",
+    "update_rows",
+    "weigh_rows",
+]
+
+
+@njit(nogil=True, cache=True)
+def weigh_rows(
+    signal: np.ndarray,
+    weight: np.ndarray,
+    pixels: np.ndarray,
+    variance: np.ndarray,
+    mask: np.ndarray,
+    size: int,
+    first: int,
+    last: int,
+) -> None:
+    """Sum D/V and 1/V of the unmasked pixels in blocks of ``size`` x ``size``."""
+    for row in range(first, last):
+        for col in range(signal.shape[1]):
+            total = 0.0
+            total_weight = 0.0
+            for y in range(row * size, min((row + 1) * size, pixels.shape[0])):
+                for x in range(col * size, min((col + 1) * size, pixels.shape[1])):
+                    if mask[y, x] == 0:
+                        inverse = 1.0 / variance[y, x]
+                        total += pixels[y, x] * inverse
+                        total_weight += inverse
+            signal[row, col] = total
+            weight[row, col] = total_weight
+
+
+@njit(nogil=True, cache=True)
+def filter_rows(
+    out: np.ndarray,
+    spectrum: np.ndarray,
+    ky: np.ndarray,
+    kx: np.ndarray,
+    xx: float,
+    xy: float,
+    yy: float,
+    first: int,
+    last: int,
+) -> None:
+    """Multiply a spectrum by the Gaussian exp(-(xx kx^2 + 2 xy kx ky + yy ky^2))."""
+    for row in range(first, last):
+        v = ky[row]
+        for col in range(spectrum.shape[1]):
+            u = kx[col]
+            exponent = xx * u * u + 2.0 * xy * u * v + yy * v * v
+            if exponent < 14.0:
+                out[row, col] = spectrum[row, col] * np.float32(np.exp(-exponent))
+            else:
+                out[row, col] = 0.0
+
+
+@njit(nogil=True, cache=True)
+def update_rows(
+    best: np.ndarray,
+    code: np.ndarray,
+    response: np.ndarray,
+    power: np.ndarray,
+    margin: int,
+    steps: np.ndarray,
+    overlap: np.ndarray,
+    inverse: np.ndarray,
+    floor: float,
+    base: int,
+    first: int,
+    last: int,
+) -> None:
+    """Keep the strongest of one ridge and its pairs at every pixel.
+
+    ``steps[j] = (dy, dx)`` leads from the middle of pair j to its positive lobe;
+    ``overlap[j]`` is the correlation of the two lobes, and the last step also
+    sets the flanks of the single ridge.  ``inverse`` are the calibrations 1 /
+    sigma^2 of the single ridge (0) and the pairs (1...).
+    """
+    n_steps = steps.shape[0]
+    far = n_steps - 1
+    flank = np.float32(overlap[n_steps])
+    for row in range(first, last):
+        y = row + margin
+        for j in range(n_steps):
+            dy = steps[j, 0]
+            dx = steps[j, 1]
+            rho = np.float32(2.0 * overlap[j])
+            scale = np.float32(inverse[1 + j])
+            least = np.float32(floor)
+            for col in range(best.shape[1]):
+                x = col + margin
+                here = power[y, x]
+                ahead = power[y + dy, x + dx]
+                behind = power[y - dy, x - dx]
+                rise = response[y + dy, x + dx] - response[y - dy, x - dx]
+                noise = max(ahead + behind - rho * here, least)
+                value = rise * rise / noise * scale
+                if here > least and value > best[row, col]:
+                    best[row, col] = value
+                    code[row, col] = base + 1 + j
+        dy = steps[far, 0]
+        dx = steps[far, 1]
+        half = np.float32(0.5)
+        rho = np.float32(overlap[far])
+        scale = np.float32(inverse[0])
+        least = np.float32(floor)
+        for col in range(best.shape[1]):
+            x = col + margin
+            here = power[y, x]
+            sides = power[y + dy, x + dx] + power[y - dy, x - dx]
+            rise = response[y, x] - half * (
+                response[y + dy, x + dx] + response[y - dy, x - dx]
+            )
+            noise = here * (1 + half * rho - flank)
+            noise += half * sides * (half - flank)
+            value = rise * rise / max(noise, least) * scale
+            if here > least and value > best[row, col]:
+                best[row, col] = value
+                code[row, col] = base
+
+
+@njit(nogil=True, cache=True)
+def polar_sums(
+    pixels: np.ndarray,
+    variance: np.ndarray,
+    mask: np.ndarray,
+    x0: float,
+    y0: float,
+    cosine: float,
+    sine: float,
+    curvature: float,
+    block: float,
+    signal: np.ndarray,
+    weight: np.ndarray,
+    total: np.ndarray,
+) -> None:
+    """Sum D/V, 1/V and the pixels of each (block along, pixel across) of an arc.
+
+    Every pixel falls into exactly one bin, so the sums keep the exact noise.
+    Coordinates are those of the circle of the given curvature through (x0, y0)
+    with normal (cosine, sine): u across, s along, both zero there.
+    """
+    n_blocks, n_across = signal.shape
+    half_length = 0.5 * n_blocks * block
+    half_height = n_across // 2
+    ny, nx = pixels.shape
+    # The chord of the arc and its sagitta bound the box.
+    sagitta = 0.5 * abs(curvature) * half_length * half_length
+    reach_u = half_height + sagitta
+    reach_x = abs(cosine) * reach_u + abs(sine) * half_length
+    reach_y = abs(sine) * reach_u + abs(cosine) * half_length
+    x_first = max(int(np.floor(x0 - reach_x)), 0)
+    x_last = min(int(np.ceil(x0 + reach_x)) + 1, nx)
+    y_first = max(int(np.floor(y0 - reach_y)), 0)
+    y_last = min(int(np.ceil(y0 + reach_y)) + 1, ny)
+    for y in range(y_first, y_last):
+        dy = y - y0
+        for x in range(x_first, x_last):
+            dx = x - x0
+            u = dx * cosine + dy * sine
+            s = dy * cosine - dx * sine
+            if abs(u) > reach_u + 1.0 or abs(s) > half_length:
+                continue
+            ahead = 1.0 - curvature * u
+            if ahead <= 0.1:
+                continue
+            root = np.sqrt(ahead * ahead + curvature * curvature * s * s)
+            across = (2.0 * u - curvature * (u * u + s * s)) / (1.0 + root)
+            i_across = int(np.floor(across + half_height + 0.5))
+            if i_across < 0 or i_across >= n_across:
+                continue
+            along = s
+            if abs(curvature) > 1e-9:
+                along = np.arctan2(curvature * s, ahead) / curvature
+            i_block = int(np.floor((along + half_length) / block))
+            if i_block < 0 or i_block >= n_blocks:
+                continue
+            total[i_block, i_across] += 1.0
+            if mask[y, x] == 0:
+                inverse = 1.0 / variance[y, x]
+                signal[i_block, i_across] += pixels[y, x] * inverse
+                weight[i_block, i_across] += inverse
+
+
+@njit(nogil=True, cache=True)
+def lobe_sums(
+    signal: np.ndarray,
+    weight: np.ndarray,
+    shapes: np.ndarray,
+    half_widths: np.ndarray,
+    matched: np.ndarray,
+    power: np.ndarray,
+    mass: np.ndarray,
+) -> None:
+    """Correlate a profile with every lobe shape centred on every pixel.
+
+    ``matched = sum A E``, ``power = sum W E^2`` and ``mass = sum W E``.
+    """
+    n_across = signal.size
+    middle = shapes.shape[1] // 2
+    for k in range(shapes.shape[0]):
+        half = half_widths[k]
+        for centre in range(n_across):
+            a = 0.0
+            b = 0.0
+            c = 0.0
+            for i in range(max(-half, -centre), min(half + 1, n_across - centre)):
+                e = shapes[k, middle + i]
+                we = weight[centre + i] * e
+                a += signal[centre + i] * e
+                b += we * e
+                c += we
+            matched[k, centre] = a
+            power[k, centre] = b
+            mass[k, centre] = c
+
+
+@njit(nogil=True, cache=True)
+def search_lobes(
+    matched: np.ndarray,
+    power: np.ndarray,
+    mass: np.ndarray,
+    overlap: np.ndarray,
+    signal_sum: float,
+    weight_sum: float,
+    least: np.ndarray,
+    reach: int,
+    result: np.ndarray,
+) -> None:
+    """Find the pair of opposite lobes, or the single lobe, that fits best.
+
+    The constant background is projected out.  ``overlap[k, d]`` is the
+    correlation of shape k with itself at distance d, ``least[k]`` the least
+    distance tried.  One lobe lies within ``reach`` pixels of the middle.  Rows of
+    ``result``: gain in chi-square, shape, place and amplitude of the positive
+    lobe, then of the negative one; row 0 the best pair, row 1 the best single.
+    """
+    n_shapes, n_across = matched.shape
+    middle = n_across // 2
+    n_shifts = overlap.shape[1]
+    result[:, 0] = 0.0
+    for k in range(n_shapes):
+        for first in range(middle - reach, middle + reach + 1):
+            b1 = power[k, first] - mass[k, first] ** 2 / weight_sum
+            if b1 <= 0.05 * power[k, middle] or b1 <= 0.0:
+                continue
+            a1 = matched[k, first] - mass[k, first] * signal_sum / weight_sum
+            gain = a1 * a1 / b1
+            if gain > result[1, 0]:
+                result[1, 0] = gain
+                result[1, 1] = k
+                result[1, 2] = first
+                result[1, 3] = a1 / b1
+                result[1, 4] = first
+                result[1, 5] = 0.0
+            for shift in range(-n_shifts + 1, n_shifts):
+                if abs(shift) < least[k]:
+                    continue
+                second = first + shift
+                if second < 0 or second >= n_across:
+                    continue
+                b2 = power[k, second] - mass[k, second] ** 2 / weight_sum
+                if b2 <= 0.1 * b1:
+                    continue
+                a2 = matched[k, second] - mass[k, second] * signal_sum / weight_sum
+                cross = overlap[k, abs(shift)] * np.sqrt(
+                    power[k, first] * power[k, second]
+                )
+                cross -= mass[k, first] * mass[k, second] / weight_sum
+                determinant = b1 * b2 - cross * cross
+                if determinant <= 1e-3 * b1 * b2:
+                    continue
+                p1 = (b2 * a1 - cross * a2) / determinant
+                p2 = (b1 * a2 - cross * a1) / determinant
+                if p1 * p2 >= 0.0:
+                    continue
+                gain = p1 * a1 + p2 * a2
+                if gain > result[0, 0]:
+                    result[0, 0] = gain
+                    result[0, 1] = k
+                    if p1 > 0.0:
+                        result[0, 2] = first
+                        result[0, 3] = p1
+                        result[0, 4] = second
+                        result[0, 5] = p2
+                    else:
+                        result[0, 2] = second
+                        result[0, 3] = p2
+                        result[0, 4] = first
+                        result[0, 5] = p1
+
+
+@njit(nogil=True, cache=True)
+def block_matches(
+    signal: np.ndarray,
+    weight: np.ndarray,
+    template: np.ndarray,
+    first: int,
+    last: int,
+    matched: np.ndarray,
+    power: np.ndarray,
+) -> None:
+    """Match a profile to every block of an arc, shifted across by every pixel.
+
+    ``template[first:last]`` is where the profile differs from zero; column
+    ``shift + n_shifts // 2`` of the results belongs to that shift.
+    """
+    n_blocks, n_across = signal.shape
+    half = matched.shape[1] // 2
+    for i in range(n_blocks):
+        for shift in range(-half, half + 1):
+            a = 0.0
+            b = 0.0
+            for n in range(max(first, -shift), min(last, n_across - shift)):
+                e = template[n]
+                a += signal[i, n + shift] * e
+                b += weight[i, n + shift] * e * e
+            matched[i, half + shift] = a
+            power[i, half + shift] = b
+
+
+@njit(nogil=True, cache=True)
+def search_bends(
+    matched: np.ndarray,
+    power: np.ndarray,
+    along: np.ndarray,
+    slopes: np.ndarray,
+    bends: np.ndarray,
+    anchor_first: int,
+    anchor_last: int,
+    result: np.ndarray,
+) -> None:
+    """Find the slope, bend and stretch of blocks that match a profile best.
+
+    Block i is shifted by ``slope * along[i] + bend * along[i]^2 / 2``; the stretch
+    overlaps blocks ``anchor_first`` to ``anchor_last``.  ``result`` becomes gain
+    in chi-square, slope, bend, first and last block (inclusive).
+    """
+    n_blocks = along.size
+    half = matched.shape[1] // 2
+    sum_a = np.zeros(n_blocks + 1)
+    sum_b = np.zeros(n_blocks + 1)
+    result[0] = 0.0
+    for slope in slopes:
+        for bend in bends:
+            for i in range(n_blocks):
+                shift = slope * along[i] + 0.5 * bend * along[i] * along[i]
+                column = int(np.floor(shift + half + 0.5))
+                a = 0.0
+                b = 0.0
+                if 0 <= column <= 2 * half:
+                    a = matched[i, column]
+                    b = power[i, column]
+                sum_a[i + 1] = sum_a[i] + a
+                sum_b[i + 1] = sum_b[i] + b
+            for first in range(anchor_last + 1):
+                for last in range(max(anchor_first, first + 1), n_blocks):
+                    a = sum_a[last + 1] - sum_a[first]
+                    b = sum_b[last + 1] - sum_b[first]
+                    if a > 0.0 and b > 0.0 and a * a > result[0] * b:
+                        result[0] = a * a / b
+                        result[1] = slope
+                        result[2] = bend
+                        result[3] = first
+                        result[4] = last

@@ -1,0 +1,145 @@
+"""Find the arcs of one difference: search, fit, merge, judge."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from latelight.arcs.evidence import BrightStars, Evidence, gather
+from latelight.arcs.fit import Fit, Reach, fit_seed, refine_fit
+from latelight.arcs.lobes import Lobes
+from latelight.arcs.merging import distinct, explains
+from latelight.arcs.profiles import LobeShapes, coarse_shapes, lobe_width
+from latelight.arcs.pyramid import build_pyramid
+from latelight.arcs.search import Seed, search_level
+from latelight.arcs.settings import ArcSettings
+from latelight.arcs.verdicts import judge
+from latelight.records import Arc, Difference, FloatArray, StarList
+
+__all__ = ["find_arcs"]
+
+_FITS_A_PLACE = 2
+"""Seeds fitted on one ridge: a second start often finds the better optimum."""
+
+
+@dataclass(frozen=True, slots=True)
+class _Noise:
+    """Noise of ridges over the noise their variance states, by sigma across."""
+
+    sigma_px: FloatArray
+    ratio: FloatArray
+
+    def snr(self, lobes: Lobes) -> float:
+        """Return the calibrated significance of fitted lobes."""
+        across = np.hypot(lobes.sigma_px, 0.5 * lobes.tail_px)
+        return float(np.sqrt(lobes.gain) / self.at(float(across)))
+
+    def at(self, sigma_px: float) -> float:
+        """Return the ratio for one sigma."""
+        return float(np.interp(sigma_px, self.sigma_px, self.ratio))
+
+
+def find_arcs(
+    difference: Difference, *, stars: StarList, settings: ArcSettings
+) -> tuple[Arc, ...]:
+    """Find the ridges of a difference and say which are worth a look.
+
+    Parameters
+    ----------
+    difference : Difference
+        Science minus template.
+    stars : StarList
+        Stars of the science frame, on the difference's grid.
+    settings : ArcSettings
+        Thresholds.
+
+    Returns
+    -------
+    tuple of Arc
+        Every ridge above the threshold, most significant first; its verdict is
+        ``"arc"`` or the reason it was set aside.
+    """
+    seeds, noise = _search(difference, settings)
+    reach = Reach(
+        int(settings.largest_shift_px + settings.widest_px), 0.5 * settings.longest_px
+    )
+    shapes = coarse_shapes(
+        fwhm_px=difference.fwhm_px,
+        widest_px=settings.widest_px,
+        n_shifts=int(settings.largest_shift_px) + 1,
+    )
+    fits = _fit_all(difference, seeds, shapes, reach, noise, settings.threshold)
+    bright = BrightStars.of(stars, least_snr=settings.bright_star_snr)
+    arcs = []
+    for fit in fits:
+        refined = refine_fit(difference, fit, shapes, reach)
+        evidence = gather(
+            difference,
+            refined,
+            reach,
+            snr=noise.snr(refined.pair),
+            single_snr=noise.snr(refined.single),
+            noise_ratio=noise.at(refined.pair.sigma_px),
+            stars=bright,
+        )
+        arcs.append(_arc(evidence, judge(evidence)))
+    return tuple(sorted(arcs, key=lambda arc: (-arc.snr, arc.y, arc.x)))
+
+
+def _search(difference: Difference, settings: ArcSettings) -> tuple[list[Seed], _Noise]:
+    seeds: list[Seed] = []
+    calibration = []
+    for level in build_pyramid(difference, widest_px=settings.widest_px):
+        found, point = search_level(level, threshold=settings.seed_threshold)
+        seeds += found
+        calibration.append(point)
+    seeds.sort(key=lambda seed: (-seed.snr, seed.y, seed.x))
+    sigma, ratio = np.array(calibration).T
+    return seeds, _Noise(sigma, ratio)
+
+
+def _fit_all(
+    difference: Difference,
+    seeds: list[Seed],
+    shapes: LobeShapes,
+    reach: Reach,
+    noise: _Noise,
+    threshold: float,
+) -> list[Fit]:
+    """Fit the seeds no earlier fit explains; return the distinct ridges."""
+    fits: list[tuple[float, Fit]] = []
+    for seed in seeds:
+        if sum(explains(fit, seed) for _, fit in fits) >= _FITS_A_PLACE:
+            continue
+        fit = fit_seed(difference, seed, shapes, reach)
+        if fit is not None:
+            fits.append((noise.snr(fit.pair), fit))
+    fits.sort(key=lambda item: -item[0])
+    return distinct([fit for snr, fit in fits if snr >= threshold])
+
+
+def _arc(evidence: Evidence, verdict: str) -> Arc:
+    """Put a fitted ridge into the record, its normal between 0 and 180 degrees."""
+    fit = evidence.fit
+    circle, pair = fit.circle, fit.pair
+    if not 0.0 <= np.degrees(circle.angle) % 360.0 < 180.0:
+        circle, pair = circle.flipped(), pair.mirrored()
+    circle = circle.normalised()
+    width = lobe_width(pair.sigma_px, pair.tail_px)
+    beyond = width**2 - evidence.fwhm_px**2
+    return Arc(
+        trace=circle.trace(-fit.half_length, fit.half_length),
+        sign=1 if pair.sign > 0 else -1,
+        snr=evidence.snr,
+        x=circle.x,
+        y=circle.y,
+        normal_angle=float(np.degrees(circle.angle)),
+        normal_angle_err=float(np.degrees(fit.slope_err) * evidence.noise_ratio),
+        curvature=circle.curvature,
+        length_px=2.0 * fit.half_length,
+        width_px=float(np.sqrt(max(beyond, 0.0))),
+        surface_brightness_counts=max(pair.positive_height, -pair.negative_height),
+        shift_px=pair.positive - pair.negative if evidence.two_lobed else np.nan,
+        verdict=verdict,
+    )

@@ -1,0 +1,50 @@
+"""Settings of the search for arcs."""
+
+from __future__ import annotations
+
+from pydantic import Field
+
+from latelight.settings import StageSettings
+
+__all__ = ["ArcSettings"]
+
+
+class ArcSettings(StageSettings):
+    """Table ``[arcs]``: which ridges are looked for, and which count as arcs."""
+
+    threshold: float = Field(
+        6.5,
+        ge=4.0,
+        le=100.0,
+        description="Least significance of an arc, both lobes together [sigma].",
+    )
+    seed_threshold: float = Field(
+        4.5,
+        ge=3.0,
+        le=100.0,
+        description="Least response of the coarse filters worth a closer look [sigma].",
+    )
+    longest_px: float = Field(
+        250.0,
+        ge=40.0,
+        le=2000.0,
+        description="Length beyond which a straight ridge is a trail [pixels].",
+    )
+    widest_px: float = Field(
+        30.0,
+        ge=4.0,
+        le=200.0,
+        description="Greatest full width of one lobe at half maximum [pixels].",
+    )
+    largest_shift_px: float = Field(
+        40.0,
+        ge=4.0,
+        le=200.0,
+        description="Greatest distance between the two lobes of an echo [pixels].",
+    )
+    bright_star_snr: float = Field(
+        300.0,
+        gt=0.0,
+        description="Signal-to-noise ratio from which a star may cast spikes, ghosts "
+        "and haloes.",
+    )
