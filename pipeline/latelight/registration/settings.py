@@ -26,7 +26,7 @@ class RegistrationSettings(StageSettings):
         5, ge=1, description="Fewest connected pixels of a detection, px."
     )
     clean_snr: float = Field(
-        20.0, gt=0.0, description="Lowest S/N of a star fit for alignment and PSF."
+        10.0, gt=0.0, description="Lowest S/N of a star fit for alignment and PSF."
     )
     wcs_error_arcsec: float = Field(
         90.0,
