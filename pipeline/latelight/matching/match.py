@@ -1,0 +1,319 @@
+"""The matching stage: two registered frames in, one PSF and flux scale out."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import sep
+
+from latelight.masks import MaskBit
+from latelight.matching._kernels import fill_bad
+from latelight.matching.basis import KernelBasis, make_basis
+from latelight.matching.convolution import (
+    convolve,
+    convolve_mask,
+    convolve_variance,
+    gaussian_kernel,
+    kernel_sum,
+)
+from latelight.matching.fit import KernelFit, fit_kernel
+from latelight.matching.psf import gaussian_sigma, measure_psf
+from latelight.matching.settings import MatchingSettings
+from latelight.matching.sharpness import Roles, assign_roles
+from latelight.matching.stars import choose_stars, matched_clean, spread_over_cells
+from latelight.matching.system import build_systems, cut_stamps, disc_offsets
+from latelight.records import (
+    Alignment,
+    FloatArray,
+    IntArray,
+    MaskArray,
+    MatchedPair,
+    PixelArray,
+    Plane,
+    SpatialKernel,
+    StarList,
+)
+from latelight.threads import over_rows
+
+__all__ = ["match_pair"]
+
+# Disc of the fit, in FWHM of the broader PSF.
+_RADIUS_IN_FWHM = 4.0
+_SKY_BOX = 128
+# Pixels whose own value still says most about a bright star's light.
+_KEEP_VALUE = MaskBit.SATURATED | MaskBit.BLEED | MaskBit.SPIKE
+
+
+@dataclass(frozen=True, slots=True)
+class _Layer:
+    """A frame ready for convolution: sky removed, bad pixels filled."""
+
+    light: PixelArray
+    sky: PixelArray
+    variance: PixelArray
+    mask: MaskArray
+    noise_power: FloatArray | None
+
+
+def match_pair(
+    science: Plane,
+    template: Plane,
+    *,
+    science_stars: StarList,
+    template_stars: StarList,
+    alignment: Alignment,
+    settings: MatchingSettings,
+) -> MatchedPair:
+    """Bring a template and a science frame to one PSF and one flux scale.
+
+    Parameters
+    ----------
+    science : Plane
+        The science frame.
+    template : Plane
+        The template, resampled onto the science grid.
+    science_stars, template_stars : StarList
+        Stars of each frame, on its own grid.
+    alignment : Alignment
+        Which stars are the same.
+    settings : MatchingSettings
+        Table ``[matching]``.
+
+    Returns
+    -------
+    MatchedPair
+        Fluxes on the science frame's scale.
+
+    Raises
+    ------
+    ValueError
+        If the two planes differ in shape.
+    StageError
+        If there are too few common clean stars, before or after clipping.
+
+    Notes
+    -----
+    The sharper frame is convolved with a kernel of Gaussians times polynomials
+    that varies over the frame (Alard & Lupton 1998, ApJ 503, 325,
+    doi:10.1086/305984; Alard 2000, A&AS 144, 363, doi:10.1051/aas:2000214).
+    Where neither is sharper in every direction and at every place, the frame that
+    is not convolved is smoothed first, by the least that leaves nothing to sharpen.
+    """
+    if science.pixels.shape != template.pixels.shape:
+        msg = (
+            "template must be resampled onto the science grid: shapes "
+            f"{template.pixels.shape} and {science.pixels.shape} differ"
+        )
+        raise ValueError(msg)
+    rows, snr = matched_clean(science_stars, template_stars, alignment)
+    roles = _roles(science, template, science_stars, rows, settings)
+    layers = {True: _layer(template), False: _layer(science)}
+    sharp = layers[roles.convolve_template]
+    broad = _smoothed(layers[not roles.convolve_template], roles.smoothing_px)
+
+    ratio = _flux_ratio(science_stars, template_stars, alignment)
+    fwhm = _widths(science_stars, template_stars, roles)
+    fit, stars = _fit(
+        sharp,
+        broad,
+        rows,
+        snr,
+        science_stars,
+        fwhm=fwhm,
+        ratio=ratio if roles.convolve_template else 1.0 / ratio,
+        settings=settings,
+    )
+    matched_sharp = _convolved(sharp, fit.kernel)
+    total = kernel_sum(fit.kernel)
+    if roles.convolve_template:
+        matched_science, matched_template = broad, matched_sharp
+    else:
+        matched_science = _scaled(matched_sharp, 1.0 / total)
+        matched_template = _scaled(broad, 1.0 / total)
+    science_plane, template_plane = _plane(matched_science), _plane(matched_template)
+    middle = fit.kernel.planes[:, :, :].sum(axis=(1, 2))[0]
+    scale = float(middle if roles.convolve_template else 1.0 / middle)
+    return MatchedPair(
+        science=science_plane,
+        template=template_plane,
+        model=matched_template.light,
+        convolved="template" if roles.convolve_template else "science",
+        kernel=fit.kernel,
+        smoothing_px=roles.smoothing_px,
+        scale=scale,
+        scale_err=float(fit.sum_err / middle * scale),
+        fwhm_px=fwhm[1],
+        n_fit=int(fit.fitted.sum()),
+        n_held_out=int(fit.held_out.sum()),
+        held_out_chi2=_held_out_chi2(
+            science_plane, template_plane, stars[fit.held_out], radius=_radius(fwhm[1])
+        ),
+    )
+
+
+def _roles(
+    science: Plane,
+    template: Plane,
+    stars: StarList,
+    rows: IntArray,
+    settings: MatchingSettings,
+) -> Roles:
+    x, y = stars.x[rows], stars.y[rows]
+    spread = spread_over_cells(
+        np.arange(rows.size), x, y, shape=science.mask.shape, most=settings.psf_stars
+    )
+    x, y = x[spread], y[spread]
+    return assign_roles(
+        measure_psf(science, x=x, y=y, settings=settings),
+        measure_psf(template, x=x, y=y, settings=settings),
+        sharpening=settings.sharpening,
+    )
+
+
+def _flux_ratio(science: StarList, template: StarList, alignment: Alignment) -> float:
+    """Return a first guess of science counts per template count."""
+    s, t = alignment.science_index, alignment.template_index
+    good = science.clean[s] & template.clean[t] & (template.flux[t] > 0)
+    return float(np.median(science.flux[s][good] / template.flux[t][good]))
+
+
+def _widths(
+    science: StarList, template: StarList, roles: Roles
+) -> tuple[float, float]:
+    """Return the FWHM of the frame to be convolved and of the other, smoothed."""
+    pair = (template.fwhm_px, science.fwhm_px)
+    sharp, broad = pair if roles.convolve_template else pair[::-1]
+    smoothing = roles.smoothing_px * sharp / gaussian_sigma(sharp)
+    return sharp, float(np.hypot(broad, smoothing))
+
+
+def _radius(fwhm: float) -> int:
+    return max(5, int(np.ceil(_RADIUS_IN_FWHM * fwhm)))
+
+
+def _layer(plane: Plane) -> _Layer:
+    """Take the sky off and fill the pixels that must not be spread."""
+    bad = plane.mask != 0
+    height, width = plane.pixels.shape
+    sky = sep.Background(
+        plane.pixels, mask=bad, bw=min(_SKY_BOX, width), bh=min(_SKY_BOX, height)
+    ).back(dtype=np.float32)
+    light = plane.pixels - sky
+    lost = (plane.mask & ~np.uint16(_KEEP_VALUE)) != 0
+    filled = light.copy()
+
+    def fill(first: int, last: int) -> None:
+        fill_bad(light, lost, 2, filled, first, last)
+
+    over_rows(fill, height)
+    return _Layer(filled, sky, plane.variance, plane.mask, plane.noise_power)
+
+
+def _convolved(layer: _Layer, kernel: SpatialKernel) -> _Layer:
+    total = kernel_sum(kernel)
+    return _Layer(
+        light=convolve(layer.light, kernel),
+        sky=layer.sky * total,
+        variance=convolve_variance(
+            layer.variance, layer.mask, kernel, noise_power=layer.noise_power
+        ),
+        mask=convolve_mask(layer.mask, kernel),
+        noise_power=None,
+    )
+
+
+def _smoothed(layer: _Layer, sigma: float) -> _Layer:
+    if sigma == 0.0:
+        return layer
+    ny, nx = layer.light.shape
+    return _convolved(layer, gaussian_kernel(sigma, shape=(ny, nx)))
+
+
+def _scaled(layer: _Layer, factor: PixelArray) -> _Layer:
+    return _Layer(
+        layer.light * factor,
+        layer.sky * factor,
+        layer.variance * factor**2,
+        layer.mask,
+        layer.noise_power,
+    )
+
+
+def _plane(layer: _Layer) -> Plane:
+    return Plane(layer.light + layer.sky, layer.variance, layer.mask)
+
+
+def _fit(
+    sharp: _Layer,
+    broad: _Layer,
+    rows: IntArray,
+    snr: FloatArray,
+    stars: StarList,
+    *,
+    fwhm: tuple[float, float],
+    ratio: float,
+    settings: MatchingSettings,
+) -> tuple[KernelFit, IntArray]:
+    """Fit the kernel; also return the (row, column) of its stars, shape (n, 2)."""
+    sigma = gaussian_sigma(fwhm[0]), gaussian_sigma(fwhm[1])
+    basis: KernelBasis = make_basis(sharp_sigma=sigma[0], broad_sigma=sigma[1])
+    radius = _radius(fwhm[1])
+    mask = sharp.mask | broad.mask
+    chosen = choose_stars(
+        rows,
+        snr,
+        stars=stars,
+        mask=mask,
+        radius=radius,
+        margin=radius + basis.taps.shape[1] // 2 + 1,
+        settings=settings,
+    )
+    centre = np.stack(
+        [np.rint(stars.y[chosen]), np.rint(stars.x[chosen])], axis=1
+    ).astype(np.int64)
+    stamps = cut_stamps(
+        centre,
+        radius=radius,
+        target=broad.light,
+        target_variance=broad.variance,
+        sharp_variance=sharp.variance,
+        mask=mask,
+        smoothing=sigma[1],
+    )
+    systems = build_systems(
+        sharp.light,
+        stamps,
+        centre,
+        basis=basis,
+        radius=radius,
+        scale=ratio,
+        noise_power=sharp.noise_power,
+        kernel_sigma=float(np.sqrt(max(sigma[1] ** 2 - sigma[0] ** 2, 0.0))),
+    )
+    ny, nx = mask.shape
+    fit = fit_kernel(
+        systems,
+        x=stars.x[chosen],
+        y=stars.y[chosen],
+        shape=(ny, nx),
+        basis=basis,
+        settings=settings,
+    )
+    return fit, centre
+
+
+def _held_out_chi2(
+    science: Plane, template: Plane, centre: IntArray, *, radius: int
+) -> float:
+    """Return the median reduced chi-square of stars in the matched difference."""
+    if len(centre) == 0:
+        return float("nan")
+    offsets = disc_offsets(radius)
+    at = (centre[:, 0, None] + offsets[:, 0], centre[:, 1, None] + offsets[:, 1])
+    difference = (science.pixels[at] - template.pixels[at]).astype(float)
+    weight = 1.0 / (science.variance[at].astype(float) + template.variance[at])
+    weight[(science.mask[at] | template.mask[at]) != 0] = 0.0
+    mean = (weight * difference).sum(axis=1) / weight.sum(axis=1)
+    chi2 = (weight * (difference - mean[:, None]) ** 2).sum(axis=1)
+    return float(np.median(chi2 / ((weight > 0).sum(axis=1) - 1)))
