@@ -1,0 +1,98 @@
+"""The words of a candidate's picture: its numbers with units and errors."""
+
+from __future__ import annotations
+
+from datetime import date, timedelta
+
+from latelight.products.rows import CandidateRow
+
+__all__ = ["calendar_date", "facts", "interval", "measured"]
+
+# Day 0 of the modified Julian date.
+_MJD_ZERO = date(1858, 11, 17)
+_JULIAN_YEAR = 365.25
+
+
+def facts(row: CandidateRow) -> list[tuple[str, str]]:
+    """Return what is known of a candidate as labels and values, in reading order."""
+    listed = [("significance", f"S/N {row.snr:.1f}"), *_brightness(row), *_motion(row)]
+    listed.extend(_origin(row))
+    return listed
+
+
+def calendar_date(mjd: float) -> str:
+    """Return the UTC date of a modified Julian date, as in ``2026-12-01``."""
+    return (_MJD_ZERO + timedelta(days=int(mjd // 1))).isoformat()
+
+
+def interval(days: float) -> str:
+    """Return a time between epochs in words, later or earlier."""
+    span = abs(days)
+    sense = "later" if days >= 0.0 else "earlier"
+    if span < 100.0:
+        return f"{span:.1f} d {sense}"
+    return f"{span / _JULIAN_YEAR:.2f} yr {sense}"
+
+
+def measured(value: float, err: float | None) -> str:
+    """Return a value and its error to two digits of the error.
+
+    Examples
+    --------
+    >>> measured(12.3456, 0.084)
+    '12.346 ± 0.084'
+    >>> measured(123.4, 17.2)
+    '123 ± 17'
+    """
+    if err is None:
+        return f"{value:.3g}"
+    decimals = 0
+    while decimals < 4 and err * 10.0**decimals < 9.95:
+        decimals += 1
+    return f"{value:.{decimals}f} ± {err:.{decimals}f}"
+
+
+def _brightness(row: CandidateRow) -> list[tuple[str, str]]:
+    if row.surface_brightness is not None:
+        value = measured(row.surface_brightness, row.surface_brightness_err)
+        return [("brightness", f"{value} mag/arcsec^2"), _size(row)]
+    value = measured(row.surface_brightness_counts, row.surface_brightness_err_counts)
+    return [("brightness", f"{value} counts/pixel"), _size(row)]
+
+
+def _size(row: CandidateRow) -> tuple[str, str]:
+    if row.length is not None and row.width is not None:
+        return "length x width", f'{row.length:.0f}" x {row.width:.1f}"'
+    return "length x width", f"{row.length_px:.0f} x {row.width_px:.1f} px"
+
+
+def _motion(row: CandidateRow) -> list[tuple[str, str]]:
+    if row.speed is not None:
+        speed = f"{measured(row.speed, row.speed_err)} arcsec/yr"
+    elif row.shift_px is not None:
+        speed = f"{measured(row.shift_px, row.shift_err_px)} px"
+    else:
+        speed = "one lobe only"
+    if row.normal_pa is not None:
+        way = f"PA {measured(row.normal_pa, row.normal_pa_err)}°"
+    else:
+        way = f"{measured(row.normal_angle, row.normal_angle_err)}° from +x"
+    if row.sense_odds is not None and row.sense_odds < 1.0:
+        way += " (sense unsure)"
+    return [("motion along the normal", speed), ("towards", way)]
+
+
+def _origin(row: CandidateRow) -> list[tuple[str, str]]:
+    if not row.source:
+        return [("origin", "none listed fits")]
+    parts = [row.source]
+    if row.score is not None:
+        parts.append(f"score {row.score:+.1f}")
+    if row.away_angle is not None:
+        parts.append(f"{row.away_angle:+.0f}° off")
+    listed = [("origin", " · ".join(parts))]
+    if row.dust_depth is not None:
+        listed.append(
+            ("dust depth", f"{measured(row.dust_depth, row.dust_depth_err)} pc")
+        )
+    return listed

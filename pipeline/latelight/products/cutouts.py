@@ -1,0 +1,279 @@
+"""A candidate's neighbourhood: cut out of a pair, and kept as one FITS file."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from astropy.io import fits
+
+import latelight
+from latelight.masks import MASK_MEANINGS, MaskBit
+from latelight.products.atomic import write_bytes
+from latelight.products.candidate_columns import CANDIDATE_COLUMNS
+from latelight.products.column import Column
+from latelight.products.fits_file import ascii_text, fits_bytes
+from latelight.products.rows import CandidateRow
+from latelight.products.settings import ProductSettings
+from latelight.records import ArcTrace, Difference, MaskArray, PixelArray, Plane
+
+__all__ = ["Cutout", "cut_out", "mask_cards", "write_cutout"]
+
+# Sky around the arc on every side: at least this, and this many PSF widths.
+_CONTEXT_PX = 20
+_CONTEXT_FWHM = 8.0
+
+# Header keyword (8 letters at most) and comment of each field of the row.
+CARDS = {
+    "id": ("ID", "designation of the candidate"),
+    "field": ("FIELD", "field word"),
+    "filter": ("FILTER", "filter word"),
+    "template": ("TEMPLATE", "name of the template frame"),
+    "science": ("SCIENCE", "name of the science frame"),
+    "mjd_template": ("MJD-TMPL", "middle of the template exposure, UTC"),
+    "mjd_science": ("MJD-SCI", "middle of the science exposure, UTC"),
+    "ra": ("RA", "bright ridge, science epoch, ICRS"),
+    "dec": ("DEC", "bright ridge, science epoch, ICRS"),
+    "snr": ("SNR", "significance"),
+    "length": ("LENGTH", "along the arc"),
+    "width": ("WIDTH", "FWHM across, PSF taken out"),
+    "surface_brightness": ("SURFB", "surface brightness"),
+    "normal_pa": ("MOVEPA", "position angle of the motion"),
+    "normal_pa_err": ("MOVEPAER", "1 sigma"),
+    "speed": ("SPEED", "along the normal"),
+    "speed_err": ("SPEEDERR", "1 sigma"),
+    "source": ("ORIGIN_S", "best listed source"),
+    "away_angle": ("AWAYANG", "motion minus away from source"),
+    "score": ("SCORE", "log10 likelihood ratio of source"),
+    "dust_depth": ("DEPTH", "dust, + towards observer"),
+    "dust_depth_err": ("DEPTHERR", "1 sigma"),
+    "verdict": ("VERDICT", "what the ridge is taken for"),
+    "pair": ("PAIR", "name of the pair"),
+    "x": ("XPIX", "science frame column, first 0"),
+    "y": ("YPIX", "science frame row, first 0"),
+    "normal_angle": ("MOVEANG", "motion from +x towards +y"),
+    "normal_angle_err": ("MOVEANER", "1 sigma"),
+    "shift_px": ("SHIFT", "distance moved"),
+    "shift_err_px": ("SHIFTERR", "1 sigma"),
+    "length_px": ("LENPIX", "along the arc"),
+    "width_px": ("WIDPIX", "FWHM across"),
+    "width_err": ("WIDTHERR", "1 sigma"),
+    "width_err_px": ("WIDPIXER", "1 sigma"),
+    "surface_brightness_err": ("SURFBERR", "1 sigma"),
+    "surface_brightness_counts": ("SURFCNT", "surface brightness"),
+    "surface_brightness_err_counts": ("SURFCNTE", "1 sigma"),
+    "sense_odds": ("SENSEODD", "log10 odds of the sense"),
+    "lobes": ("LOBES", "lobes seen"),
+    "profile_chi2": ("PROFCHI2", "reduced chi-square of profile"),
+    "curvature_radius": ("CURVRAD", "radius of the arc"),
+    "source_separation": ("SRCSEP", "arc to source"),
+}
+
+
+@dataclass(frozen=True, slots=True)
+class Cutout:
+    """Copies of a candidate's pixels, all of one shape.
+
+    Attributes
+    ----------
+    row : CandidateRow
+        The candidate.
+    template, science : float32 array, shape (n, n)
+        The two epochs on one grid and flux scale, counts; NaN without value.
+    difference : float32 array, shape (n, n)
+        Science minus template, counts; NaN without value.
+    variance : float32 array, shape (n, n)
+        Variance of one pixel of the difference; 1 outside the frame.
+    mask : uint16 array, shape (n, n)
+        Bits of the difference; NO_DATA outside the frame.
+    wcs : astropy.wcs.WCS or None
+        Celestial WCS of the cutout.
+    x0, y0 : int
+        Science pixel of the cutout's first pixel.
+    trace : ArcTrace
+        Centre line of the arc, in pixels of the cutout.
+    fwhm_px : float
+        PSF width, pixels.
+    """
+
+    row: CandidateRow
+    template: PixelArray
+    science: PixelArray
+    difference: PixelArray
+    variance: PixelArray
+    mask: MaskArray
+    wcs: Any
+    x0: int
+    y0: int
+    trace: ArcTrace
+    fwhm_px: float
+
+    @property
+    def snr(self) -> PixelArray:
+        """Difference over its 1 sigma, pixel by pixel."""
+        return np.divide(self.difference, np.sqrt(self.variance), dtype=np.float32)
+
+
+def cut_out(
+    row: CandidateRow,
+    *,
+    science: Plane,
+    template: Plane,
+    difference: Difference,
+    wcs: Any,
+    trace: ArcTrace,
+    settings: ProductSettings,
+) -> Cutout:
+    """Cut a candidate out of its pair.
+
+    The square is centred between the places of the arc at the two epochs and
+    holds the whole arc, both lobes and some sky; at the edge of the frame it
+    keeps its size and is filled with NaN, mask NO_DATA.
+
+    Parameters
+    ----------
+    row : CandidateRow
+        The candidate.
+    science, template : Plane
+        Both on the science grid, PSF and flux scale (a ``MatchedPair``'s).
+    difference : Difference
+        Their difference.
+    wcs : astropy.wcs.WCS or None
+        WCS of the science frame; distortions in lookup tables are not kept.
+    trace : ArcTrace
+        Centre line of the arc, science pixels.
+    settings : ProductSettings
+        Table ``[products]``.
+
+    Raises
+    ------
+    ValueError
+        If the shapes of the planes differ.
+    """
+    shapes = {a.shape for a in (science.pixels, template.pixels, difference.pixels)}
+    if len(shapes) != 1:
+        msg = f"science, template and difference must have one shape, got {shapes}"
+        raise ValueError(msg)
+    x0, y0, side = _window(row, trace, difference.fwhm_px, settings.max_cutout_px)
+
+    def cut(image: Any, fill: Any) -> Any:
+        return _cut(image, x0, y0, side, fill)
+
+    def values(pixels: PixelArray, mask: MaskArray) -> PixelArray:
+        piece = cut(pixels, np.nan)
+        piece[(cut(mask, MaskBit.NO_DATA) & MaskBit.NO_DATA) != 0] = np.nan
+        return piece
+
+    return Cutout(
+        row=row,
+        template=values(template.pixels, template.mask),
+        science=values(science.pixels, science.mask),
+        difference=values(difference.pixels, difference.mask),
+        variance=cut(difference.variance, 1.0),
+        mask=cut(difference.mask, MaskBit.NO_DATA),
+        wcs=None if wcs is None else _shifted(wcs, x0, y0, side),
+        x0=x0,
+        y0=y0,
+        trace=replace(trace, x=trace.x - x0, y=trace.y - y0),
+        fwhm_px=difference.fwhm_px,
+    )
+
+
+def write_cutout(path: Path, cutout: Cutout) -> None:
+    """Write a cutout: the row in the primary header, then five images.
+
+    TEMPLATE, SCIENCE and DIFFERENCE (counts), SNR (difference over 1 sigma) and
+    MASK (bits, explained in its header), each with its WCS and checksums.
+
+    Raises
+    ------
+    ProductError
+        If the file cannot be written.
+    """
+    primary = fits.PrimaryHDU()
+    primary.header["CREATOR"] = f"latelight {latelight.__version__}"
+    for column in CANDIDATE_COLUMNS:
+        primary.header.append(_card(column, getattr(cutout.row, column.name)), end=True)
+    primary.header["CUTX0"] = (cutout.x0, "science column of the first pixel, from 0")
+    primary.header["CUTY0"] = (cutout.y0, "science row of the first pixel, from 0")
+    images = [
+        ("TEMPLATE", cutout.template, "count", "on the science grid, PSF and scale"),
+        ("SCIENCE", cutout.science, "count", "at the matched PSF"),
+        ("DIFFERENCE", cutout.difference, "count", "science minus template"),
+        ("SNR", cutout.snr, "", "difference over 1 sigma of one pixel"),
+        ("MASK", cutout.mask, "", "non-zero: do not use; the bits add up"),
+    ]
+    header = None if cutout.wcs is None else cutout.wcs.to_header(relax=True)
+    hdus: list[Any] = [primary]
+    for name, pixels, unit, meaning in images:
+        hdu = fits.ImageHDU(pixels, header=header, name=name)
+        if unit:
+            hdu.header["BUNIT"] = unit
+        hdu.header.add_comment(meaning)
+        if name == "MASK":
+            hdu.header.extend(mask_cards())
+        hdus.append(hdu)
+    write_bytes(path, fits_bytes(hdus))
+
+
+def mask_cards() -> list[tuple[str, int, str]]:
+    """Return header cards that explain the bits of a mask: keyword, value, words."""
+    return [
+        (f"MBIT{line.bit.bit_length() - 1:02d}", int(line.bit), line.meaning[:47])
+        for line in MASK_MEANINGS
+    ]
+
+
+def _card(column: Column, value: Any) -> fits.Card:
+    keyword, meaning = CARDS[column.name]
+    unit = f"[{column.unit}] " if column.unit else ""
+    if isinstance(value, str):
+        value = ascii_text(value)
+    elif value is not None and column.format:
+        value = float(format(float(value), column.format))
+    return fits.Card(keyword, value, unit + meaning)
+
+
+def _window(
+    row: CandidateRow, trace: ArcTrace, fwhm_px: float, longest: int
+) -> tuple[int, int, int]:
+    """Return the first column, first row and side of the square to cut."""
+    radians = np.radians(row.normal_angle)
+    shift = row.shift_px or 0.0
+    x = np.append(trace.x, [row.x, row.x - shift * np.cos(radians)])
+    y = np.append(trace.y, [row.y, row.y - shift * np.sin(radians)])
+    extent = max(np.ptp(x), np.ptp(y))
+    context = max(_CONTEXT_PX, _CONTEXT_FWHM * fwhm_px, shift)
+    half = int(min(np.ceil(extent / 2 + context), (longest - 1) // 2))
+    centre_x, centre_y = (x.min() + x.max()) / 2, (y.min() + y.max()) / 2
+    return round(centre_x) - half, round(centre_y) - half, 2 * half + 1
+
+
+def _cut(image: Any, x0: int, y0: int, side: int, fill: Any) -> Any:
+    piece = np.full((side, side), fill, dtype=image.dtype)
+    ny, nx = image.shape
+    top, bottom = max(y0, 0), min(y0 + side, ny)
+    left, right = max(x0, 0), min(x0 + side, nx)
+    if top < bottom and left < right:
+        inside = (slice(top - y0, bottom - y0), slice(left - x0, right - x0))
+        piece[inside] = image[top:bottom, left:right]
+    return piece
+
+
+def _shifted(wcs: Any, x0: int, y0: int, side: int) -> Any:
+    shifted = wcs.deepcopy()
+    offset = np.array([x0, y0], dtype=float)
+    shifted.wcs.crpix = shifted.wcs.crpix - offset
+    if shifted.sip is not None:
+        shifted.sip = type(shifted.sip)(
+            shifted.sip.a,
+            shifted.sip.b,
+            shifted.sip.ap,
+            shifted.sip.bp,
+            shifted.sip.crpix - offset,
+        )
+    shifted.wcs.set()
+    shifted.pixel_shape = (side, side)
+    return shifted

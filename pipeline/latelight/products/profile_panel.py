@@ -1,0 +1,135 @@
+"""The panel that plots a candidate's mean profile along its motion."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from PIL import Image, ImageDraw
+
+from latelight.products.drawing import (
+    INK,
+    QUIET,
+    RULE,
+    Colour,
+    Layer,
+    nice_step,
+    write,
+)
+from latelight.products.profile import NormalProfile
+
+__all__ = ["draw_profile"]
+
+_TEXT = 14
+_LEFT, _BOTTOM, _TOP, _RIGHT = 46, 24, 10, 8
+_POSITIVE: Colour = (196, 98, 20)
+_NEGATIVE: Colour = (40, 96, 168)
+
+
+@dataclass(frozen=True, slots=True)
+class _Axes:
+    """Turns data into panel pixels."""
+
+    x: tuple[float, float]
+    y: tuple[float, float]
+    width: int
+    height: int
+
+    def at(self, x: float, y: float) -> tuple[float, float]:
+        across = (x - self.x[0]) / (self.x[1] - self.x[0])
+        up = (y - self.y[0]) / (self.y[1] - self.y[0])
+        return (
+            _LEFT + across * (self.width - _LEFT - _RIGHT),
+            self.height - _BOTTOM - up * (self.height - _BOTTOM - _TOP),
+        )
+
+
+def draw_profile(
+    picture: Image.Image,
+    profile: NormalProfile,
+    *,
+    corner: tuple[int, int],
+    side: int,
+    unit: float,
+    shift_px: float | None,
+) -> None:
+    """Plot a profile with its 1-sigma band and the ridges of both epochs.
+
+    Parameters
+    ----------
+    picture : PIL.Image.Image
+        The RGB picture.
+    profile : NormalProfile
+        What to plot.
+    corner : (int, int)
+        Upper left corner of the panel.
+    side : int
+        Its side, pixels.
+    unit : float
+        Axis units (arcsec) per pixel; 1 to label pixels.
+    shift_px : float or None
+        Distance from the template's ridge to the science's, pixels.
+    """
+    good = np.isfinite(profile.value)
+    offset, value, err = (a[good] for a in (profile.offset, profile.value, profile.err))
+    if offset.size < 2:
+        return
+    low, high = float((value - err).min()), float((value + err).max())
+    pad = 0.08 * (high - low)
+    axes = _Axes(
+        (float(profile.offset[0] * unit), float(profile.offset[-1] * unit)),
+        (min(low, 0.0) - pad, max(high, 0.0) + pad),
+        side,
+        side,
+    )
+    layer, draw = Layer(side, side), ImageDraw.Draw(picture)
+    _draw_frame(layer, draw, axes, corner)
+    where = offset * unit
+    upper = [axes.at(*p) for p in zip(where, value + err, strict=True)]
+    lower = [axes.at(*p) for p in zip(where, value - err, strict=True)]
+    layer.fill(upper + lower[::-1], QUIET, opacity=60)
+    layer.line([axes.at(*p) for p in zip(where, value, strict=True)], INK, width=2.0)
+    epochs = [("science", 0.0, _POSITIVE)]
+    if shift_px is not None:
+        epochs.append(("template", -shift_px * unit, _NEGATIVE))
+    for _, place, colour in epochs:
+        layer.dashes(
+            axes.at(place, axes.y[0]), axes.at(place, axes.y[1]), colour, width=1.2
+        )
+    layer.lay_on(picture, *corner)
+    for name, place, colour in epochs:
+        ends = axes.at(place, axes.y[1] if name == "science" else axes.y[0])
+        left = name == "template"
+        spot = (
+            corner[0] + ends[0] + (-6 if left else 6),
+            corner[1] + ends[1] + (-4 if left else 4),
+        )
+        anchor = "rd" if left else "la"
+        write(draw, spot, name, size=_TEXT, colour=colour, anchor=anchor, halo=True)
+
+
+def _draw_frame(
+    layer: Layer,
+    draw: ImageDraw.ImageDraw,
+    axes: _Axes,
+    corner: tuple[int, int],
+) -> None:
+    """Draw the zero line, the ticks and their numbers."""
+    layer.line([axes.at(axes.x[0], 0.0), axes.at(axes.x[1], 0.0)], RULE, width=1.0)
+    for tick in _ticks(axes.x):
+        x, y = axes.at(tick, axes.y[0])
+        layer.line([(x, y), (x, y + 4)], QUIET, width=1.0)
+        spot = (corner[0] + x, corner[1] + y + 6)
+        write(draw, spot, f"{tick:g}", size=_TEXT, colour=QUIET, anchor="ma")
+    for tick in _ticks(axes.y):
+        x, y = axes.at(axes.x[0], tick)
+        layer.line([(x - 4, y), (x, y)], QUIET, width=1.0)
+        spot = (corner[0] + x - 7, corner[1] + y)
+        write(draw, spot, f"{tick:g}", size=_TEXT, colour=QUIET, anchor="rm")
+
+
+def _ticks(span: tuple[float, float]) -> list[float]:
+    step = nice_step((span[1] - span[0]) / 3.0)
+    first, last = int(np.ceil(span[0] / step)), int(np.floor(span[1] / step))
+    # Rounded, so that three steps of 0.1 read 0.3.
+    return [float(f"{index * step:.6g}") for index in range(first, last + 1)]
