@@ -22,13 +22,13 @@ def add_stars(
     for i in range(stars.shape[0]):
         x, y, radius = stars[i, 0], stars[i, 1], stars[i, 7]
         height = stars[i, 2] * stars[i, 6]
-        low = max(first, int(math.ceil(y - radius)))
-        high = min(last, int(math.floor(y + radius)) + 1)
+        low = max(first, math.ceil(y - radius))
+        high = min(last, math.floor(y + radius) + 1)
         for row in range(low, high):
             dy = row - y
             reach = math.sqrt(max(radius * radius - dy * dy, 0.0))
-            left = max(0, int(math.ceil(x - reach)))
-            right = min(nx, int(math.floor(x + reach)) + 1)
+            left = max(0, math.ceil(x - reach))
+            right = min(nx, math.floor(x + reach) + 1)
             for col in range(left, right):
                 dx = col - x
                 form = (
@@ -152,7 +152,7 @@ def deposit_charge(
     ny, nx = charge.shape
     scale = 1.0 / (math.sqrt(2.0) * sigma)
     for i in range(x.size):
-        col0, row0 = int(round(x[i])), int(round(y[i]))
+        col0, row0 = round(x[i]), round(y[i])
         for row in range(max(0, row0 - 2), min(ny, row0 + 3)):
             wy = math.erf((row + 0.5 - y[i]) * scale)
             wy -= math.erf((row - 0.5 - y[i]) * scale)

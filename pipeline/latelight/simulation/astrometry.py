@@ -95,7 +95,8 @@ def misstate(
     """
     stated = wcs.deepcopy()
     scale = np.sqrt(abs(np.linalg.det(wcs.wcs.cd)))
-    ra, dec = offset_position(*wcs.wcs.crval, rng.uniform(0.0, 360.0), error_px * scale)
+    pointing, direction = wcs.wcs.crval, rng.uniform(0.0, 360.0)
+    ra, dec = offset_position(pointing[0], pointing[1], direction, error_px * scale)
     angle = np.radians(rng.normal(0.0, rotation_err_deg))
     turn = np.array([[np.cos(angle), -np.sin(angle)], [np.sin(angle), np.cos(angle)]])
     stated.wcs.crval = [float(ra), float(dec)]

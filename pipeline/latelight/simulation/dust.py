@@ -9,7 +9,13 @@ from scipy import fft, ndimage
 
 from latelight.records import FloatArray
 
-__all__ = ["DustSheet", "DustTexture", "filamentary_texture"]
+__all__ = [
+    "DustSheet",
+    "DustTexture",
+    "Relief",
+    "filamentary_texture",
+    "random_relief",
+]
 
 
 @dataclass(frozen=True, slots=True)
@@ -43,8 +49,34 @@ class DustTexture:
 
 
 @dataclass(frozen=True, slots=True)
+class Relief:
+    """Gentle hills of a sheet: a sum of plane waves.
+
+    Attributes
+    ----------
+    wave_east, wave_north : float64 array, shape (n,)
+        Wave numbers, radians per arcsec.
+    phase : float64 array, shape (n,)
+        Phases, radians.
+    height_pc : float
+        1 sigma of the hills, pc of depth.
+    """
+
+    wave_east: FloatArray
+    wave_north: FloatArray
+    phase: FloatArray
+    height_pc: float
+
+    def at(self, east: FloatArray, north: FloatArray) -> FloatArray:
+        """Return the hills' depth, pc, at sky offsets (arcsec)."""
+        e, n = np.asarray(east)[..., None], np.asarray(north)[..., None]
+        waves = np.cos(self.wave_east * e + self.wave_north * n + self.phase)
+        return self.height_pc * np.sqrt(2.0 / self.phase.size) * waves.sum(axis=-1)
+
+
+@dataclass(frozen=True, slots=True)
 class DustSheet:
-    """A tilted sheet of dust.
+    """A tilted, gently rolling sheet of dust.
 
     Attributes
     ----------
@@ -58,6 +90,8 @@ class DustSheet:
         1 sigma of the Gaussian density along the line of sight, pc.
     texture : DustTexture
         Column density over the sky.
+    relief : Relief
+        How it departs from a plane.
     """
 
     ra: float
@@ -67,6 +101,19 @@ class DustSheet:
     slope_north: float
     thickness_pc: float
     texture: DustTexture
+    relief: Relief
+
+
+def random_relief(rng: np.random.Generator, *, height_pc: float) -> Relief:
+    """Draw hills of 35 to 120 arcsec from crest to crest."""
+    wavelength = 35.0 * (120.0 / 35.0) ** rng.random(8)
+    angle = rng.uniform(0.0, 2.0 * np.pi, 8)
+    return Relief(
+        wave_east=2.0 * np.pi / wavelength * np.sin(angle),
+        wave_north=2.0 * np.pi / wavelength * np.cos(angle),
+        phase=rng.uniform(0.0, 2.0 * np.pi, 8),
+        height_pc=height_pc,
+    )
 
 
 def filamentary_texture(
@@ -104,7 +151,7 @@ def filamentary_texture(
     grid = (np.arange(n) - n // 2) * spacing_arcsec
     clumps, ridges, warp_e, warp_n = (
         _random_field(rng, n, scale=scale / spacing_arcsec)
-        for scale in (8.0, 14.0, 30.0, 30.0)
+        for scale in (12.0, 14.0, 30.0, 30.0)
     )
     density = np.exp(contrast * 0.45 * clumps)
     filaments = np.exp(-((ridges / 0.35) ** 2))
@@ -114,8 +161,9 @@ def filamentary_texture(
     east, north = grid[None, :] + warp * warp_e, grid[:, None] + warp * warp_n
     c, s = np.cos(np.radians(along_pa)), np.sin(np.radians(along_pa))
     along, across = east * s + north * c, east * c - north * s
-    radius4 = (2.0 * along / along_arcsec) ** 4 + (2.0 * across / across_arcsec) ** 4
-    density *= np.exp(-radius4)
+    # Long sides fade slowly, the far and near side of the cloud end more sharply.
+    density *= np.exp(-(np.abs(2.0 * along / along_arcsec) ** 2.5))
+    density *= np.exp(-((2.0 * across / across_arcsec) ** 4))
     rim = np.minimum.outer(half - np.abs(grid), half - np.abs(grid))
     density *= np.clip(rim / 4.0, 0.0, 1.0)
     density[density < 1e-3 * density.max()] = 0.0

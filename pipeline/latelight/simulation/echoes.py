@@ -80,12 +80,16 @@ class Echo:
         depth_sigmas : float
             Distance from the mid-plane along the line of sight, in thicknesses.
         """
+        depth = self.depth(east, north) + depth_sigmas * self.sheet.thickness_pc
+        theta = self.plate().angle_from(self.source.ra, self.source.dec, east, north)
+        return delay_yr(theta, depth, float(self.source.distance_pc or 0.0))
+
+    def depth(self, east: FloatArray, north: FloatArray) -> FloatArray:
+        """Return the depth of the sheet's middle at sky offsets, pc."""
         sheet, distance = self.sheet, float(self.source.distance_pc or 0.0)
         to_pc = (distance - sheet.depth_pc) / ARCSEC_PER_RADIAN
-        depth = sheet.depth_pc + depth_sigmas * sheet.thickness_pc
-        depth = depth + to_pc * (sheet.slope_east * east + sheet.slope_north * north)
-        theta = self.plate().angle_from(self.source.ra, self.source.dec, east, north)
-        return delay_yr(theta, depth, distance)
+        plane = to_pc * (sheet.slope_east * east + sheet.slope_north * north)
+        return sheet.depth_pc + plane + sheet.relief.at(east, north)
 
 
 @dataclass(frozen=True, slots=True)

@@ -5,36 +5,35 @@ from __future__ import annotations
 import numpy as np
 from scipy import ndimage
 
-from latelight.records import FloatArray
-from latelight.simulation.astrometry import (
-    ARCSEC_PER_RADIAN,
-    pixel_to_pixel,
-    sky_to_pixel,
-)
+from latelight.records import FloatArray, PixelArray
+from latelight.simulation.astrometry import pixel_to_pixel, sky_to_pixel
 from latelight.simulation.echoes import Echo, Viewpoint, age_yr, render_echo
 from latelight.simulation.exposures import Exposure, Patch
 from latelight.simulation.truth import EchoTruth
 from latelight.sky import pixel_scale_arcsec
 
-__all__ = ["delay_gradient", "measure_echo", "ridge_peak"]
+__all__ = ["delay_gradient", "measure_echo", "ridge_size"]
 
 # Bins along and across the ridge when an image is unrolled, arcsec.
 ALONG_BIN = 1.0
 ACROSS_BIN = 0.25
 
 
-def delay_gradient(echo: Echo, east: float, north: float) -> FloatArray:
-    """Return d(delay)/d(east, north) on the sheet, yr/arcsec, shape (2,)."""
-    step = 0.25
-    e = east + np.array([step, -step, 0.0, 0.0])
-    n = north + np.array([0.0, 0.0, step, -step])
-    t = echo.delay(e, n)
-    return np.array([t[0] - t[1], t[2] - t[3]]) / (2.0 * step)
+def delay_gradient(echo: Echo, east: FloatArray, north: FloatArray) -> FloatArray:
+    """Return d(delay)/d(east, north) on the sheet, yr/arcsec, shape (2, n)."""
+    h = 0.25
+    return np.array(
+        [
+            echo.delay(east + h, north) - echo.delay(east - h, north),
+            echo.delay(east, north + h) - echo.delay(east, north - h),
+        ]
+    ) / (2.0 * h)
 
 
-def ridge_peak(echo: Echo, view: Viewpoint) -> float:
-    """Return the peak of an echo's ridge, counts per pixel."""
-    return _Ridge(echo, view, render_echo(echo, view)).peak
+def ridge_size(echo: Echo, view: Viewpoint) -> tuple[float, float]:
+    """Return peak (counts per pixel) and length (arcsec) of an echo's ridge."""
+    ridge = _Ridge(echo, view, render_echo(echo, view))
+    return ridge.peak, ridge.length
 
 
 def measure_echo(
@@ -42,8 +41,8 @@ def measure_echo(
     science: Exposure,
     template: Exposure,
     *,
-    science_variance: FloatArray,
-    template_variance: FloatArray,
+    science_variance: PixelArray,
+    template_variance: PixelArray,
 ) -> EchoTruth:
     """Return the truth of one echo in a pair.
 
@@ -53,30 +52,25 @@ def measure_echo(
         The echo.
     science, template : Exposure
         The two epochs.
-    science_variance, template_variance : array
+    science_variance, template_variance : float32 array
         True pixel variance of each frame on its own grid, counts squared.
     """
     view = Viewpoint.of(echo, science)
     image = render_echo(echo, view)
     ridge = _Ridge(echo, view, image)
-    east, north = ridge.middle
     years = age_yr(echo.source, template.mjd) - age_yr(echo.source, science.mjd)
-    there = _follow(echo, east, north, years)
-    halfway = _follow(echo, east, north, 0.5 * years)
-    gradient = delay_gradient(echo, *halfway)
-
+    gradient = ridge.mean_gradient(echo, 0.5 * years)
+    speed = 1.0 / float(np.hypot(*gradient))
+    # Where the front was (or will be), straight along its mean normal.
+    path = speed * years * gradient * speed
+    east, north = ridge.middle
     ra, dec = echo.plate().to_sky(
-        np.array([east, there[0]]), np.array([north, there[1]])
+        np.array([east, east + path[0]]), np.array([north, north + path[1]])
     )
     x, y = sky_to_pixel(science.wcs, ra, dec)
     area = pixel_scale_arcsec(science.wcs, float(x[0]), float(y[0])) ** 2
     bounds = _bounds(
         echo, science, template, image, science_variance, template_variance
-    )
-    distance = float(echo.source.distance_pc or 0.0)
-    to_pc = (distance - echo.sheet.depth_pc) / ARCSEC_PER_RADIAN
-    depth = echo.sheet.depth_pc + to_pc * (
-        echo.sheet.slope_east * east + echo.sheet.slope_north * north
     )
     return EchoTruth(
         source=echo.source.name,
@@ -85,15 +79,15 @@ def measure_echo(
         x=float(x[0]),
         y=float(y[0]),
         normal_pa=float(np.degrees(np.arctan2(*gradient)) % 360.0),
-        speed_arcsec_yr=float(1.0 / np.hypot(*gradient)),
-        shift_arcsec=float(np.hypot(east - there[0], north - there[1])),
+        speed_arcsec_yr=speed,
+        shift_arcsec=speed * abs(years),
         shift_px=float(np.hypot(x[1] - x[0], y[1] - y[0])),
         surface_brightness=float(
             science.zero_point - 2.5 * np.log10(ridge.peak / area)
         ),
         length_arcsec=ridge.length,
         width_arcsec=ridge.width,
-        depth_pc=float(depth),
+        depth_pc=float(echo.depth(np.array([east]), np.array([north]))[0]),
         bound=bounds[0],
         bound_positive=bounds[1],
         bound_negative=bounds[2],
@@ -109,7 +103,7 @@ class _Ridge:
         ra, dec = view.wcs.all_pix2world(cols + image.col, rows + image.row, 0)
         east, north = echo.plate().from_sky(ra, dec)
         centre = np.array([flux @ east, flux @ north]) / flux.sum()
-        gradient = delay_gradient(echo, *centre)
+        gradient = delay_gradient(echo, *centre[:, None])[:, 0]
         speed = 1.0 / np.hypot(*gradient)
         age = age_yr(echo.source, view.mjd)
         normal = gradient * speed
@@ -124,12 +118,21 @@ class _Ridge:
         self.length = float(end - begin)
         inside = (along >= begin) & (along <= end)
         lead, self.width = _profile(ahead[inside], flux[inside])
-        # The middle of the ridge: the light's centroid along it, moved on to the
-        # crest across it (a bent arc's centroid lies off the arc).
-        middle_along = float(flux[inside] @ along[inside] / flux[inside].sum())
-        start = centre + middle_along * np.array([normal[1], -normal[0]])
-        now = float(echo.delay(start[:1], start[1:])[0])
-        self.middle = _follow(echo, *start, age + lead / speed - now)
+
+        # The ridge as a line: points along it, moved on to the crest across it.
+        place = first + ALONG_BIN * (np.arange(bright[0], bright[-1] + 1) + 0.5)
+        self._weight = crest[bright[0] : bright[-1] + 1]
+        self._weight = self._weight / self._weight.sum()
+        line = centre[:, None] + place * np.array([normal[1], -normal[0]])[:, None]
+        self._line = _follow(echo, line, age + lead / speed)
+        middle = place - self._weight @ place
+        self.middle = self._line[:, int(np.argmin(np.abs(middle)))]
+
+    def mean_gradient(self, echo: Echo, years: float) -> FloatArray:
+        """Return the delay's mean gradient along the ridge ``years`` from now."""
+        now = echo.delay(*self._line)
+        then = _follow(echo, self._line, now + years)
+        return delay_gradient(echo, *then) @ self._weight
 
 
 def _crest(along: FloatArray, flux: FloatArray) -> tuple[float, FloatArray]:
@@ -138,7 +141,7 @@ def _crest(along: FloatArray, flux: FloatArray) -> tuple[float, FloatArray]:
     index = ((along - first) / ALONG_BIN).astype(int)
     crest = np.zeros(index.max() + 1)
     np.maximum.at(crest, index, flux)
-    return first, ndimage.uniform_filter1d(crest, 3, mode="constant")
+    return first, ndimage.uniform_filter1d(crest, 5, mode="constant")
 
 
 def _profile(ahead: FloatArray, flux: FloatArray) -> tuple[float, float]:
@@ -160,18 +163,17 @@ def _profile(ahead: FloatArray, flux: FloatArray) -> tuple[float, float]:
     return float(middle[top]), float(fine[right] - fine[left])
 
 
-def _follow(echo: Echo, east: float, north: float, years: float) -> tuple[float, float]:
-    """Follow the front's normal until the delay has grown by ``years``."""
-    goal = float(echo.delay(np.array([east]), np.array([north]))[0]) + years
-    direction = delay_gradient(echo, east, north)
+def _follow(echo: Echo, points: FloatArray, delay: FloatArray | float) -> FloatArray:
+    """Move points, shape (2, n), along the front's normals to a given delay."""
+    direction = delay_gradient(echo, *points)
     direction /= np.hypot(*direction)
-    path = 0.0
+    path = np.zeros(points.shape[1])
     # Newton along the normal; the delay is nearly linear over an echo's shift.
-    for _ in range(8):
-        e, n = east + path * direction[0], north + path * direction[1]
-        miss = goal - float(echo.delay(np.array([e]), np.array([n]))[0])
-        path += miss / float(delay_gradient(echo, e, n) @ direction)
-    return east + path * float(direction[0]), north + path * float(direction[1])
+    for _ in range(6):
+        here = points + path * direction
+        rate = (delay_gradient(echo, *here) * direction).sum(axis=0)
+        path += (delay - echo.delay(*here)) / rate
+    return points + path * direction
 
 
 def _bounds(
@@ -179,8 +181,8 @@ def _bounds(
     science: Exposure,
     template: Exposure,
     image: Patch,
-    science_variance: FloatArray,
-    template_variance: FloatArray,
+    science_variance: PixelArray,
+    template_variance: PixelArray,
 ) -> tuple[float, float, float]:
     """Return the perfect matched filter's S/N: both lobes, positive, negative."""
     own = Viewpoint.of(echo, template)

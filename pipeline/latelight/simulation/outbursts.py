@@ -7,9 +7,9 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from latelight.echo.geometry import delay_yr, depth_pc
-from latelight.records import Source
+from latelight.records import FloatArray, Source
 from latelight.simulation.astrometry import PlateCoordinates
-from latelight.simulation.dust import DustSheet, filamentary_texture
+from latelight.simulation.dust import DustSheet, filamentary_texture, random_relief
 from latelight.simulation.echoes import (
     Echo,
     Viewpoint,
@@ -17,7 +17,7 @@ from latelight.simulation.echoes import (
     sheet_slopes,
 )
 from latelight.simulation.exposures import Exposure
-from latelight.simulation.measuring import ridge_peak
+from latelight.simulation.measuring import ridge_size
 from latelight.simulation.outburst import LIGHT_CURVES, LightCurve
 from latelight.sky import offset_position, pixel_scale_arcsec, position_angle
 
@@ -25,6 +25,7 @@ __all__ = ["EchoPlan", "Outburst", "flat_speed", "place_echoes", "random_outburs
 
 SPEEDS = (1.5, 30.0)
 SHIFTS_ARCSEC = (1.5, 15.0)
+LENGTHS_ARCSEC = (18.0, 75.0)
 STEEPEST_SLOPE = 2.5
 # The fainter lobe of a difference over the brighter one.
 LEAST_LOBE_RATIO = 0.3
@@ -56,7 +57,7 @@ class EchoPlan:
 
     count: int
     brightness: tuple[float, float] = (21.5, 24.5)
-    lengths: tuple[float, float] = (20.0, 70.0)
+    lengths: tuple[float, float] = (30.0, 85.0)
     turn_deg: float = 6.0
 
 
@@ -185,16 +186,24 @@ class _Footprint:
     scale: float
 
     def overlaps(self, other: _Footprint) -> bool:
-        """Say whether two echoes come within 8 arcsec of each other."""
-        angle = np.radians(self.pa)
+        """Say whether two echoes come within 8 arcsec of each other.
+
+        Two rectangles are apart if they are along a side of one of them.
+        """
         # East is left and north up, give or take the frame's rotation.
-        east, north = -(other.x - self.x), other.y - self.y
-        across = abs(east * np.sin(angle) + north * np.cos(angle)) * self.scale
-        along = abs(east * np.cos(angle) - north * np.sin(angle)) * self.scale
-        return bool(
-            along < 0.5 * (self.length + other.length) + 8.0
-            and across < 0.5 * (self.reach + other.reach) + 8.0
-        )
+        offset = np.array([self.x - other.x, other.y - self.y]) * self.scale
+        for angle in np.radians([self.pa, self.pa + 90.0, other.pa, other.pa + 90.0]):
+            axis = np.array([np.sin(angle), np.cos(angle)])
+            room = self._half_extent(axis) + other._half_extent(axis) + 8.0
+            if abs(offset @ axis) > room:
+                return False
+        return True
+
+    def _half_extent(self, axis: FloatArray) -> float:
+        normal = np.array([np.sin(np.radians(self.pa)), np.cos(np.radians(self.pa))])
+        across = abs(float(normal @ axis))
+        along = abs(float(normal[1] * axis[0] - normal[0] * axis[1]))
+        return 0.5 * (self.length * along + self.reach * across)
 
 
 def _draw(
@@ -264,20 +273,22 @@ def _build(
     blur = 0.3 * 10.0 ** rng.uniform(0.0, 0.92) / 2.355
     step = 1e-4 * distance
     delays = delay_yr(theta, np.array([depth - step, depth + step]), distance)
-    per_pc = abs(float(delays[1] - delays[0])) / (2.0 * step)
+    pc_per_arcsec = 2.0 * step / abs(float(delays[1] - delays[0])) / place.speed
     sheet = DustSheet(
         ra=place.ra,
         dec=place.dec,
         depth_pc=depth,
         slope_east=slopes[0],
         slope_north=slopes[1],
-        thickness_pc=blur / place.speed / per_pc,
+        thickness_pc=blur * pc_per_arcsec,
         texture=filamentary_texture(
             rng,
             along_arcsec=place.length,
             across_arcsec=place.reach * float(rng.uniform(1.0, 1.6)),
             along_pa=place.pa + 90.0 + float(rng.normal(0.0, 8.0)),
         ),
+        # Hills that push the front to and fro by 0.35 arcsec, 1 sigma.
+        relief=random_relief(rng, height_pc=0.35 * pc_per_arcsec),
     )
     echo = Echo(source, outburst.light_curve, sheet, amplitude=1.0)
     return _brighten(echo, float(rng.uniform(*plan.brightness)), science, template)
@@ -288,8 +299,10 @@ def _brighten(
 ) -> Echo | None:
     """Set the dust column so that the ridge peaks as asked at the science epoch."""
     view = Viewpoint.of(echo, science)
-    now = ridge_peak(echo, view)
-    then = ridge_peak(echo, replace(view, mjd=template.mjd))
+    now, length = ridge_size(echo, view)
+    then, _ = ridge_size(echo, replace(view, mjd=template.mjd))
+    if not LENGTHS_ARCSEC[0] < length < LENGTHS_ARCSEC[1]:
+        return None
     if not LEAST_LOBE_RATIO < then / now < 1.0 / LEAST_LOBE_RATIO:
         return None
     scale = pixel_scale_arcsec(science.wcs, view.psf_x, view.psf_y)

@@ -9,6 +9,7 @@ from typing import Literal
 import numpy as np
 
 from latelight.simulation.astrometry import frame_wcs, misstate
+from latelight.simulation.echoes import Echo
 from latelight.simulation.exposures import BadColumn, Camera, Exposure
 from latelight.simulation.objects import random_galaxies, random_stars
 from latelight.simulation.observing import (
@@ -34,7 +35,7 @@ __all__ = ["SimulatedPair", "random_camera", "random_exposure", "random_pair"]
 Kind = Literal["echoes", "nuisances"]
 
 # Stars of 13-23 mag per square arcminute at the default density.
-STARS_PER_ARCMIN2 = 18.0
+STARS_PER_ARCMIN2 = 36.0
 MARGIN_ARCSEC = 30.0
 # Magnitude of one count in 120 s: a 1.5-m telescope at 1.5 electrons a count.
 ZERO_POINT = 28.8
@@ -95,7 +96,7 @@ def random_pair(
     template_later : bool
         Whether the template was taken after the science frame.
     n_stars : int, optional
-        Stars of 13 to 23 mag on a frame; by default 18 per square arcminute.
+        Stars of 13 to 23 mag on a frame; by default 36 per square arcminute.
 
     Raises
     ------
@@ -132,7 +133,7 @@ def random_pair(
         for moment, fwhm in zip(moments, pixels, strict=True)
     )
 
-    echoes = ()
+    echoes: tuple[Echo, ...] = ()
     if kind == "echoes":
         room = min(1.0, (size / 1024) ** 2)
         plan = EchoPlan(count=max(1, round(int(dust.integers(6, 9)) * room)))
@@ -273,9 +274,9 @@ def _random_interval(
     dec: float,
     mjd: float,
 ) -> float:
-    """Draw days between the epochs so that the echoes move 2.2-11 arcsec."""
+    """Draw days between the epochs so that the echoes move about 2-13 arcsec."""
     speeds = [flat_speed(o.source, ra, dec, mjd) for o in outbursts]
-    shift = 2.2 * 5.0 ** rng.random()
+    shift = 2.2 * 6.0 ** rng.random()
     return float(np.clip(shift / np.mean(speeds), 20 / 365.25, 4.0) * 365.25)
 
 
@@ -286,7 +287,7 @@ def _random_sky(
     size: int,
     n_stars: int | None,
     kind: Kind,
-    echoes: tuple,
+    echoes: tuple[Echo, ...],
 ) -> Scene:
     scale = Camera(shape=(size, size)).scale_arcsec
     half = 0.5 * size * scale + MARGIN_ARCSEC

@@ -33,7 +33,7 @@ class EchoTruth:
         How far the ridge moved between the epochs.
     surface_brightness : float
         Peak of the ridge at the science epoch, mag/arcsec^2 above the atmosphere,
-        after blurring by the PSF, smoothed over 3 arcsec along the ridge.
+        after blurring by the PSF, smoothed over 5 arcsec along the ridge.
     length_arcsec : float
         Extent along the ridge above half of its peak.
     width_arcsec : float
