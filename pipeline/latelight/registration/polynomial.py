@@ -100,31 +100,42 @@ def fit_displacement(
     Returns
     -------
     Polynomial
-        Of the degree with the lowest information criterion.
+        The mean of the fits of all degrees, by their Akaike weights.
 
     Notes
     -----
     Weights are ``1 / (error^2 + s^2)``: the scatter s that the errors do not
     know of (blends, the shape of the PSF) is found from the stars themselves by
-    maximum likelihood, so that the brightest do not carry the map alone.  The
-    degree is that of the lowest AICc (Hurvich & Tsai 1989, Biometrika 76, 297,
-    doi:10.1093/biomet/76.2.297) on one set of stars and weights.
+    maximum likelihood, so that the brightest do not carry the map alone.
+    Degrees are not chosen but averaged with the weights ``exp(-AICc / 2)``
+    (Hurvich & Tsai 1989, Biometrika 76, 297, doi:10.1093/biomet/76.2.297;
+    Burnham & Anderson 2002, Model Selection and Multimodel Inference, ch. 4),
+    on one set of stars; the covariance holds how far they are apart.
     """
     low, high = degrees
     while high > low and error.size < _STARS_PER_TERM * _n_terms(high):
         high -= 1
     data = _Stars(places, displacement, error, shape)
-    full = _clipped_fit(data, high, clip_sigma, error_floor)
-    if high == low:
-        return full.polynomial
-    scores = [
-        _aicc(data, full.polynomial.kept, full.variance, degree)
-        for degree in range(low, high + 1)
-    ]
-    best = low + int(np.argmin(scores))
-    if best == high:
-        return full.polynomial
-    return _clipped_fit(data, best, clip_sigma, error_floor).polynomial
+    kept, variance = _clip(data, high, clip_sigma, error_floor)
+    fits = [_fit(data, degree, kept, variance) for degree in range(low, high + 1)]
+    scores = np.array([fit.aicc for fit in fits])
+    weights = np.exp(-0.5 * (scores - scores.min()))
+    weights /= weights.sum()
+    padded = [fit.padded_to(_n_terms(high)) for fit in fits]
+    mean = np.sum([w * c for w, (c, _) in zip(weights, padded, strict=True)], axis=0)
+    covariance = np.zeros((mean.shape[0], mean.shape[0]))
+    for weight, (coefficients, own) in zip(weights, padded, strict=True):
+        apart = coefficients - mean
+        covariance += weight * (own + 0.5 * apart @ apart.T)
+    residual = displacement[kept] - data.design(high)[kept] @ mean
+    return Polynomial(
+        coefficients=mean,
+        covariance=covariance,
+        degree=high,
+        shape=shape,
+        kept=kept,
+        rms=float(np.sqrt(np.mean(residual**2))),
+    )
 
 
 def fit_surface(
@@ -159,47 +170,58 @@ class _Stars:
 
 @dataclass(frozen=True, slots=True)
 class _Fit:
-    polynomial: Polynomial
-    variance: FloatArray
+    """One degree's coefficients, their covariance, and its AICc."""
+
+    coefficients: FloatArray
+    covariance: FloatArray
+    aicc: float
+
+    def padded_to(self, n_terms: int) -> tuple[FloatArray, FloatArray]:
+        """Coefficients and covariance with zeros for the terms it has not."""
+        more = n_terms - self.coefficients.shape[0]
+        return (
+            np.pad(self.coefficients, ((0, more), (0, 0))),
+            np.pad(self.covariance, ((0, more), (0, more))),
+        )
 
 
 def _n_terms(degree: int) -> int:
     return (degree + 1) * (degree + 2) // 2
 
 
-def _clipped_fit(data: _Stars, degree: int, clip: float, floor: float) -> _Fit:
+def _clip(
+    data: _Stars, degree: int, clip: float, floor: float
+) -> tuple[BoolArray, FloatArray]:
+    """Stars that agree with one polynomial, and the variance of every star."""
     design = data.design(degree)
     n_terms = design.shape[1]
     kept = np.ones(data.error.size, dtype=bool)
     variance = data.error**2 + floor**2
     for turn in range(_CLIP_ROUNDS):
-        solution, inverse = _solve(design, data.displacement, variance, kept)
+        solution, _ = _solve(design, data.displacement, variance, kept)
         residual = data.displacement - design @ solution
         # The median first: wild stars would blow up a likelihood.
         scatter_of = _median_scatter if turn < 2 else _likely_scatter
         freedom = max(kept.sum() - n_terms, 1) / kept.sum()
         scatter = scatter_of(residual[kept], data.error[kept], freedom)
         variance = data.error**2 + max(scatter, floor) ** 2
-        pull = np.abs(residual).max(axis=1) / np.sqrt(variance)
-        now = pull <= clip
-        if now.sum() <= n_terms + 1:
-            break
-        if turn >= 3 and np.array_equal(now, kept):
+        now = np.abs(residual).max(axis=1) <= clip * np.sqrt(variance)
+        settled = turn > 2 and np.array_equal(now, kept)
+        if now.sum() <= n_terms + 1 or settled:
             break
         kept = now
+    return kept, variance
+
+
+def _fit(data: _Stars, degree: int, kept: BoolArray, variance: FloatArray) -> _Fit:
+    design = data.design(degree)
     solution, inverse = _solve(design, data.displacement, variance, kept)
     residual = (data.displacement - design @ solution)[kept]
-    freedom = 2 * max(int(kept.sum()) - n_terms, 1)
-    chi2 = float(np.sum(residual**2 / variance[kept, None])) / freedom
-    polynomial = Polynomial(
-        coefficients=solution,
-        covariance=inverse * max(chi2, 1.0),
-        degree=degree,
-        shape=data.shape,
-        kept=kept,
-        rms=float(np.sqrt(np.mean(residual**2))),
-    )
-    return _Fit(polynomial, variance)
+    chi2 = float(np.sum(residual**2 / variance[kept, None]))
+    free, values = 2 * design.shape[1], 2 * int(kept.sum())
+    reduced = chi2 / max(values - free, 1)
+    aicc = chi2 + 2.0 * free * values / max(values - free - 1, 1)
+    return _Fit(solution, inverse * max(reduced, 1.0), aicc)
 
 
 def _solve(
@@ -243,13 +265,3 @@ def _bisect(excess: Callable[[float], float]) -> float:
         middle = np.sqrt(low * high)
         low, high = (middle, high) if excess(middle) > 0.0 else (low, middle)
     return float(high)
-
-
-def _aicc(data: _Stars, kept: BoolArray, variance: FloatArray, degree: int) -> float:
-    design = data.design(degree)
-    solution, _ = _solve(design, data.displacement, variance, kept)
-    residual = (data.displacement - design @ solution)[kept]
-    chi2 = float(np.sum(residual**2 / variance[kept, None]))
-    free = design.shape[1] * 2
-    values = 2 * int(kept.sum())
-    return chi2 + 2.0 * free * values / max(values - free - 1, 1)
