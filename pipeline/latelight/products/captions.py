@@ -35,19 +35,19 @@ def interval(days: float) -> str:
 
 
 def measured(value: float, err: float | None) -> str:
-    """Return a value and its error to two digits of the error.
+    """Return a value and its error, to a digit of which the error has three or more.
 
     Examples
     --------
     >>> measured(12.3456, 0.084)
-    '12.346 ± 0.084'
+    '12.35 ± 0.08'
     >>> measured(123.4, 17.2)
     '123 ± 17'
     """
     if err is None:
         return f"{value:.3g}"
     decimals = 0
-    while decimals < 4 and err * 10.0**decimals < 9.95:
+    while decimals < 4 and err * 10.0**decimals < 2.95:
         decimals += 1
     return f"{value:.{decimals}f} ± {err:.{decimals}f}"
 

@@ -203,7 +203,7 @@ def write_cutout(path: Path, cutout: Cutout) -> None:
         ("SCIENCE", cutout.science, "count", "at the matched PSF"),
         ("DIFFERENCE", cutout.difference, "count", "science minus template"),
         ("SNR", cutout.snr, "", "difference over 1 sigma of one pixel"),
-        ("MASK", cutout.mask, "", "non-zero: do not use; the bits add up"),
+        ("MASK", cutout.mask, "", "non-zero: do not use; MBITnn explains 2^nn"),
     ]
     header = None if cutout.wcs is None else cutout.wcs.to_header(relax=True)
     hdus: list[Any] = [primary]
@@ -213,15 +213,15 @@ def write_cutout(path: Path, cutout: Cutout) -> None:
             hdu.header["BUNIT"] = unit
         hdu.header.add_comment(meaning)
         if name == "MASK":
-            hdu.header.extend(mask_cards())
+            hdu.header.extend(mask_cards(), end=True)
         hdus.append(hdu)
     write_bytes(path, fits_bytes(hdus))
 
 
-def mask_cards() -> list[tuple[str, int, str]]:
-    """Return header cards that explain the bits of a mask: keyword, value, words."""
+def mask_cards() -> list[tuple[str, str]]:
+    """Return header cards that explain a mask: MBITnn says what 2^nn means."""
     return [
-        (f"MBIT{line.bit.bit_length() - 1:02d}", int(line.bit), line.meaning[:47])
+        (f"MBIT{line.bit.bit_length() - 1:02d}", f"{line.bit.name}: {line.meaning}")
         for line in MASK_MEANINGS
     ]
 

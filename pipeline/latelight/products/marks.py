@@ -13,213 +13,214 @@ from latelight.products.drawing import (
     INK,
     MOTION,
     ORIGIN,
-    Layer,
+    OVERSAMPLING,
+    PAPER,
+    Canvas,
+    Point,
     nice_step,
     text_width,
     write,
 )
 from latelight.products.profile import ridge_offset
+from latelight.records import FloatArray
 from latelight.sky import pixel_scale_arcsec, position_angle_to_pixel_angle
 
 __all__ = ["Marks"]
 
 _TEXT = 16
 # Lengths on the panel, as fractions of its side.
-_ARROW, _WEDGE, _ORIGIN_LINE, _COMPASS, _SCALE_BAR = 0.19, 0.24, 0.24, 0.12, 0.30
-_MARGIN = 12
+_ARROW, _WEDGE, _ORIGIN_LINE, _COMPASS, _SCALE_BAR = 0.20, 0.30, 0.24, 0.11, 0.30
+_MARGIN = 10
+_PLATE_OPACITY = 0.8
 
 
 class Marks:
-    """Draws over one panel of a picture.
+    """Draws over one panel of a candidate's picture.
 
     Parameters
     ----------
-    picture : PIL.Image.Image
-        The RGB picture.
+    panel : PIL.Image.Image
+        The square panel, RGB, ``OVERSAMPLING`` times as large as it will be.
     cutout : Cutout
         The candidate.
-    x, y : int
-        Upper left corner of the panel.
-    side : int
-        Its side, pixels.
     """
 
-    def __init__(
-        self, picture: Image.Image, cutout: Cutout, *, x: int, y: int, side: int
-    ) -> None:
-        self._picture = picture
+    def __init__(self, panel: Image.Image, cutout: Cutout) -> None:
         self._cutout = cutout
-        self._corner = (x, y)
-        self._side = side
-        self._zoom = side / cutout.science.shape[0]
-        self._layer = Layer(side, side)
-        self._texts: list[tuple[tuple[float, float], str, str]] = []
+        self._canvas = Canvas(panel)
+        self._side = panel.width // OVERSAMPLING
+        self._zoom = self._side / cutout.science.shape[0]
+        self._texts: list[tuple[Point, str, str]] = []
+        row, trace = cutout.row, cutout.trace
+        self._x, self._y = row.x - cutout.x0, row.y - cutout.y0
+        # The trace may follow either lobe: this leads to the science epoch's.
+        self._ahead_of_trace = ridge_offset(
+            trace, x=self._x, y=self._y, angle=row.normal_angle
+        )
 
-    def finish(self) -> None:
-        """Put what was drawn on the picture."""
-        self._layer.lay_on(self._picture, *self._corner)
-        draw = ImageDraw.Draw(self._picture)
-        for (x, y), text, anchor in self._texts:
-            place = (x + self._corner[0], y + self._corner[1])
+    def finished(self) -> Image.Image:
+        """Return the panel at its final size, with its texts."""
+        panel = self._canvas.finished()
+        draw = ImageDraw.Draw(panel)
+        for place, text, anchor in self._texts:
             write(draw, place, text, size=_TEXT, anchor=anchor, halo=True)
+        return panel
 
     def ends(self, *, science: bool) -> None:
         """Mark where the arc begins and ends at one epoch, clear of the arc itself."""
-        x, y, normal = self._ridge(science=science)
+        x, y = self._ridge(science=science)
         for end, inward in ((0, 1), (-1, -2)):
             along = math.atan2(y[end] - y[inward], x[end] - x[inward])
             foot = self._panel(
                 x[end] + 3.0 * math.cos(along), y[end] + 3.0 * math.sin(along)
             )
-            angle = math.radians(normal[end])
-            tick = 8.0 * math.cos(angle), -8.0 * math.sin(angle)
-            self._layer.line(
-                [
-                    (foot[0] - tick[0], foot[1] - tick[1]),
-                    (foot[0] + tick[0], foot[1] + tick[1]),
-                ],
-                ARC,
-                width=2.0,
-            )
+            across = along + math.pi / 2.0
+            tick = 11.0 * math.cos(across), -11.0 * math.sin(across)
+            stroke = [
+                (foot[0] + side * tick[0], foot[1] + side * tick[1])
+                for side in (-1.0, 1.0)
+            ]
+            self._canvas.line(stroke, ARC, width=2.5)
 
     def trace(self) -> None:
         """Dot the ridge at the science epoch; the arc shows between the dots."""
-        x, y, _ = self._ridge(science=True)
+        x, y = self._ridge(science=True)
         path = np.array([self._panel(*point) for point in zip(x, y, strict=True)])
-        steps = np.hypot(*np.diff(path, axis=0).T)
-        along = np.append(0.0, np.cumsum(steps))
+        along = np.append(0.0, np.cumsum(np.hypot(*np.diff(path, axis=0).T)))
         places = np.arange(0.0, along[-1] + 1e-9, 11.0)
-        dots = [
-            (
-                float(np.interp(s, along, path[:, 0])),
-                float(np.interp(s, along, path[:, 1])),
-            )
-            for s in places
-        ]
-        self._layer.dots(dots, ARC, radius=1.3)
+        dots = np.stack([np.interp(places, along, axis) for axis in path.T], axis=1)
+        self._canvas.dots([(float(u), float(v)) for u, v in dots], ARC, radius=1.3)
 
     def motion(self) -> None:
         """Draw the motion as an arrow ahead of the arc, its error as a wedge."""
         row = self._cutout.row
-        tail = self._ahead(self._clearance())
+        tail = self._along_motion(self._clearance())
         err = max(row.normal_angle_err, 0.5)
         fan = [
             self._off(tail, row.normal_angle + turn, _WEDGE)
             for turn in np.linspace(-err, err, 9)
         ]
-        self._layer.fill([tail, *fan], MOTION, opacity=70)
-        self._layer.arrow(
-            tail, self._off(tail, row.normal_angle, _ARROW), MOTION, width=2.5
-        )
+        self._canvas.fill([tail, *fan], MOTION, opacity=0.35)
+        tip = self._off(tail, row.normal_angle, _ARROW)
+        self._canvas.arrow(tail, tip, MOTION, width=2.5)
 
     def origin(self) -> None:
         """Draw a broken line from behind the arc towards the best source."""
         row, wcs = self._cutout.row, self._cutout.wcs
         if not row.source or row.away_angle is None or row.normal_pa is None:
             return
-        x, y = row.x - self._cutout.x0, row.y - self._cutout.y0
         towards = position_angle_to_pixel_angle(
-            wcs, x, y, row.normal_pa - row.away_angle + 180.0
+            wcs, self._x, self._y, row.normal_pa - row.away_angle + 180.0
         )
-        start = self._ahead(-(row.shift_px or 0.0) - self._clearance())
+        start = self._along_motion(-(row.shift_px or 0.0) - self._clearance())
         end = self._off(start, towards, _ORIGIN_LINE)
-        self._layer.dashes(start, end, ORIGIN, width=2.0)
+        self._canvas.dashes(start, end, ORIGIN, width=2.0)
         self._label(self._off(end, towards, 0.03), f"to {row.source}", towards)
 
     def compass(self) -> None:
-        """Draw north and east in a corner, or +x and +y without a WCS."""
-        wcs, side = self._cutout.wcs, self._side
-        middle = (self._cutout.science.shape[0] - 1) / 2
+        """Draw north and east in a clear corner, or +x and +y without a WCS."""
+        wcs = self._cutout.wcs
         if wcs is None:
-            arms = [("x", 0.0), ("y", 90.0)]
+            arms = {"x": 0.0, "y": 90.0}
         else:
-            arms = [
-                (name, position_angle_to_pixel_angle(wcs, middle, middle, pa))
+            arms = {
+                name: position_angle_to_pixel_angle(wcs, *self._middle(), pa)
                 for name, pa in (("N", 0.0), ("E", 90.0))
-            ]
-        reach = _COMPASS * side + 16
-        # The corner of the cross, so that both arms and letters stay inside.
-        room = [
-            [max(0.0, sign * math.cos(math.radians(a))) for _, a in arms]
-            for sign in (-1.0, 1.0)
-        ]
-        rise = [
-            [max(0.0, sign * math.sin(math.radians(a))) for _, a in arms]
-            for sign in (-1.0, 1.0)
-        ]
-        foot = (
-            _MARGIN + max(room[0]) * reach,
-            side - _MARGIN - max(rise[0]) * reach,
-        )
-        for name, angle in arms:
+            }
+        reach = _COMPASS * self._side + 18.0
+        tips = [(0.0, 0.0)]
+        for angle in arms.values():
+            turn = math.radians(angle)
+            tips.append((reach * math.cos(turn), -reach * math.sin(turn)))
+        low = [min(tip[axis] for tip in tips) for axis in (0, 1)]
+        size = [max(tip[axis] for tip in tips) - low[axis] + 12.0 for axis in (0, 1)]
+        left, top = self._clear_corner(size[0], size[1])
+        self._plate(left, top, size[0], size[1])
+        foot = (left + 6.0 - low[0], top + 6.0 - low[1])
+        for name, angle in arms.items():
             end = self._off(foot, angle, _COMPASS)
-            self._layer.arrow(foot, end, INK, width=1.8)
-            x, y = self._off(end, angle, 9.0 / side)
-            self._texts.append(((x, y), name, "mm"))
+            self._canvas.arrow(foot, end, INK, width=1.8)
+            self._texts.append((self._off(end, angle, 9.0 / self._side), name, "mm"))
 
     def scale_bar(self) -> None:
         """Draw a bar of a round length in arcsec, or pixels without a WCS."""
-        wcs, side = self._cutout.wcs, self._side
-        middle = (self._cutout.science.shape[0] - 1) / 2
-        unit = 1.0 if wcs is None else pixel_scale_arcsec(wcs, middle, middle)
-        length = nice_step(_SCALE_BAR * side / self._zoom * unit)
-        width = length / unit * self._zoom
-        y = side - _MARGIN - 2
-        self._layer.line([(_MARGIN, y), (_MARGIN + width, y)], INK, width=3.0)
+        wcs = self._cutout.wcs
+        unit = 1.0 if wcs is None else pixel_scale_arcsec(wcs, *self._middle())
+        length = nice_step(_SCALE_BAR * self._side / self._zoom * unit)
+        bar = length / unit * self._zoom
         label = f"{length:g} px" if wcs is None else f"{length:g} arcsec"
-        self._texts.append(((_MARGIN + width / 2, y - 6), label, "md"))
+        width = max(bar, text_width(label, size=_TEXT)) + 16.0
+        left, top = self._clear_corner(width, 34.0)
+        self._plate(left, top, width, 34.0)
+        middle = left + width / 2.0
+        ends = [(middle - bar / 2.0, top + 27.0), (middle + bar / 2.0, top + 27.0)]
+        self._canvas.line(ends, INK, width=3.0)
+        self._texts.append(((middle, top + 20.0), label, "md"))
 
-    def _ridge(self, *, science: bool) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-        """Return the ridge at an epoch: x, y in cutout pixels and the normals."""
+    def _ridge(self, *, science: bool) -> tuple[FloatArray, FloatArray]:
+        """Return the ridge at an epoch, cutout pixels."""
         row, trace = self._cutout.row, self._cutout.trace
-        ahead = self._trace_to_row()
-        if not science:
-            ahead -= row.shift_px or 0.0
-        angle = np.radians(row.normal_angle)
-        return (
-            trace.x + ahead * np.cos(angle),
-            trace.y + ahead * np.sin(angle),
-            trace.normal_angle,
-        )
-
-    def _trace_to_row(self) -> float:
-        row, cutout = self._cutout.row, self._cutout
-        return ridge_offset(
-            cutout.trace,
-            x=row.x - cutout.x0,
-            y=row.y - cutout.y0,
-            angle=row.normal_angle,
-        )
+        ahead = self._ahead_of_trace - (0.0 if science else row.shift_px or 0.0)
+        angle = math.radians(row.normal_angle)
+        return trace.x + ahead * math.cos(angle), trace.y + ahead * math.sin(angle)
 
     def _clearance(self) -> float:
         """Return how far from a ridge its light is gone, pixels."""
         return 0.5 * self._cutout.row.width_px + 1.5 * self._cutout.fwhm_px
 
-    def _ahead(self, distance: float) -> tuple[float, float]:
-        row, cutout = self._cutout.row, self._cutout
-        angle = math.radians(row.normal_angle)
+    def _along_motion(self, distance: float) -> Point:
+        """Return the place on the panel that far ahead of the ridge, cutout pixels."""
+        angle = math.radians(self._cutout.row.normal_angle)
         return self._panel(
-            row.x - cutout.x0 + distance * math.cos(angle),
-            row.y - cutout.y0 + distance * math.sin(angle),
+            self._x + distance * math.cos(angle), self._y + distance * math.sin(angle)
         )
 
-    def _panel(self, x: float, y: float) -> tuple[float, float]:
+    def _middle(self) -> Point:
+        centre = (self._cutout.science.shape[0] - 1) / 2
+        return centre, centre
+
+    def _panel(self, x: float, y: float) -> Point:
         """Turn cutout pixels into panel pixels, y downwards."""
         return (x + 0.5) * self._zoom, self._side - (y + 0.5) * self._zoom
 
-    def _off(
-        self, start: tuple[float, float], angle: float, fraction: float
-    ) -> tuple[float, float]:
+    def _off(self, start: Point, angle: float, fraction: float) -> Point:
+        """Return the place a fraction of the side away, in a pixel direction."""
         radians = math.radians(angle)
         return (
             start[0] + fraction * self._side * math.cos(radians),
             start[1] - fraction * self._side * math.sin(radians),
         )
 
-    def _label(self, place: tuple[float, float], text: str, angle: float) -> None:
+    def _clear_corner(self, width: float, height: float) -> Point:
+        """Return the corner for a box of that size that is farthest from the arc."""
+        ridges = [self._ridge(science=science) for science in (True, False)]
+        x = np.concatenate([ridge[0] for ridge in ridges])
+        y = np.concatenate([ridge[1] for ridge in ridges])
+        arc_u, arc_v = self._panel(x, y)  # type: ignore[arg-type]
+        right, bottom = (self._side - _MARGIN - size for size in (width, height))
+        corners = [
+            (left, top) for top in (bottom, _MARGIN) for left in (_MARGIN, right)
+        ]
+
+        def distance(corner: tuple[float, float]) -> float:
+            across = arc_u - corner[0] - width / 2.0
+            down = arc_v - corner[1] - height / 2.0
+            return float(np.hypot(across, down).min())
+
+        # Prefer the lower left as long as the arc stays out of it.
+        if distance(corners[0]) > 0.75 * max(width, height):
+            return corners[0]
+        return max(corners, key=distance)
+
+    def _plate(self, left: float, top: float, width: float, height: float) -> None:
+        right, bottom = left + width, top + height
+        box = [(left, top), (right, top), (right, bottom), (left, bottom)]
+        self._canvas.fill(box, PAPER, opacity=_PLATE_OPACITY)
+
+    def _label(self, place: Point, text: str, angle: float) -> None:
         """Write at the end of a line, on the side away from it, inside the panel."""
         width = text_width(text, size=_TEXT)
         left = place[0] if math.cos(math.radians(angle)) >= 0.0 else place[0] - width
         left = min(max(left, _MARGIN), max(_MARGIN, self._side - _MARGIN - width))
-        y = min(max(place[1], 2 * _MARGIN), self._side - 2 * _MARGIN)
+        y = min(max(place[1], 2.0 * _MARGIN), self._side - 2.0 * _MARGIN)
         self._texts.append(((left, y), text, "lm"))

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import functools
 from dataclasses import dataclass
 
 import numpy as np
@@ -13,6 +14,8 @@ from latelight.records import FloatArray, MaskArray, PixelArray
 from latelight.statistics import robust_sigma
 
 __all__ = [
+    "BoolArray",
+    "ColourArray",
     "DifferenceScale",
     "colour_difference",
     "colour_epochs",
@@ -134,7 +137,7 @@ def difference_scale(
     smoothed = smooth(pixels, mask, sigma_px=smoothing_px)
     good = (mask == 0) & np.isfinite(pixels)
     sigma = _location_scale(smoothed[good])[1] if good.any() else 0.0
-    return DifferenceScale(smoothed, max(5.0 * sigma, 1.2 * brightness) or 1.0)
+    return DifferenceScale(smoothed, max(6.0 * sigma, 1.2 * brightness) or 1.0)
 
 
 def colour_difference(scale: DifferenceScale) -> ColourArray:
@@ -153,7 +156,7 @@ def diverging_colours(values: FloatArray) -> ColourArray:
 
 
 def enlarge(
-    colours: ColourArray, hatched: BoolArray, *, width: int, height: int
+    colours: ColourArray, hatched: BoolArray, *, width: int, height: int, smooth: bool
 ) -> Image.Image:
     """Scale an image to a panel, y upwards, and hatch some of its pixels.
 
@@ -165,20 +168,26 @@ def enlarge(
         Pixels to hatch: those without a usable value.
     width, height : int
         Size of the panel; when smaller than the image, pixels are averaged.
+    smooth : bool
+        When larger, blend the pixels instead of showing each as a square.
     """
-    shrinks = colours.shape[1] > width or colours.shape[0] > height
-    way = Image.Resampling.BOX if shrinks else Image.Resampling.NEAREST
     image = Image.fromarray(np.ascontiguousarray(colours[::-1]))
+    if colours.shape[1] > width or colours.shape[0] > height:
+        way = Image.Resampling.BOX
+    else:
+        way = Image.Resampling.BILINEAR if smooth else Image.Resampling.NEAREST
     panel = image.resize((width, height), way)
     if hatched.any():
         area = Image.fromarray(np.where(hatched[::-1], 255, 0).astype(np.uint8))
-        panel.paste(_hatch(width, height), mask=area.resize((width, height), way))
+        area = area.resize((width, height), Image.Resampling.NEAREST)
+        panel.paste(_hatch(width, height), mask=area)
     return panel
 
 
+@functools.cache
 def _hatch(width: int, height: int) -> Image.Image:
     x, y = np.arange(width), np.arange(height)
-    stripe = ((x[None, :] + y[:, None]) // 2 % 3 == 0)[..., None]
+    stripe = ((x[None, :] + y[:, None]) // 4 % 3 == 0)[..., None]
     return Image.fromarray(np.where(stripe, _HATCH_DARK, _HATCH_LIGHT).astype(np.uint8))
 
 

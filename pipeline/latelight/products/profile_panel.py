@@ -9,10 +9,12 @@ from PIL import Image, ImageDraw
 
 from latelight.products.drawing import (
     INK,
+    OVERSAMPLING,
+    PAPER,
     QUIET,
     RULE,
+    Canvas,
     Colour,
-    Layer,
     nice_step,
     write,
 )
@@ -82,21 +84,24 @@ def draw_profile(
         side,
         side,
     )
-    layer, draw = Layer(side, side), ImageDraw.Draw(picture)
-    _draw_frame(layer, draw, axes, corner)
+    size = (side * OVERSAMPLING, side * OVERSAMPLING)
+    canvas = Canvas(Image.new("RGB", size, PAPER))
+    _draw_frame(canvas, axes)
     where = offset * unit
     upper = [axes.at(*p) for p in zip(where, value + err, strict=True)]
     lower = [axes.at(*p) for p in zip(where, value - err, strict=True)]
-    layer.fill(upper + lower[::-1], QUIET, opacity=60)
-    layer.line([axes.at(*p) for p in zip(where, value, strict=True)], INK, width=2.0)
+    canvas.fill(upper + lower[::-1], QUIET, opacity=0.24)
+    canvas.line([axes.at(*p) for p in zip(where, value, strict=True)], INK, width=2.0)
     epochs = [("science", 0.0, _POSITIVE)]
     if shift_px is not None:
         epochs.append(("template", -shift_px * unit, _NEGATIVE))
     for _, place, colour in epochs:
-        layer.dashes(
+        canvas.dashes(
             axes.at(place, axes.y[0]), axes.at(place, axes.y[1]), colour, width=1.2
         )
-    layer.lay_on(picture, *corner)
+    picture.paste(canvas.finished(), corner)
+    draw = ImageDraw.Draw(picture)
+    _number_ticks(draw, axes, corner)
     for name, place, colour in epochs:
         ends = axes.at(place, axes.y[1] if name == "science" else axes.y[0])
         left = name == "template"
@@ -108,22 +113,26 @@ def draw_profile(
         write(draw, spot, name, size=_TEXT, colour=colour, anchor=anchor, halo=True)
 
 
-def _draw_frame(
-    layer: Layer,
-    draw: ImageDraw.ImageDraw,
-    axes: _Axes,
-    corner: tuple[int, int],
-) -> None:
-    """Draw the zero line, the ticks and their numbers."""
-    layer.line([axes.at(axes.x[0], 0.0), axes.at(axes.x[1], 0.0)], RULE, width=1.0)
+def _draw_frame(canvas: Canvas, axes: _Axes) -> None:
+    """Draw the zero line and the ticks."""
+    canvas.line([axes.at(axes.x[0], 0.0), axes.at(axes.x[1], 0.0)], RULE, width=1.0)
     for tick in _ticks(axes.x):
         x, y = axes.at(tick, axes.y[0])
-        layer.line([(x, y), (x, y + 4)], QUIET, width=1.0)
+        canvas.line([(x, y), (x, y + 4)], QUIET, width=1.0)
+    for tick in _ticks(axes.y):
+        x, y = axes.at(axes.x[0], tick)
+        canvas.line([(x - 4, y), (x, y)], QUIET, width=1.0)
+
+
+def _number_ticks(
+    draw: ImageDraw.ImageDraw, axes: _Axes, corner: tuple[int, int]
+) -> None:
+    for tick in _ticks(axes.x):
+        x, y = axes.at(tick, axes.y[0])
         spot = (corner[0] + x, corner[1] + y + 6)
         write(draw, spot, f"{tick:g}", size=_TEXT, colour=QUIET, anchor="ma")
     for tick in _ticks(axes.y):
         x, y = axes.at(axes.x[0], tick)
-        layer.line([(x - 4, y), (x, y)], QUIET, width=1.0)
         spot = (corner[0] + x - 7, corner[1] + y)
         write(draw, spot, f"{tick:g}", size=_TEXT, colour=QUIET, anchor="rm")
 

@@ -27,7 +27,7 @@ class ProductSettings(StageSettings):
         ge=0.0,
         le=5.0,
         description=(
-            "Sigma of the Gaussian that smooths differences in pictures, never in "
-            "FITS files [pixels]; 0 for none."
+            "Least sigma of the Gaussian that smooths differences in pictures, never "
+            "in FITS files; wide arcs get more [pixels]; 0 for none."
         ),
     )
