@@ -19,7 +19,7 @@ from latelight.products.rows import CandidateRow
 from latelight.products.settings import ProductSettings
 from latelight.records import ArcTrace, Difference, MaskArray, PixelArray, Plane
 
-__all__ = ["Cutout", "cut_out", "mask_cards", "write_cutout"]
+__all__ = ["Cutout", "cut_out", "mask_cards", "template_offset_px", "write_cutout"]
 
 # Sky around the arc on every side: at least this, and this many PSF widths.
 _CONTEXT_PX = 20
@@ -44,7 +44,7 @@ CARDS = {
     "normal_pa_err": ("MOVEPAER", "1 sigma"),
     "speed": ("SPEED", "along the normal"),
     "speed_err": ("SPEEDERR", "1 sigma"),
-    "source": ("ORIGIN_S", "best listed source"),
+    "source": ("SOURCE", "best listed source"),
     "away_angle": ("AWAYANG", "motion minus away from source"),
     "score": ("SCORE", "log10 likelihood ratio of source"),
     "dust_depth": ("DEPTH", "dust, + towards observer"),
@@ -114,6 +114,16 @@ class Cutout:
     def snr(self) -> PixelArray:
         """Difference over its 1 sigma, pixel by pixel."""
         return np.divide(self.difference, np.sqrt(self.variance), dtype=np.float32)
+
+
+def template_offset_px(row: CandidateRow) -> float:
+    """Return how far the template's ridge lies ahead of the science's, pixels.
+
+    Along the motion, so negative when the template is the earlier epoch; 0 when
+    only one lobe shows.
+    """
+    shift = row.shift_px or 0.0
+    return -shift if row.mjd_science >= row.mjd_template else shift
 
 
 def cut_out(
@@ -241,11 +251,11 @@ def _window(
 ) -> tuple[int, int, int]:
     """Return the first column, first row and side of the square to cut."""
     radians = np.radians(row.normal_angle)
-    shift = row.shift_px or 0.0
-    x = np.append(trace.x, [row.x, row.x - shift * np.cos(radians)])
-    y = np.append(trace.y, [row.y, row.y - shift * np.sin(radians)])
+    shift = template_offset_px(row)
+    x = np.append(trace.x, [row.x, row.x + shift * np.cos(radians)])
+    y = np.append(trace.y, [row.y, row.y + shift * np.sin(radians)])
     extent = max(np.ptp(x), np.ptp(y))
-    context = max(_CONTEXT_PX, _CONTEXT_FWHM * fwhm_px, shift)
+    context = max(_CONTEXT_PX, _CONTEXT_FWHM * fwhm_px, abs(shift))
     half = int(min(np.ceil(extent / 2 + context), (longest - 1) // 2))
     centre_x, centre_y = (x.min() + x.max()) / 2, (y.min() + y.max()) / 2
     return round(centre_x) - half, round(centre_y) - half, 2 * half + 1

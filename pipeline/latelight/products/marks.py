@@ -7,7 +7,7 @@ import math
 import numpy as np
 from PIL import Image, ImageDraw
 
-from latelight.products.cutouts import Cutout
+from latelight.products.cutouts import Cutout, template_offset_px
 from latelight.products.drawing import (
     ARC,
     INK,
@@ -57,6 +57,7 @@ class Marks:
         self._ahead_of_trace = ridge_offset(
             trace, x=self._x, y=self._y, angle=row.normal_angle
         )
+        self._template_ahead = template_offset_px(row)
 
     def finished(self) -> Image.Image:
         """Return the panel at its final size, with its texts."""
@@ -94,7 +95,7 @@ class Marks:
     def motion(self) -> None:
         """Draw the motion as an arrow ahead of the arc, its error as a wedge."""
         row = self._cutout.row
-        tail = self._along_motion(self._clearance())
+        tail = self._along_motion(max(self._template_ahead, 0.0) + self._clearance())
         err = max(row.normal_angle_err, 0.5)
         fan = [
             self._off(tail, row.normal_angle + turn, _WEDGE)
@@ -112,7 +113,7 @@ class Marks:
         towards = position_angle_to_pixel_angle(
             wcs, self._x, self._y, row.normal_pa - row.away_angle + 180.0
         )
-        start = self._along_motion(-(row.shift_px or 0.0) - self._clearance())
+        start = self._along_motion(min(self._template_ahead, 0.0) - self._clearance())
         end = self._off(start, towards, _ORIGIN_LINE)
         self._canvas.dashes(start, end, ORIGIN, width=2.0)
         self._label(self._off(end, towards, 0.03), f"to {row.source}", towards)
@@ -159,9 +160,9 @@ class Marks:
 
     def _ridge(self, *, science: bool) -> tuple[FloatArray, FloatArray]:
         """Return the ridge at an epoch, cutout pixels."""
-        row, trace = self._cutout.row, self._cutout.trace
-        ahead = self._ahead_of_trace - (0.0 if science else row.shift_px or 0.0)
-        angle = math.radians(row.normal_angle)
+        trace = self._cutout.trace
+        ahead = self._ahead_of_trace + (0.0 if science else self._template_ahead)
+        angle = math.radians(self._cutout.row.normal_angle)
         return trace.x + ahead * math.cos(angle), trace.y + ahead * math.sin(angle)
 
     def _clearance(self) -> float:

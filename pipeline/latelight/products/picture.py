@@ -15,7 +15,7 @@ from PIL import Image, ImageDraw
 
 from latelight.products.atomic import write_bytes
 from latelight.products.captions import calendar_date, facts, interval
-from latelight.products.cutouts import Cutout
+from latelight.products.cutouts import Cutout, template_offset_px
 from latelight.products.drawing import (
     INK,
     OVERSAMPLING,
@@ -197,8 +197,7 @@ def _draw_difference(picture: Image.Image, cutout: Cutout, smoothing_px: float) 
 
 def _draw_profile(picture: Image.Image, cutout: Cutout) -> None:
     row = cutout.row
-    shift = row.shift_px or 0.0
-    reach = 0.5 * shift + max(
+    reach = 0.5 * abs(template_offset_px(row)) + max(
         _REACH_FWHM * cutout.fwhm_px, row.width_px + _REACH_FWHM, _REACH_PX
     )
     middle = (cutout.science.shape[0] - 1) / 2
@@ -210,7 +209,7 @@ def _draw_profile(picture: Image.Image, cutout: Cutout) -> None:
         corner=(_left(3), _TOP),
         side=_SIDE,
         unit=unit,
-        shift_px=row.shift_px,
+        template_px=None if row.shift_px is None else template_offset_px(row),
     )
     _write_caption(picture, 3, "difference averaged along the arc")
     name = "pixels" if wcs is None else "arcsec"

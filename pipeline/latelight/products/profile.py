@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from latelight.products.cutouts import Cutout
+from latelight.products.cutouts import Cutout, template_offset_px
 from latelight.records import ArcTrace, FloatArray
 from latelight.straighten import straighten
 
@@ -70,7 +70,7 @@ def measure_profile(cutout: Cutout, *, reach_px: float) -> NormalProfile:
     ahead = ridge_offset(
         trace, x=row.x - cutout.x0, y=row.y - cutout.y0, angle=row.normal_angle
     )
-    centre = -0.5 * (row.shift_px or 0.0)
+    centre = 0.5 * template_offset_px(row)
     offset = np.arange(np.floor(centre - reach_px), np.ceil(centre + reach_px) + 1.0)
     lines = sense * (offset + ahead)
 

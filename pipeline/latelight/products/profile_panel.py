@@ -53,7 +53,7 @@ def draw_profile(
     corner: tuple[int, int],
     side: int,
     unit: float,
-    shift_px: float | None,
+    template_px: float | None,
 ) -> None:
     """Plot a profile with its 1-sigma band and the ridges of both epochs.
 
@@ -69,8 +69,8 @@ def draw_profile(
         Its side, pixels.
     unit : float
         Axis units (arcsec) per pixel; 1 to label pixels.
-    shift_px : float or None
-        Distance from the template's ridge to the science's, pixels.
+    template_px : float or None
+        The template's ridge ahead of the science's, pixels; None when not seen.
     """
     good = np.isfinite(profile.value)
     offset, value, err = (a[good] for a in (profile.offset, profile.value, profile.err))
@@ -93,8 +93,8 @@ def draw_profile(
     canvas.fill(upper + lower[::-1], QUIET, opacity=0.24)
     canvas.line([axes.at(*p) for p in zip(where, value, strict=True)], INK, width=2.0)
     epochs = [("science", 0.0, _POSITIVE)]
-    if shift_px is not None:
-        epochs.append(("template", -shift_px * unit, _NEGATIVE))
+    if template_px is not None:
+        epochs.append(("template", template_px * unit, _NEGATIVE))
     for _, place, colour in epochs:
         canvas.dashes(
             axes.at(place, axes.y[0]), axes.at(place, axes.y[1]), colour, width=1.2
@@ -103,13 +103,15 @@ def draw_profile(
     draw = ImageDraw.Draw(picture)
     _number_ticks(draw, axes, corner)
     for name, place, colour in epochs:
-        ends = axes.at(place, axes.y[1] if name == "science" else axes.y[0])
-        left = name == "template"
+        # Words on the outer side of the two lines, at the end where they are free.
+        left = place < max(line[1] for line in epochs)
+        top = name == "science"
+        ends = axes.at(place, axes.y[1] if top else axes.y[0])
         spot = (
             corner[0] + ends[0] + (-6 if left else 6),
-            corner[1] + ends[1] + (-4 if left else 4),
+            corner[1] + ends[1] + (4 if top else -4),
         )
-        anchor = "rd" if left else "la"
+        anchor = ("r" if left else "l") + ("a" if top else "d")
         write(draw, spot, name, size=_TEXT, colour=colour, anchor=anchor, halo=True)
 
 

@@ -23,7 +23,7 @@ from latelight.products.drawing import (
     text_width,
     write,
 )
-from latelight.products.fits_file import ascii_text, fits_bytes
+from latelight.products.fits_file import fits_bytes
 from latelight.products.panels import colour_difference, difference_scale, enlarge
 from latelight.products.picture import draw_colour_bar, png_bytes
 from latelight.products.rows import CandidateRow
@@ -44,9 +44,7 @@ _BOX_MARGIN_PX = 14.0
 _SMALL, _TEXT, _NAME = 14, 17, 24
 
 
-def write_difference(
-    path: Path, difference: Difference, *, pair: str, wcs: Any
-) -> None:
+def write_difference(path: Path, difference: Difference, *, wcs: Any) -> None:
     """Write a difference as tile-compressed FITS with checksums.
 
     DIFFERENCE is quantised to 1/16 of its noise with subtractive dithering (fixed
@@ -59,8 +57,6 @@ def write_difference(
         The file.
     difference : Difference
         What to write.
-    pair : str
-        Name of the pair.
     wcs : astropy.wcs.WCS or None
         WCS of the science frame.
 
@@ -81,7 +77,6 @@ def write_difference(
         dither_seed=_DITHER_SEED,
     )
     image.header["BUNIT"] = "count"
-    image.header["PAIR"] = (ascii_text(pair), "name of the pair")
     image.header["METHOD"] = (difference.method, "of the subtraction")
     image.header["FWHMPIX"] = (round(difference.fwhm_px, 4), "[pix] width of the PSF")
     if np.isfinite(difference.noise_ratio):
@@ -159,7 +154,7 @@ def draw_difference(
         height=height * OVERSAMPLING,
         smooth=smoothing > 0.0,
     )
-    ordered = sorted(rows, key=lambda row: (-row.snr, row.id))
+    ordered = sorted(rows, key=lambda row: (-row.snr, row.x, row.y))
     boxed = _boxed(panel, ordered, zoom=zoom)
     # Narrow frames still leave room for the words.
     size = (max(width, 640) + 2 * _EDGE, height + _HEAD + _FOOT)
