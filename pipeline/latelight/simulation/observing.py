@@ -3,11 +3,10 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
-from astropy.io import fits
 
+from latelight.records import Source
 from latelight.simulation.artefacts import (
     add_trail,
     random_trail,
@@ -28,7 +27,7 @@ from latelight.simulation.objects import (
 )
 from latelight.simulation.truth import FrameTruth, PairTruth
 
-__all__ = ["Clutter", "Scene", "SimulatedFrame", "observe", "pair_truth"]
+__all__ = ["Clutter", "Scene", "observe", "pair_truth"]
 
 # Points along the path of a moving body during one exposure.
 MOVER_STEPS = 9
@@ -68,31 +67,14 @@ class Scene:
     echoes: tuple[Echo, ...]
 
 
-@dataclass(frozen=True, slots=True)
-class SimulatedFrame:
-    """One frame as a telescope delivers it.
-
-    Attributes
-    ----------
-    pixels : uint16 array, shape (ny, nx)
-        Counts, sky included.
-    header : astropy.io.fits.Header
-        Its header; the world coordinates there may be slightly wrong.
-    """
-
-    pixels: np.ndarray
-    header: Any
-
-
 def observe(
     scene: Scene,
     exposure: Exposure,
     *,
     epoch: int,
     clutter: Clutter,
-    header: fits.Header,
     rng: np.random.Generator,
-) -> tuple[SimulatedFrame, FrameTruth]:
+) -> tuple[np.ndarray, FrameTruth]:
     """Take one exposure of a scene.
 
     Parameters
@@ -105,10 +87,15 @@ def observe(
         Row of the scene's magnitudes to use.
     clutter : Clutter
         Trails, cosmic rays and movers to draw.
-    header : astropy.io.fits.Header
-        Header of the frame.
     rng : numpy.random.Generator
         Draws clutter and noise.
+
+    Returns
+    -------
+    pixels : uint16 array, shape (ny, nx)
+        Counts, sky included.
+    truth : FrameTruth
+        What went into them.
     """
     camera = exposure.camera
     image = exposure.sky()
@@ -154,7 +141,7 @@ def observe(
         movers=movers[:, :3],
         ghosts=ghosts,
     )
-    return SimulatedFrame(pixels=pixels, header=header), truth
+    return pixels, truth
 
 
 def pair_truth(
@@ -162,7 +149,7 @@ def pair_truth(
     *,
     science: tuple[Exposure, FrameTruth],
     template: tuple[Exposure, FrameTruth],
-    sources: tuple[Any, ...],
+    sources: tuple[Source, ...],
 ) -> PairTruth:
     """Put the truth of two exposures of one scene together.
 

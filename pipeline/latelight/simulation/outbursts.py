@@ -69,6 +69,7 @@ def random_outburst(
     dec: float,
     mjd: float,
     far: bool,
+    clear_deg: float,
 ) -> Outburst:
     """Draw an outburst outside a field whose echoes there move at usual speeds.
 
@@ -84,11 +85,14 @@ def random_outburst(
         When its age holds.
     far : bool
         At 42-58 kpc; otherwise at 2.5-10 kpc.
+    clear_deg : float
+        Least distance from the centre, so that it lies outside the field, degrees.
     """
     while True:
         distance = rng.uniform(42e3, 58e3) if far else 2.5e3 * 4.0 ** rng.random()
         age = 10.0 ** rng.uniform(2.0, 2.95)
         away = rng.uniform(0.25, 1.2) if far else rng.uniform(0.6, 4.0)
+        away = max(away, clear_deg)
         place = offset_position(ra, dec, rng.uniform(0.0, 360.0), away)
         source = Source(
             name=name,

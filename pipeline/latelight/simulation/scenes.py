@@ -7,6 +7,7 @@ from pathlib import Path
 from typing import Literal
 
 import numpy as np
+from astropy.io import fits
 
 from latelight.simulation.astrometry import frame_wcs, misstate
 from latelight.simulation.echoes import Echo
@@ -15,7 +16,6 @@ from latelight.simulation.objects import random_galaxies, random_stars
 from latelight.simulation.observing import (
     Clutter,
     Scene,
-    SimulatedFrame,
     observe,
     pair_truth,
 )
@@ -28,9 +28,20 @@ from latelight.simulation.outbursts import (
     random_outburst,
 )
 from latelight.simulation.truth import PairTruth
-from latelight.simulation.writing import STANDARD_WORDS, frame_header, write_hdus
+from latelight.simulation.writing import (
+    STANDARD_WORDS,
+    chip_words,
+    exposure_words,
+    write_image,
+)
 
-__all__ = ["SimulatedPair", "random_camera", "random_exposure", "random_pair"]
+__all__ = [
+    "SimulatedFrame",
+    "SimulatedPair",
+    "random_camera",
+    "random_exposure",
+    "random_pair",
+]
 
 Kind = Literal["echoes", "nuisances"]
 
@@ -41,6 +52,22 @@ MARGIN_ARCSEC = 30.0
 ZERO_POINT = 28.8
 EXPOSURE_S = 120.0
 OBSERVATORY = "Larkspur Hill 1.5-m"
+
+
+@dataclass(frozen=True, slots=True)
+class SimulatedFrame:
+    """One frame as a telescope delivers it.
+
+    Attributes
+    ----------
+    pixels : uint16 array, shape (ny, nx)
+        Counts, sky included.
+    header : astropy.io.fits.Header
+        Its header; the world coordinates there may be slightly wrong.
+    """
+
+    pixels: np.ndarray
+    header: fits.Header
 
 
 @dataclass(frozen=True, slots=True)
@@ -60,15 +87,19 @@ class SimulatedPair:
     truth: PairTruth
 
     def write(self, folder: Path) -> tuple[Path, Path]:
-        """Write ``template.fits`` and ``science.fits``; return their paths."""
-        return tuple(  # type: ignore[return-value]
-            write_hdus(
-                Path(folder) / f"{name}.fits",
-                [("", frame.pixels, frame.header)],
-                primary=frame.header,
-            )
+        """Write ``template.fits`` and ``science.fits``; return their paths.
+
+        Raises
+        ------
+        ProductError
+            If a file cannot be written.
+        """
+        folder = Path(folder)
+        template, science = (
+            write_image(folder / f"{name}.fits", frame.pixels, frame.header)
             for name, frame in (("template", self.template), ("science", self.science))
         )
+        return template, science
 
 
 def random_pair(
@@ -114,7 +145,8 @@ def random_pair(
     camera = random_camera(conditions, (size, size), many_columns=kind == "nuisances")
     ra, dec = conditions.uniform(0.0, 360.0), conditions.uniform(-65.0, 65.0)
     mjd = conditions.uniform(60_000.0, 61_500.0)
-    outbursts = _random_outbursts(conditions, ra, dec, mjd)
+    diagonal = size * camera.scale_arcsec / 3600.0 * np.sqrt(0.5)
+    outbursts = _random_outbursts(conditions, ra, dec, mjd, 1.2 * diagonal)
     days = _random_interval(conditions, outbursts, ra, dec, mjd)
     sharp = conditions.uniform(1.0, 1.4) / camera.scale_arcsec
     broad = sharp * conditions.uniform(1.06, 1.4)
@@ -147,9 +179,6 @@ def random_pair(
             exposure,
             epoch=epoch,
             clutter=_random_clutter(rng, size, kind),
-            header=frame_header(
-                exposure, words=STANDARD_WORDS, observatory=OBSERVATORY
-            ),
             rng=rng,
         )
         for epoch, (exposure, rng) in enumerate(((template, first), (science, second)))
@@ -160,7 +189,11 @@ def random_pair(
         template=(template, taken[0][1]),
         sources=tuple(o.source for o in outbursts),
     )
-    return SimulatedPair(template=taken[0][0], science=taken[1][0], truth=truth)
+    template_frame, science_frame = (
+        SimulatedFrame(pixels=pixels, header=_standard_header(exposure))
+        for exposure, (pixels, _) in zip((template, science), taken, strict=True)
+    )
+    return SimulatedPair(template=template_frame, science=science_frame, truth=truth)
 
 
 def random_camera(
@@ -200,6 +233,7 @@ def random_exposure(
     fwhm_px: float,
     field: str,
     filter_word: str = "r",
+    chip_offset_px: tuple[float, float] = (0.0, 0.0),
 ) -> Exposure:
     """Draw the conditions of one exposure of a field.
 
@@ -217,6 +251,9 @@ def random_exposure(
         Seeing, pixels.
     field, filter_word : str
         Words for the header.
+    chip_offset_px : (float, float)
+        Where the pointing falls from the chip's centre, x and y, pixels.  The same
+        ``rng`` state with another offset makes the next chip of one exposure.
     """
     # The optics' own distortion, and a little that changes with every exposure.
     own = np.array([2.0, 0.3, 0.5, -0.3, 0.2, -0.4, 0.25, 0.3])
@@ -229,7 +266,10 @@ def random_exposure(
         shape=camera.shape,
         scale_arcsec=camera.scale_arcsec,
         rotation_deg=float(turn),
-        offset_px=(float(rng.uniform(-15, 15)), float(rng.uniform(-15, 15))),
+        offset_px=(
+            chip_offset_px[0] + float(rng.uniform(-15.0, 15.0)),
+            chip_offset_px[1] + float(rng.uniform(-15.0, 15.0)),
+        ),
         distortion=distortion,
     )
     stated = misstate(
@@ -256,13 +296,21 @@ def random_exposure(
     )
 
 
+def _standard_header(exposure: Exposure) -> fits.Header:
+    header = exposure_words(exposure, words=STANDARD_WORDS, observatory=OBSERVATORY)
+    header.update(chip_words(exposure, words=STANDARD_WORDS))
+    return header
+
+
 def _random_outbursts(
-    rng: np.random.Generator, ra: float, dec: float, mjd: float
+    rng: np.random.Generator, ra: float, dec: float, mjd: float, clear_deg: float
 ) -> tuple[Outburst, ...]:
     far = rng.random() < 0.5
     count = 2 if rng.random() < 0.15 else 1
     return tuple(
-        random_outburst(rng, name=name, ra=ra, dec=dec, mjd=mjd, far=far)
+        random_outburst(
+            rng, name=name, ra=ra, dec=dec, mjd=mjd, far=far, clear_deg=clear_deg
+        )
         for name in ("outburst A", "outburst B")[:count]
     )
 

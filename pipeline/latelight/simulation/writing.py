@@ -4,15 +4,27 @@ from __future__ import annotations
 
 import gzip
 import io
+from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 from astropy.io import fits
-from astropy.time import Time
 
+from latelight.errors import ProductError
 from latelight.simulation.exposures import Exposure
 
-__all__ = ["STANDARD_WORDS", "frame_header", "write_hdus"]
+__all__ = [
+    "STANDARD_WORDS",
+    "ImageExtension",
+    "chip_words",
+    "exposure_words",
+    "write_extensions",
+    "write_image",
+]
+
+SECONDS_PER_DAY = 86_400.0
+MJD_TO_JD = 2_400_000.5
 
 STANDARD_WORDS = {
     "mjd": "MJD-OBS",
@@ -26,86 +38,151 @@ STANDARD_WORDS = {
 }
 
 
-def frame_header(
+@dataclass(frozen=True, slots=True)
+class ImageExtension:
+    """One image of a file.
+
+    Attributes
+    ----------
+    name : str
+        EXTNAME; empty for none.
+    version : int
+        EXTVER: chip number; 0 for none.
+    pixels : uint16 or uint8 array, shape (ny, nx)
+        Counts, or a mask.
+    header : astropy.io.fits.Header
+        Its own words.
+    """
+
+    name: str
+    version: int
+    pixels: np.ndarray
+    header: fits.Header
+
+
+def exposure_words(
     exposure: Exposure, *, words: dict[str, str], observatory: str
 ) -> fits.Header:
-    """Return the header of a frame, with the WCS as it is stated.
+    """Return the header words that hold for a whole exposure.
 
     Parameters
     ----------
     exposure : Exposure
         The exposure.
     words : dict
-        The observatory's word for each of the keys of ``STANDARD_WORDS``.
+        The observatory's word for each of the keys of ``STANDARD_WORDS``.  A word
+        for the time that contains ``JD`` but not ``MJD`` gets a Julian date.
     observatory : str
         Its name.
     """
-    camera = exposure.camera
-    start = exposure.mjd - 0.5 * exposure.exposure_s / 86_400.0
+    start = exposure.mjd - 0.5 * exposure.exposure_s / SECONDS_PER_DAY
+    word = words["mjd"]
+    scale = "MJD" if "MJD" in word or "JD" not in word else "JD"
     header = fits.Header()
-    header["TELESCOP"] = (observatory, "invented; simulated frame")
+    header["TELESCOP"] = (observatory, "invented: a simulated frame")
     header[words["field"]] = (exposure.field, "field")
     header[words["filter"]] = (exposure.filter, "filter")
-    header[words["mjd"]] = (round(start, 7), "start of exposure, MJD UTC")
-    header["DATE-OBS"] = (Time(start, format="mjd").isot, "start of exposure, UTC")
-    header[words["exposure"]] = (exposure.exposure_s, "[s] exposure time")
-    header[words["gain"]] = (camera.gain, "[electron/adu]")
-    header[words["read_noise"]] = (camera.read_noise, "[electron] 1 sigma")
-    header[words["saturation"]] = (camera.saturation, "[adu] full well")
-    header[words["zero_point"]] = (
-        round(exposure.zero_point, 3),
-        "[mag] of one count",
+    header[word] = (
+        round(start if scale == "MJD" else start + MJD_TO_JD, 7),
+        f"start of exposure, {scale} UTC",
     )
-    header["BUNIT"] = "adu"
-    header.update(exposure.stated_wcs.to_header(relax=True))
+    header[words["exposure"]] = (exposure.exposure_s, "[s] exposure time")
     return header
 
 
-def write_hdus(
-    path: Path,
-    images: list[tuple[str, np.ndarray, fits.Header]],
-    *,
-    primary: fits.Header,
+def chip_words(exposure: Exposure, *, words: dict[str, str]) -> fits.Header:
+    """Return the header words of one detector, with the WCS as it is stated."""
+    camera = exposure.camera
+    header = fits.Header()
+    header[words["gain"]] = (camera.gain, "[electron/adu]")
+    header[words["read_noise"]] = (camera.read_noise, "[electron] 1 sigma")
+    header[words["saturation"]] = (camera.saturation, "[adu] full well")
+    header[words["zero_point"]] = (round(exposure.zero_point, 3), "[mag] of one count")
+    header["BUNIT"] = "adu"
+    header.update(_world_words(exposure.stated_wcs))
+    return header
+
+
+def write_image(path: Path, pixels: np.ndarray, header: fits.Header) -> Path:
+    """Write one 16-bit image: primary HDU, or first extension of a ``.fits.fz``.
+
+    Raises
+    ------
+    ProductError
+        If the file cannot be written.
+    """
+    if path.suffix == ".fz":
+        image = ImageExtension(name="", version=0, pixels=pixels, header=header)
+        return write_extensions(path, [image], primary=fits.Header())
+    return _write(path, [fits.PrimaryHDU(pixels, header)])
+
+
+def write_extensions(
+    path: Path, images: list[ImageExtension], *, primary: fits.Header
 ) -> Path:
-    """Write 16-bit images to a FITS file.
+    """Write images as extensions.
 
     Parameters
     ----------
     path : Path
         ``.fits``, ``.fits.gz`` or ``.fits.fz`` (tile-compressed, lossless).
-    images : list of (name, pixels, header)
-        With one image and no name, it is the primary HDU (an extension in
-        ``.fits.fz``).
-    primary : fits.Header
-        Header of the primary HDU when the images are extensions.
+    images : list of ImageExtension
+        The images, in order.
+    primary : astropy.io.fits.Header
+        Words that hold for all of them.
 
     Returns
     -------
     Path
         ``path``.
+
+    Raises
+    ------
+    ProductError
+        If the file cannot be written.
     """
-    compressed = path.suffix == ".fz"
-    hdus: list[fits.hdu.base._BaseHDU]
-    if len(images) == 1 and not images[0][0] and not compressed:
-        hdus = [fits.PrimaryHDU(images[0][1], images[0][2])]
-    else:
-        hdus = [fits.PrimaryHDU(header=primary)]
-        for name, pixels, header in images:
-            # Masks, one byte a pixel, run in long rows of zeros: gzip suits them.
-            algorithm = "RICE_1" if pixels.dtype == np.uint16 else "GZIP_1"
+    hdus: list[Any] = [fits.PrimaryHDU(header=primary)]
+    for image in images:
+        header = image.header.copy()
+        if image.name:
+            header["EXTNAME"] = image.name
+        if image.version:
+            header["EXTVER"] = image.version
+        if path.suffix == ".fz":
             hdus.append(
-                fits.CompImageHDU(
-                    pixels, header, name=name or None, compression_type=algorithm
-                )
-                if compressed
-                else fits.ImageHDU(pixels, header, name=name or None)
+                fits.CompImageHDU(image.pixels, header, compression_type="RICE_1")
             )
+        else:
+            hdus.append(fits.ImageHDU(image.pixels, header))
+    return _write(path, hdus)
+
+
+def _write(path: Path, hdus: list[Any]) -> Path:
     buffer = io.BytesIO()
     fits.HDUList(hdus).writeto(buffer)
     data = buffer.getvalue()
     if path.suffix == ".gz":
         # No file name and no time in the gzip header: the bytes are the content's.
         data = gzip.compress(data, compresslevel=9, mtime=0)
-    path.parent.mkdir(parents=True, exist_ok=True)
-    path.write_bytes(data)
+    try:
+        path.parent.mkdir(parents=True, exist_ok=True)
+        path.write_bytes(data)
+    except OSError as error:
+        reason = f"{error.strerror or error}; choose a folder that can be written"
+        raise ProductError(path, reason) from None
     return path
+
+
+def _world_words(wcs: Any) -> fits.Header:
+    """Return a WCS as header words, with a CD matrix."""
+    words = wcs.to_header(relax=True)
+    matrix = {
+        (i, j): words.pop(f"PC{i}_{j}", float(i == j)) for i in (1, 2) for j in (1, 2)
+    }
+    for axis in (1, 2):
+        step = words.pop(f"CDELT{axis}")
+        for j in (1, 2):
+            words[f"CD{axis}_{j}"] = (step * matrix[axis, j], "[deg/pixel]")
+    for word in ("MJDREF", "LONPOLE", "LATPOLE"):
+        words.pop(word, None)
+    return words
