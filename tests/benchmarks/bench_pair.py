@@ -28,7 +28,8 @@ STARS_PER_PIXEL = 10_000 / 2048**2
 def settings_text(folder, pair, sources):
     """Return a settings file for one pair."""
     text = (
-        f'[night]\nframes = ["{pair}/science.fits"]\noutput = "{folder}/out-{pair.name}"'
+        f'[night]\nframes = ["{pair}/science.fits"]\n'
+        f'output = "{folder}/out-{pair.name}"'
         f'\n[pairs]\ntemplate = "{pair}/template.fits"\n'
     )
     for source in sources:

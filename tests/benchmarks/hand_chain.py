@@ -125,7 +125,7 @@ def main():
                 "seconds": seconds,
                 "total": round(sum(seconds.values()), 3),
                 "peak_gb": round(peak, 3),
-                "n_ridges": n_ridges,
+                "n_ridges": int(n_ridges),
             }
         )
     )
