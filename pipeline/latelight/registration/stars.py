@@ -35,12 +35,14 @@ __all__ = ["detect_stars"]
 _STAGE = "registration"
 _FWHM_OF_SIGMA = 2.0 * np.sqrt(2.0 * np.log(2.0))
 _SATURATED = int(MaskBit.SATURATED | MaskBit.BLEED | MaskBit.SPIKE)
-_DEBLEND_LEVELS, _DEBLEND_CONTRAST = 16, 0.02
+_DEBLEND_LEVELS, _DEBLEND_CONTRAST = 32, 0.005
 # Widths of this many bright stars set the window.
 _WINDOW_STARS, _WINDOW_ROUNDS = 300, 6
+# A narrower window would see one pixel of an undersampled star.
+_MIN_WINDOW_PX = 0.7
 _APERTURE_FWHM = 1.5
 # A neighbour this near (FWHM) with this share of the flux spoils a centroid.
-_NEIGHBOUR_FWHM, _NEIGHBOUR_SHARE = 2.5, 0.1
+_NEIGHBOUR_FWHM, _NEIGHBOUR_SHARE = 2.0, 0.1
 # Star-like: width and elongation within so many sigmas of the stars around, the
 # noise of a star's own logarithm (in units of 1 / SNR; measured on Moffat stars,
 # 0.6-0.9 and 1.4-1.8) added, and no gate narrower than a PSF's changes.
@@ -87,10 +89,9 @@ def detect_stars(plane: Plane, *, settings: RegistrationSettings) -> StarList:
     order = np.argsort(-moments.flux, kind="stable")
     moments, peak = moments.take(order), found["peak"][order].astype(float)
     saturated = (moments.bits & _SATURATED) != 0
-    # sep's flags: deblended, cut off by the frame's edge.
-    flawed = (found["flag"][order] & (sep.OBJ_MERGED | sep.OBJ_TRUNC)) != 0
+    cut_off = (found["flag"][order] & sep.OBJ_TRUNC) != 0
     candidate = (
-        ~flawed
+        ~cut_off
         & (moments.bits == 0)
         & (moments.flux > settings.clean_snr * moments.flux_err)
         & np.isfinite(moments.fwhm)
@@ -195,7 +196,8 @@ def _window_sigma(
         good = np.isfinite(moments.fwhm) & ((moments.bits & _SATURATED) == 0)
         if not good.any():
             break
-        last, sigma = sigma, float(np.median(moments.fwhm[good])) / _FWHM_OF_SIGMA
+        width = float(np.median(moments.fwhm[good])) / _FWHM_OF_SIGMA
+        last, sigma = sigma, max(width, _MIN_WINDOW_PX)
         if abs(sigma - last) < 0.005 * last:
             break
     return sigma
