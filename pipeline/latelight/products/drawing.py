@@ -105,12 +105,12 @@ class Canvas:
     def arrow(self, start: Point, end: Point, colour: Colour, *, width: float) -> None:
         """Draw an arrow from start to end."""
         angle = math.atan2(end[1] - start[1], end[0] - start[0])
-        head = 5.0 * width
+        head = 6.0 * width
         neck = (end[0] - head * math.cos(angle), end[1] - head * math.sin(angle))
         barbs = [
             (
-                neck[0] + side * 0.5 * head * math.sin(angle),
-                neck[1] - side * 0.5 * head * math.cos(angle),
+                neck[0] + side * 0.36 * head * math.sin(angle),
+                neck[1] - side * 0.36 * head * math.cos(angle),
             )
             for side in (-1.0, 1.0)
         ]
