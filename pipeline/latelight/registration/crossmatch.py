@@ -112,7 +112,8 @@ def fit_affine(first: FloatArray, second: FloatArray) -> Affine:
     design = np.column_stack([np.ones(first.shape[0]), first - center])
     kept = np.ones(first.shape[0], dtype=bool)
     for _ in range(5):
-        solution = np.linalg.lstsq(design[kept], second[kept], rcond=None)[0]
+        normal = np.linalg.pinv(design[kept].T @ design[kept], hermitian=True)
+        solution = normal @ (design[kept].T @ second[kept])
         miss = np.hypot(*(second - design @ solution).T)
         now = miss <= 3.0 * np.median(miss[kept]) + 1e-6
         if now.sum() < 4 or np.array_equal(now, kept):

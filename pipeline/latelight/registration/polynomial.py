@@ -152,8 +152,8 @@ def fit_surface(
         if near.sum() < 5 * _n_terms(degree):
             break
         design = terms(places, shape, degree)
-        solution = np.linalg.lstsq(design[near], values[near], rcond=None)[0]
-        surface = design @ solution
+        solution, _ = _solve(design, values[:, None], np.ones(values.size), near)
+        surface = design @ solution[:, 0]
     return surface
 
 

@@ -18,9 +18,10 @@ class RegistrationSettings(StageSettings):
         128, ge=16, description="Side of the boxes the sky level is measured in, px."
     )
     detect_sigma: float = Field(
-        3.0,
+        2.5,
         gt=0.0,
-        description="Height of a detected pixel over the noise of its place, sigma.",
+        description="Height of a detected pixel, 3 x 3 smoothed, over the noise of "
+        "one pixel, sigma.",
     )
     min_area_px: int = Field(
         5, ge=1, description="Fewest connected pixels of a detection, px."
