@@ -24,3 +24,28 @@ def rng():
     return np.random.default_rng(
         int(os.environ.get("LATELIGHT_TEST_SEED", DEFAULT_SEED))
     )
+
+
+@pytest.fixture(scope="session")
+def small_night(tmp_path_factory):
+    """Write a folder of two small fields, two epochs each; do not change it.
+
+    ``frames/`` holds A_1, A_2, B_1 and B_2 (``.fits``); field A has echoes of the
+    sources in ``sources.ecsv``, which ``night.toml`` names.
+    """
+    from latelight.simulation.scenes import random_pair
+    from latelight.simulation.tables import source_rows, write_table
+
+    folder = tmp_path_factory.mktemp("small_night")
+    for field, seed, kind in (("A", 5, "echoes"), ("B", 6, "nuisances")):
+        pair = random_pair(seed, kind=kind, size=384)
+        for path, epoch in zip(pair.write(folder / "frames"), (1, 2), strict=True):
+            path.rename(path.with_name(f"{field}_{epoch}.fits"))
+        if field == "A":
+            rows = source_rows(pair.truth.sources)
+            write_table(folder / "sources.ecsv", rows)
+    (folder / "night.toml").write_text(
+        '[night]\nframes = ["frames/*.fits*"]\noutput = "night"\n'
+        '[origin]\nsource_table = "sources.ecsv"\n'
+    )
+    return folder

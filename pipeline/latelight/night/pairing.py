@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections import defaultdict
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass
@@ -25,7 +26,7 @@ class Pair:
     Attributes
     ----------
     name : str
-        Unique in a night.
+        Unique in a night, and fit for the name of a file.
     template, science : FrameHeader
         The frame that is subtracted, and the one it is subtracted from.
     """
@@ -151,12 +152,17 @@ def plan_pairs(
                 f"(pairs.min_days = {settings.min_days:g}), not compared with it"
             )
             continue
-        pairs.append(Pair(f"{science.name}-{template.name}", template, science))
+        pairs.append(Pair(_name(science, template), template, science))
     return Plan(_with_unique_names(pairs), tuple(failed), tuple(remarks))
 
 
 def _order(header: FrameHeader) -> tuple[str, str, str, float, str]:
     return (header.field, header.filter, header.chip, header.mjd, str(header.path))
+
+
+def _name(science: FrameHeader, template: FrameHeader) -> str:
+    """Return the name of a pair, fit for the name of a file."""
+    return re.sub(r"[^\w.+-]+", "_", f"{science.name}-{template.name}")
 
 
 def _days(a: FrameHeader, b: FrameHeader) -> float:

@@ -1,0 +1,175 @@
+"""From a difference to rows and cutouts: arcs, motion, origin."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Literal
+
+import numpy as np
+
+from latelight.arcs.find import find_arcs
+from latelight.config import NightConfig
+from latelight.motion.measure import measure_motion
+from latelight.night.calibration import Calibration
+from latelight.night.journal import Journal
+from latelight.night.pairing import Pair
+from latelight.night.rows import arc_row, candidate_row, residual_row, speed_of
+from latelight.origin.score import score_origins
+from latelight.products.cutouts import Cutout, cut_out
+from latelight.products.rows import ArcRow, ResidualRow
+from latelight.records import (
+    Arc,
+    Difference,
+    MatchedPair,
+    Motion,
+    OriginScore,
+    Source,
+    StarList,
+)
+
+__all__ = ["Finding", "Findings", "find_all"]
+
+
+@dataclass(frozen=True, slots=True)
+class Finding:
+    """One candidate.
+
+    Attributes
+    ----------
+    arc : int
+        Its ridge, an index of ``Findings.arcs``.
+    cutout : Cutout
+        Its pixels, and its row without the id, which only the whole night can give.
+    """
+
+    arc: int
+    cutout: Cutout
+
+
+@dataclass(frozen=True, slots=True)
+class Findings:
+    """All that a difference showed.
+
+    Attributes
+    ----------
+    arcs : tuple of ArcRow
+        Every ridge, most significant first.
+    residuals : tuple of ResidualRow
+        Compact residuals.
+    candidates : tuple of Finding
+        The ridges worth a look.
+    """
+
+    arcs: tuple[ArcRow, ...] = ()
+    residuals: tuple[ResidualRow, ...] = ()
+    candidates: tuple[Finding, ...] = ()
+
+
+def find_all(
+    difference: Difference,
+    matched: MatchedPair,
+    *,
+    stars: StarList,
+    pair: Pair,
+    calibration: Calibration,
+    sources: tuple[Source, ...],
+    config: NightConfig,
+    journal: Journal,
+) -> Findings:
+    """Find the arcs of a difference, measure them, and score their origins.
+
+    Parameters
+    ----------
+    difference, matched : Difference, MatchedPair
+        The pair subtracted, and the planes it was made from.
+    stars : StarList
+        Stars of the science frame.
+    pair : Pair
+        The two frames.
+    calibration : Calibration
+        Scales of the science frame.
+    sources : tuple of Source
+        Candidate origins.
+    config : NightConfig
+        Settings of the stages.
+    journal : Journal
+        Takes times and counts.
+    """
+    with journal.stage("arcs"):
+        arcs = find_arcs(difference, stars=stars, settings=config.arcs)
+    with journal.stage("motion"):
+        moving = _motions(difference, arcs, pair, config)
+    with journal.stage("origin"):
+        origins = {
+            index: _best_origin(motion, pair, calibration, sources, config)
+            for index, motion in moving.items()
+        }
+    with journal.stage("products"):
+        candidates = []
+        for index, motion in moving.items():
+            row = candidate_row(
+                arcs[index], motion, origins[index], pair=pair, calibration=calibration
+            )
+            cutout = cut_out(
+                row,
+                science=matched.science,
+                template=matched.template,
+                difference=difference,
+                wcs=calibration.wcs,
+                trace=arcs[index].trace,
+                settings=config.products,
+            )
+            candidates.append(Finding(index, cutout))
+    journal.add(n_arcs=len(arcs), n_candidates=len(candidates))
+    return Findings(
+        tuple(arc_row(arc, pair=pair, calibration=calibration) for arc in arcs),
+        tuple(
+            residual_row(r, pair=pair, calibration=calibration)
+            for r in difference.compact
+        ),
+        tuple(candidates),
+    )
+
+
+def _motions(
+    difference: Difference, arcs: tuple[Arc, ...], pair: Pair, config: NightConfig
+) -> dict[int, Motion]:
+    """Return the motion of every arc that is worth a look, by its index."""
+    later: Literal["science", "template"] = (
+        "science" if pair.science.mjd > pair.template.mjd else "template"
+    )
+    return {
+        index: measure_motion(difference, arc, later=later, settings=config.motion)
+        for index, arc in enumerate(arcs)
+        if arc.verdict == "arc"
+    }
+
+
+def _best_origin(
+    motion: Motion,
+    pair: Pair,
+    calibration: Calibration,
+    sources: tuple[Source, ...],
+    config: NightConfig,
+) -> OriginScore | None:
+    """Return the best source of a moving arc, if any explains it well enough."""
+    ra, dec = calibration.place(motion.x, motion.y)
+    pa, _ = calibration.direction(motion.x, motion.y, motion.direction_angle)
+    if ra is None or dec is None or pa is None:
+        return None
+    speed, speed_err = speed_of(motion, pair, calibration)
+    scores = score_origins(
+        sources,
+        ra=ra,
+        dec=dec,
+        normal_pa=pa,
+        normal_pa_err=motion.direction_angle_err,
+        speed_arcsec_yr=np.nan if speed is None else speed,
+        speed_err_arcsec_yr=np.nan if speed_err is None else speed_err,
+        mjd=pair.science.mjd,
+        settings=config.origin,
+        sense_odds=motion.sense_odds,
+    )
+    if scores and scores[0].score >= config.origin.min_score:
+        return scores[0]
+    return None
