@@ -5,73 +5,102 @@ from __future__ import annotations
 import numba as nb
 import numpy as np
 
-__all__ = ["fill_bad", "filter_stamps"]
+__all__ = ["add_gram", "fill_bad", "filter_stamp"]
 
 
 @nb.njit(nogil=True, cache=True)
-def filter_stamps(
+def filter_stamp(
     image: np.ndarray,
-    centre: np.ndarray,
+    row: int,
+    col: int,
     taps: np.ndarray,
     pairs: np.ndarray,
-    pixels: np.ndarray,
+    half: int,
+    offsets: np.ndarray,
     out: np.ndarray,
-    first_star: int,
-    last_star: int,
 ) -> None:
-    """Convolve star cutouts with separable filters.
+    """Convolve one star's cutout with separable filters.
 
     Parameters
     ----------
     image : float32 array, shape (ny, nx)
-        Every cutout with its margin must lie inside.
-    centre : int64 array, shape (n_stars, 2)
-        Row and column of each star.
+        The cutout with the filters' reach as margin must lie inside.
+    row, col : int
+        Centre of the star.
     taps : float32 array, shape (n_taps, k)
         One-dimensional filters, k odd.
     pairs : int64 array, shape (n_basis, 2)
-        Taps along y and along x of each filter, sorted by the second.
-    pixels : int64 array, shape (n_pixels, 2)
-        Row and column offsets wanted.
-    out : float32 array, shape (n_stars, n_basis, n_pixels)
-        Filled for ``first_star <= star < last_star``.
+        Taps along y and along x of each filter, neighbours sharing the second.
+    half : int
+        Half-width of the cutout, pixels.
+    offsets : int64 array, shape (n_pixels, 2)
+        Row and column offsets wanted, within ``half``.
+    out : float64 array, shape (n_pixels, n_basis)
+        The filtered cutout.
     """
     side = taps.shape[1]
     reach = side // 2
-    half = 0
-    for p in range(pixels.shape[0]):
-        half = max(half, abs(pixels[p, 0]), abs(pixels[p, 1]))
     width = 2 * half + 1
     height = width + 2 * reach
     along_x = np.empty((height, width), dtype=np.float32)
     both = np.empty((width, width), dtype=np.float32)
-    for star in range(first_star, last_star):
-        top = centre[star, 0] - half - reach
-        left = centre[star, 1] - half
-        done = -1
-        for b in range(pairs.shape[0]):
-            if pairs[b, 1] != done:
-                done = pairs[b, 1]
-                along_x[:] = 0.0
-                for row in range(height):
-                    for tap in range(side):
-                        weight = taps[done, tap]
-                        if weight != 0.0:
-                            start = left + reach - tap
-                            for col in range(width):
-                                along_x[row, col] += (
-                                    weight * image[top + row, start + col]
-                                )
-            both[:] = 0.0
+    top = row - half - reach
+    left = col - half + reach
+    done = -1
+    for b in range(pairs.shape[0]):
+        if pairs[b, 1] != done:
+            done = pairs[b, 1]
+            along_x[:] = 0.0
             for tap in range(side):
-                weight = taps[pairs[b, 0], tap]
+                weight = taps[done, tap]
                 if weight != 0.0:
-                    for row in range(width):
-                        source = row + 2 * reach - tap
-                        for col in range(width):
-                            both[row, col] += weight * along_x[source, col]
-            for p in range(pixels.shape[0]):
-                out[star, b, p] = both[half + pixels[p, 0], half + pixels[p, 1]]
+                    for y in range(height):
+                        for x in range(width):
+                            along_x[y, x] += weight * image[top + y, left - tap + x]
+        both[:] = 0.0
+        for tap in range(side):
+            weight = taps[pairs[b, 0], tap]
+            if weight != 0.0:
+                for y in range(width):
+                    for x in range(width):
+                        both[y, x] += weight * along_x[y + 2 * reach - tap, x]
+        for p in range(offsets.shape[0]):
+            out[p, b] = both[half + offsets[p, 0], half + offsets[p, 1]]
+
+
+@nb.njit(nogil=True, cache=True)
+def add_gram(
+    functions: np.ndarray,
+    target: np.ndarray,
+    weight: np.ndarray,
+    gram: np.ndarray,
+    cross: np.ndarray,
+) -> None:
+    """Sum the weighted products of functions with each other and a target.
+
+    Parameters
+    ----------
+    functions : float64 array, shape (n_pixels, n_basis)
+        Values of the functions.
+    target, weight : float64 array, shape (n_pixels,)
+        What they are fitted to, and the weights.
+    gram : float64 array, shape (n_basis, n_basis)
+        Starts at zero; the symmetric sums on return.
+    cross : float64 array, shape (n_basis,)
+        Starts at zero; the sums with the target on return.
+    """
+    n_pixels, n_basis = functions.shape
+    for p in range(n_pixels):
+        if weight[p] == 0.0:
+            continue
+        for i in range(n_basis):
+            weighted = weight[p] * functions[p, i]
+            cross[i] += weighted * target[p]
+            for j in range(i + 1):
+                gram[i, j] += weighted * functions[p, j]
+    for i in range(n_basis):
+        for j in range(i):
+            gram[j, i] = gram[i, j]
 
 
 @nb.njit(nogil=True, cache=True)

@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from itertools import product
+from collections.abc import Callable
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy import linalg
@@ -22,6 +22,8 @@ _ROUNDS = 4
 # Held-out stars must get this much better, in mean log chi-square, to pay for a
 # more complex kernel.
 _WORTHWHILE = 0.005
+# Keeps the factorisation of a noise-free system from failing by rounding.
+_RIDGE = 1e-12
 # Below this many the held-out stars are too few to choose by.
 _FEWEST_HELD_OUT = 4
 
@@ -111,15 +113,14 @@ def fit_kernel(
         settings.min_stars
     ):
         held[every // 2 :: every] = True
-    models = _affordable_models(int((~held).sum()), basis, settings)
     # Variables and galaxies go first, by a simple model, so that every candidate
     # is judged on the same stars.
-    typical = models[min(1, len(models) - 1)]
-    sound = solver.clip(typical, ~held, settings)
-    judges = held & solver.inliers(typical, sound, settings)
+    simple = _Model(0, _affordable(int((~held).sum()), min(1, settings.spatial_degree)), 0)
+    sound = solver.clip(simple, ~held, settings)
+    judges = held & solver.inliers(simple, sound, settings)
     if judges.sum() < _FEWEST_HELD_OUT:
-        judges = sound if not held.any() else held
-    best = _choose(solver, models, sound, judges)
+        judges = held if held.any() else sound
+    best = _choose(solver, sound, judges, levels=len(basis.levels), settings=settings)
     fitted = solver.clip(best, sound, settings)
     coefficients, covariance = solver.solve(best, fitted)
     misfit = max(1.0, float(np.median(solver.chi2(coefficients)[fitted])))
@@ -132,36 +133,39 @@ def fit_kernel(
     )
 
 
-def _affordable_models(
-    n_stars: int, basis: KernelBasis, settings: MatchingSettings
-) -> list[_Model]:
-    """Return the models that this many stars can carry, simplest first."""
-    models = []
-    for level, spatial, scale in product(
-        range(len(basis.levels)),
-        range(settings.spatial_degree + 1),
-        range(settings.scale_degree + 1),
-    ):
-        terms = (spatial + 1) * (spatial + 2) // 2
-        if scale <= spatial and (terms == 1 or n_stars >= 5 * terms):
-            models.append(_Model(level, spatial, scale))
-    return sorted(
-        models,
-        key=lambda m: (
-            len(basis.levels[m.level]) * (m.spatial_degree + 1) * (m.spatial_degree + 2),
-            m.scale_degree,
-        ),
-    )
+def _affordable(n_stars: int, degree: int) -> int:
+    """Return the highest degree up to ``degree`` with five stars for each term."""
+    while degree > 0 and 5 * (degree + 1) * (degree + 2) // 2 > n_stars:
+        degree -= 1
+    return degree
 
 
 def _choose(
-    solver: _Solver, models: list[_Model], fitted: BoolArray, judges: BoolArray
+    solver: _Solver,
+    fitted: BoolArray,
+    judges: BoolArray,
+    *,
+    levels: int,
+    settings: MatchingSettings,
 ) -> _Model:
-    scores = []
-    for model in models:
+    """Return the model whose judges do best: one kind of complexity at a time."""
+
+    def score(model: _Model) -> float:
         coefficients, _ = solver.solve(model, fitted)
         chi2 = np.maximum(solver.chi2(coefficients)[judges], 1e-12)
-        scores.append(float(np.mean(np.log(chi2))))
+        return float(np.mean(np.log(chi2)))
+
+    most = _affordable(int(fitted.sum()), settings.spatial_degree)
+    best = _Model(min(1, levels - 1), 0, 0)
+    best = _simplest(score, [replace(best, spatial_degree=d) for d in range(most + 1)])
+    best = _simplest(score, [replace(best, level=n) for n in range(levels)])
+    highest = min(settings.scale_degree, most)
+    return _simplest(score, [replace(best, scale_degree=d) for d in range(highest + 1)])
+
+
+def _simplest(score: Callable[[_Model], float], models: list[_Model]) -> _Model:
+    """Return the first model that is no worse than the best."""
+    scores = [score(model) for model in models]
     least = min(scores)
     return next(
         m for m, s in zip(models, scores, strict=True) if s <= least + _WORTHWHILE
@@ -188,17 +192,22 @@ class _Solver:
         """Return coefficients (n_basis, n_terms) and the variance of the sum."""
         p = self._positions[stars]
         n_basis, n_terms = len(self._basis.pairs), len(self._exponents)
-        pp = (p[:, :, None] * p[:, None, :]).reshape(len(p), -1)
-        gram = pp.T @ self._clean_gram[stars].reshape(len(p), -1)
-        gram = gram.reshape(n_terms, n_terms, n_basis, n_basis).transpose(2, 0, 3, 1)
-        gram = gram.reshape(n_basis * n_terms, -1)
-        cross = (self._systems.cross[stars].T @ p).ravel()
         free = model.free(self._basis, self._exponents)
-        matrix, right = gram[np.ix_(free, free)], cross[free]
-        values, vectors = _eigen(matrix)
+        used = np.unique(free // n_terms)  # functions with any free coefficient
+        pp = (p[:, :, None] * p[:, None, :]).reshape(len(p), -1)
+        gram = self._clean_gram[np.ix_(stars, used, used)].reshape(len(p), -1)
+        table = (pp.T @ gram).reshape(n_terms, n_terms, used.size, used.size)
+        function, term = np.searchsorted(used, free // n_terms), free % n_terms
+        matrix = table[
+            term[:, None], term[None, :], function[:, None], function[None, :]
+        ]
+        right = (self._systems.cross[stars].T @ p).ravel()[free]
+        unit = np.zeros(free.size)
+        unit[0] = 1.0  # the first parameter is the kernel's sum at the centre
+        both = _solve_scaled(matrix, np.stack([right, unit], axis=1))
         out = np.zeros(n_basis * n_terms)
-        out[free] = vectors @ ((vectors.T @ right) / values)
-        return out.reshape(n_basis, n_terms), float(np.sum(vectors[0] ** 2 / values))
+        out[free] = both[:, 0]
+        return out.reshape(n_basis, n_terms), float(both[0, 1])
 
     def chi2(self, coefficients: FloatArray) -> FloatArray:
         """Return each star's reduced chi-square under one kernel."""
@@ -234,9 +243,20 @@ class _Solver:
         return kept
 
 
-def _eigen(matrix: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Return eigenvalues and vectors of the scaled system, empty directions cut."""
+def _solve_scaled(matrix: FloatArray, right: FloatArray) -> FloatArray:
+    """Solve a symmetric system, scaled to a unit diagonal.
+
+    Cholesky where it works; otherwise empty directions are cut.
+    """
     size = np.sqrt(np.maximum(np.diag(matrix), 1e-300))
-    values, vectors = linalg.eigh(matrix / np.outer(size, size))
-    used = values > 1e-11 * values[-1]
-    return values[used], vectors[:, used] / size[:, None]
+    scaled = matrix / np.outer(size, size)
+    try:
+        factor = linalg.cho_factor(scaled + _RIDGE * np.eye(size.size))
+    except linalg.LinAlgError:
+        values, vectors = linalg.eigh(scaled)
+        used = values > 1e-9 * values[-1]
+        vectors = vectors[:, used]
+        solution = vectors @ ((vectors.T @ (right / size[:, None])) / values[used, None])
+    else:
+        solution = linalg.cho_solve(factor, right / size[:, None])
+    return solution / size[:, None]

@@ -7,9 +7,10 @@ from dataclasses import dataclass
 import numpy as np
 import sep
 
+from latelight.mask_growth import disc, grow_mask
 from latelight.masks import MaskBit
 from latelight.matching._kernels import fill_bad
-from latelight.matching.basis import KernelBasis, make_basis
+from latelight.matching.basis import make_basis
 from latelight.matching.convolution import (
     convolve,
     convolve_mask,
@@ -22,7 +23,7 @@ from latelight.matching.psf import gaussian_sigma, measure_psf
 from latelight.matching.settings import MatchingSettings
 from latelight.matching.sharpness import Roles, assign_roles
 from latelight.matching.stars import choose_stars, matched_clean, spread_over_cells
-from latelight.matching.system import build_systems, cut_stamps, disc_offsets
+from latelight.matching.system import FitImages, build_systems, disc_offsets
 from latelight.records import (
     Alignment,
     FloatArray,
@@ -38,9 +39,14 @@ from latelight.threads import over_rows
 
 __all__ = ["match_pair"]
 
-# Disc of the fit, in FWHM of the broader PSF.
-_RADIUS_IN_FWHM = 4.0
+# Disc of the fit, in FWHM of the broader PSF: a Moffat of exponent 3 has 0.1 % of
+# its light farther out.
+_RADIUS_IN_FWHM = 6.0
+# Disc in which held-out stars are judged: where a star's light matters.
+_JUDGED_IN_FWHM = 2.5
 _SKY_BOX = 128
+# Stars enough to tell the sharper frame.
+_STARS_FOR_ROLES = 120
 # Pixels whose own value still says most about a bright star's light.
 _KEEP_VALUE = MaskBit.SATURATED | MaskBit.BLEED | MaskBit.SPIKE
 
@@ -147,7 +153,7 @@ def match_pair(
         n_fit=int(fit.fitted.sum()),
         n_held_out=int(fit.held_out.sum()),
         held_out_chi2=_held_out_chi2(
-            science_plane, template_plane, stars[fit.held_out], radius=_radius(fwhm[1])
+            science_plane, template_plane, stars[fit.held_out], radius=int(np.ceil(_JUDGED_IN_FWHM * fwhm[1])),
         ),
     )
 
@@ -161,7 +167,7 @@ def _roles(
 ) -> Roles:
     x, y = stars.x[rows], stars.y[rows]
     spread = spread_over_cells(
-        np.arange(rows.size), x, y, shape=science.mask.shape, most=settings.psf_stars
+        np.arange(rows.size), x, y, shape=science.mask.shape, most=_STARS_FOR_ROLES
     )
     x, y = x[spread], y[spread]
     return assign_roles(
@@ -257,50 +263,54 @@ def _fit(
 ) -> tuple[KernelFit, IntArray]:
     """Fit the kernel; also return the (row, column) of its stars, shape (n, 2)."""
     sigma = gaussian_sigma(fwhm[0]), gaussian_sigma(fwhm[1])
-    basis: KernelBasis = make_basis(sharp_sigma=sigma[0], broad_sigma=sigma[1])
+    basis = make_basis(sharp_sigma=sigma[0], broad_sigma=sigma[1])
     radius = _radius(fwhm[1])
-    mask = sharp.mask | broad.mask
+    images, pad = _fit_images(
+        sharp, broad, pad=radius + basis.taps.shape[1] // 2 + 1, spoil=1.5 * fwhm[1]
+    )
     chosen = choose_stars(
         rows,
         snr,
         stars=stars,
-        mask=mask,
+        bad=images.bad,
+        pad=pad,
+        core=int(np.ceil(1.5 * fwhm[1])),
         radius=radius,
-        margin=radius + basis.taps.shape[1] // 2 + 1,
         settings=settings,
     )
-    centre = np.stack(
-        [np.rint(stars.y[chosen]), np.rint(stars.x[chosen])], axis=1
-    ).astype(np.int64)
-    stamps = cut_stamps(
-        centre,
-        radius=radius,
-        target=broad.light,
-        target_variance=broad.variance,
-        sharp_variance=sharp.variance,
-        mask=mask,
-        smoothing=sigma[1],
-    )
+    x, y = stars.x[chosen], stars.y[chosen]
+    centre = np.stack([np.rint(y), np.rint(x)], axis=1).astype(np.int64)
     systems = build_systems(
-        sharp.light,
-        stamps,
-        centre,
+        images,
+        centre + pad,
         basis=basis,
         radius=radius,
         scale=ratio,
-        noise_power=sharp.noise_power,
-        kernel_sigma=float(np.sqrt(max(sigma[1] ** 2 - sigma[0] ** 2, 0.0))),
+        sharp_sigma=sigma[0],
+        broad_sigma=sigma[1],
     )
-    ny, nx = mask.shape
-    fit = fit_kernel(
-        systems,
-        x=stars.x[chosen],
-        y=stars.y[chosen],
-        shape=(ny, nx),
-        basis=basis,
-        settings=settings,
-    )
+    ny, nx = sharp.mask.shape
+    fit = fit_kernel(systems, x=x, y=y, shape=(ny, nx), basis=basis, settings=settings)
     return fit, centre
+
+
+def _fit_images(
+    sharp: _Layer, broad: _Layer, *, pad: int, spoil: float
+) -> tuple[FitImages, int]:
+    """Pad the two frames, and mark what a star's disc must leave out."""
+    mask = sharp.mask | broad.mask
+    # The light missing from a saturated core is missing around it once convolved.
+    unknown = (mask & np.uint16(_KEEP_VALUE)).astype(np.uint16)
+    bad = (grow_mask(unknown, footprint=disc(spoil)) | mask) != 0
+    images = FitImages(
+        sharp=np.pad(sharp.light, pad),
+        target=np.pad(broad.light, pad),
+        sharp_variance=np.pad(sharp.variance, pad, mode="edge"),
+        target_variance=np.pad(broad.variance, pad, mode="edge"),
+        bad=np.pad(bad, pad, constant_values=True),
+        noise_power=sharp.noise_power,
+    )
+    return images, pad
 
 
 def _held_out_chi2(
@@ -309,11 +319,16 @@ def _held_out_chi2(
     """Return the median reduced chi-square of stars in the matched difference."""
     if len(centre) == 0:
         return float("nan")
+    ny, nx = science.mask.shape
     offsets = disc_offsets(radius)
-    at = (centre[:, 0, None] + offsets[:, 0], centre[:, 1, None] + offsets[:, 1])
+    row = centre[:, 0, None] + offsets[:, 0]
+    col = centre[:, 1, None] + offsets[:, 1]
+    inside = (row >= 0) & (col >= 0) & (row < ny) & (col < nx)
+    at = (np.clip(row, 0, ny - 1), np.clip(col, 0, nx - 1))
+    good = inside & ((science.mask[at] | template.mask[at]) == 0)
     difference = (science.pixels[at] - template.pixels[at]).astype(float)
-    weight = 1.0 / (science.variance[at].astype(float) + template.variance[at])
-    weight[(science.mask[at] | template.mask[at]) != 0] = 0.0
+    variance = science.variance[at].astype(float) + template.variance[at]
+    weight = np.where(good, 1.0 / variance, 0.0)
     mean = (weight * difference).sum(axis=1) / weight.sum(axis=1)
     chi2 = (weight * (difference - mean[:, None]) ** 2).sum(axis=1)
-    return float(np.median(chi2 / ((weight > 0).sum(axis=1) - 1)))
+    return float(np.median(chi2 / (good.sum(axis=1) - 1)))

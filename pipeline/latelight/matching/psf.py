@@ -83,9 +83,8 @@ def measure_psf(
     for _ in range(3):
         exponents = _affordable(settings.psf_degree, int(keep.sum()))
         basis = positions_matrix(x[kept], y[kept], exponents, shape=shape)
-        planes, *_ = np.linalg.lstsq(
-            basis[keep] * weight[keep], flat[keep] * weight[keep], rcond=None
-        )
+        inverse = np.linalg.pinv(basis[keep] * weight[keep])
+        planes = inverse @ (flat[keep] * weight[keep])
         scatter = weight[:, 0] * np.sqrt(np.mean((flat - basis @ planes) ** 2, axis=1))
         keep = scatter <= 2.5 * np.median(scatter)
     images = planes.reshape(len(exponents), *stamps.shape[1:]) * _taper(half)

@@ -6,17 +6,23 @@ import numpy as np
 
 from latelight.errors import StageError
 from latelight.matching.settings import MatchingSettings
-from latelight.records import Alignment, FloatArray, IntArray, MaskArray, StarList
+from latelight.records import Alignment, BoolArray, FloatArray, IntArray, StarList
 
 __all__ = ["choose_stars", "matched_clean", "spread_over_cells"]
 
 # Response is often curved in the last tenth below saturation.
 _BELOW_SATURATION = 0.9
+# Share of a star's disc that may be masked.
+_MOST_MASKED = 0.4
+# Pixels in the fit, all stars together, and the stars taken whatever they cost.
+_MOST_PIXELS = 600_000
+_LEAST_AFFORDABLE = 80
 
 
 def _in_range(stars: StarList, rows: IntArray) -> np.ndarray:
-    """Return which stars are clean and below the saturated ones' peaks."""
-    top = stars.peak[stars.saturated].min() if stars.saturated.any() else np.inf
+    """Return which stars are clean and well below the saturated ones' peaks."""
+    # The highest: a faint star under a bleed counts as saturated too.
+    top = stars.peak[stars.saturated].max(initial=0.0) or np.inf
     return stars.clean[rows] & (stars.peak[rows] < _BELOW_SATURATION * top)
 
 
@@ -44,9 +50,10 @@ def choose_stars(
     snr: FloatArray,
     *,
     stars: StarList,
-    mask: MaskArray,
+    bad: BoolArray,
+    pad: int,
+    core: int,
     radius: int,
-    margin: int,
     settings: MatchingSettings,
 ) -> IntArray:
     """Choose kernel stars, spread over the frame.
@@ -57,12 +64,13 @@ def choose_stars(
         Candidates (rows of ``stars``), best first, and their S/N.
     stars : StarList
         Stars of the science frame.
-    mask : uint16 array, shape (ny, nx)
-        Bits of both frames.
-    radius : int
-        Radius of the fitted disc, pixels; its core must be unmasked.
-    margin : int
-        Distance from the frame's edge that a star needs, pixels.
+    bad : bool array, shape (ny + 2 pad, nx + 2 pad)
+        Pixels not to be used in either frame, the padding included.
+    pad : int
+        Padding on every side, at least ``radius``.
+    core, radius : int
+        A star's box of half-width ``core`` must be free of bad pixels, and most
+        of its disc.
     settings : MatchingSettings
         ``min_snr``, ``max_stars``, ``min_stars``.
 
@@ -76,19 +84,15 @@ def choose_stars(
     StageError
         If fewer than ``min_stars`` are left.
     """
-    ny, nx = mask.shape
-    col, row = np.rint(stars.x[rows]).astype(int), np.rint(stars.y[rows]).astype(int)
-    inside = (
-        (col >= margin) & (row >= margin) & (col < nx - margin) & (row < ny - margin)
-    )
-    usable = inside & (snr >= settings.min_snr)
-    step = np.arange(-radius, radius + 1)
-    disc = np.hypot(step[:, None], step[None, :])
-    core = disc <= 0.5 * radius
+    col = np.rint(stars.x[rows]).astype(int) + pad
+    row = np.rint(stars.y[rows]).astype(int) + pad
+    usable = snr >= settings.min_snr
     for n in np.flatnonzero(usable):
-        box = mask[row[n] - radius : row[n] + radius + 1,
-                   col[n] - radius : col[n] + radius + 1] != 0  # fmt: skip
-        usable[n] = not box[core].any() and box.mean() < 0.15
+        inner, whole = (
+            bad[row[n] - r : row[n] + r + 1, col[n] - r : col[n] + r + 1]
+            for r in (core, radius)
+        )
+        usable[n] = not inner.any() and whole.mean() < _MOST_MASKED
     rows = rows[usable]
     if rows.size < settings.min_stars:
         msg = (
@@ -97,8 +101,14 @@ def choose_stars(
             "min_stars in [matching], or take a deeper template"
         )
         raise StageError("matching", msg)
+    # Wide PSFs have wide discs: fewer stars then hold as many pixels.
+    affordable = max(_LEAST_AFFORDABLE, int(_MOST_PIXELS / (np.pi * radius**2)))
     return spread_over_cells(
-        rows, stars.x[rows], stars.y[rows], shape=mask.shape, most=settings.max_stars
+        rows,
+        stars.x[rows],
+        stars.y[rows],
+        shape=(bad.shape[0] - 2 * pad, bad.shape[1] - 2 * pad),
+        most=min(settings.max_stars, affordable),
     )
 
 

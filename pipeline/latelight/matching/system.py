@@ -7,13 +7,13 @@ from dataclasses import dataclass
 import numpy as np
 from scipy import ndimage
 
-from latelight.matching._kernels import filter_stamps
+from latelight.matching._kernels import add_gram, filter_stamp
 from latelight.matching.basis import KernelBasis
 from latelight.matching.convolution import noise_gain
-from latelight.records import FloatArray, IntArray, PixelArray
+from latelight.records import BoolArray, FloatArray, IntArray, PixelArray
 from latelight.threads import over_rows
 
-__all__ = ["StarSystems", "Stamps", "build_systems", "cut_stamps"]
+__all__ = ["FitImages", "StarSystems", "build_systems", "disc_offsets"]
 
 # A star's model error, as a fraction of its light in a pixel: keeps a few very
 # bright stars from ruling the fit.
@@ -60,23 +60,27 @@ class StarSystems:
 
 
 @dataclass(frozen=True, slots=True)
-class Stamps:
-    """Star cutouts of the two frames, disc pixels only.
+class FitImages:
+    """What the kernel is fitted to, padded so that every disc lies inside.
 
     Attributes
     ----------
-    target : float64 array, shape (n_stars, n_pixels)
-        The broader frame.
-    target_variance, sharp_variance : float64 array, shape (n_stars, n_pixels)
-        Variances, smoothed so that a pixel's own noise does not set its weight.
-    good : bool array, shape (n_stars, n_pixels)
-        Unmasked in both.
+    sharp, target : float32 array, shape (ny, nx)
+        The frame to be convolved and the other, sky removed.
+    sharp_variance, target_variance : float32 array, shape (ny, nx)
+        Their variances.
+    bad : bool array, shape (ny, nx)
+        Not to be used.
+    noise_power : float64 array, shape (64, 64), or None
+        Power spectrum of the sharp frame's noise.
     """
 
-    target: FloatArray
-    target_variance: FloatArray
-    sharp_variance: FloatArray
-    good: np.ndarray
+    sharp: PixelArray
+    target: PixelArray
+    sharp_variance: PixelArray
+    target_variance: PixelArray
+    bad: BoolArray
+    noise_power: FloatArray | None
 
 
 def disc_offsets(radius: int) -> IntArray:
@@ -87,70 +91,22 @@ def disc_offsets(radius: int) -> IntArray:
     return np.stack([dy[inside], dx[inside]], axis=1).astype(np.int64)
 
 
-def cut_stamps(
-    centre: IntArray,
-    *,
-    radius: int,
-    target: PixelArray,
-    target_variance: PixelArray,
-    sharp_variance: PixelArray,
-    mask: np.ndarray,
-    smoothing: float,
-) -> Stamps:
-    """Cut discs around stars.
-
-    Parameters
-    ----------
-    centre : int64 array, shape (n_stars, 2)
-        Row and column of each star; the disc and 3 px more must lie on the frame.
-    radius : int
-        Disc radius, pixels.
-    target, target_variance, sharp_variance : float32 array, shape (ny, nx)
-        Pixels of the broader frame, and the variances of both.
-    mask : uint16 array, shape (ny, nx)
-        Bits of both.
-    smoothing : float
-        Sigma of the smoothing of the variances, pixels.
-    """
-    offsets = disc_offsets(radius)
-    rows = centre[:, 0, None] + offsets[:, 0]
-    cols = centre[:, 1, None] + offsets[:, 1]
-    step = np.arange(-radius, radius + 1)
-    box = (centre[:, 0, None, None] + step[:, None], centre[:, 1, None, None] + step)
-    place = (slice(None), offsets[:, 0] + radius, offsets[:, 1] + radius)
-
-    def smooth(variance: PixelArray) -> FloatArray:
-        return ndimage.gaussian_filter(
-            variance[box].astype(float), (0, smoothing, smoothing), truncate=3.0
-        )[place]
-
-    return Stamps(
-        target=target[rows, cols].astype(float),
-        target_variance=smooth(target_variance),
-        sharp_variance=smooth(sharp_variance),
-        good=mask[rows, cols] == 0,
-    )
-
-
 def build_systems(
-    sharp: PixelArray,
-    stamps: Stamps,
+    images: FitImages,
     centre: IntArray,
     *,
     basis: KernelBasis,
     radius: int,
     scale: float,
-    noise_power: FloatArray | None,
-    kernel_sigma: float,
+    sharp_sigma: float,
+    broad_sigma: float,
 ) -> StarSystems:
     """Build every star's normal equations.
 
     Parameters
     ----------
-    sharp : float32 array, shape (ny, nx)
-        The frame to be convolved, sky removed.
-    stamps : Stamps
-        Discs of the other frame.
+    images : FitImages
+        The two frames.
     centre : int64 array, shape (n_stars, 2)
         Row and column of each star.
     basis : KernelBasis
@@ -159,10 +115,9 @@ def build_systems(
         Radius of the discs, pixels.
     scale : float
         First guess of the kernel's sum.
-    noise_power : float64 array, shape (64, 64), or None
-        Power spectrum of the convolved frame's noise.
-    kernel_sigma : float
-        First guess of the kernel's width: how much of that noise gets through.
+    sharp_sigma, broad_sigma : float
+        Gaussian sigmas of the two PSFs, pixels: a first guess of how much of the
+        sharp frame's noise gets through the kernel.
 
     Notes
     -----
@@ -172,44 +127,58 @@ def build_systems(
     weights w and variance V it is ``sum_i w_i V_i * <(K_m * n)(K_n * n)>``, known
     from the variance plane, and handed on to be removed.
     """
-    n_stars, n_pixels = stamps.target.shape
-    raw = np.empty((n_stars, len(basis.pairs), n_pixels), dtype=np.float32)
+    n_stars, n_basis = len(centre), len(basis.pairs)
     offsets = disc_offsets(radius)
     taps = basis.taps.astype(np.float32)
+    kernel_sigma = np.sqrt(max(broad_sigma**2 - sharp_sigma**2, 0.0))
+    through = scale**2 * _gaussian_gain(float(kernel_sigma))
+    gram = np.zeros((n_stars, n_basis, n_basis))
+    cross = np.zeros((n_stars, n_basis))
+    total, noise, degrees = np.zeros((3, n_stars))
 
     def do_stars(first: int, last: int) -> None:
-        filter_stamps(sharp, centre, taps, basis.pairs, offsets, raw, first, last)
+        functions = np.empty((len(offsets), n_basis))
+        for star in range(first, last):
+            row, col = centre[star]
+            filter_stamp(
+                images.sharp, row, col, taps, basis.pairs, radius, offsets, functions
+            )
+            at = (row + offsets[:, 0], col + offsets[:, 1])
+            smooth = [
+                _smooth_variance(v, row, col, radius, broad_sigma)
+                for v in (images.target_variance, images.sharp_variance)
+            ]
+            target_v, sharp_v = (v[tuple(offsets.T + radius)] for v in smooth)
+            light = np.maximum(scale * basis.combine[0, 0] * functions[:, 0], 0.0)
+            variance = target_v + through * sharp_v + (_MODEL_ERROR * light) ** 2
+            weight = np.where(images.bad[at], 0.0, 1.0 / variance)
+            share = weight / weight.sum()
+            functions -= share @ functions
+            target = images.target[at].astype(float)
+            target -= share @ target
+            add_gram(functions, target, weight, gram[star], cross[star])
+            total[star] = np.sum(weight * target**2)
+            noise[star] = _NOISE_REMOVED * np.sum(weight * sharp_v)
+            degrees[star] = np.count_nonzero(weight) - 1
 
     over_rows(do_stars, n_stars)
-    through = scale**2 * _gaussian_gain(kernel_sigma)
-    light = np.maximum(scale * (raw[:, 0] * basis.combine[0, 0]), 0.0)
-    variance = (
-        stamps.target_variance
-        + through * stamps.sharp_variance
-        + (_MODEL_ERROR * light) ** 2
-    )
-    weight = np.where(stamps.good, 1.0 / variance, 0.0)
-    norm = weight.sum(axis=1)
-    target = stamps.target - (weight * stamps.target).sum(axis=1)[:, None] / norm[:, None]
-    n_basis = len(basis.pairs)
-    gram = np.empty((n_stars, n_basis, n_basis))
-    cross = np.empty((n_stars, n_basis))
-    for star in range(n_stars):
-        functions = raw[star].astype(float)
-        functions -= (functions @ weight[star] / norm[star])[:, None]
-        weighted = functions * weight[star]
-        gram[star] = weighted @ functions.T
-        cross[star] = weighted @ target[star]
     lift = basis.combine
-    overlap = _overlaps(basis.images(), noise_power)
-    share = _NOISE_REMOVED * (weight * stamps.sharp_variance).sum(axis=1)
+    overlap = _overlaps(basis, images.noise_power)
     return StarSystems(
         gram=lift @ gram @ lift.T,
-        noise=share[:, None, None] * overlap,
+        noise=noise[:, None, None] * overlap,
         cross=cross @ lift.T,
-        total=(weight * target**2).sum(axis=1),
-        degrees=stamps.good.sum(axis=1) - 1.0,
+        total=total,
+        degrees=degrees,
     )
+
+
+def _smooth_variance(
+    variance: PixelArray, row: int, col: int, radius: int, sigma: float
+) -> FloatArray:
+    """Smooth a cutout so that a pixel's own noise does not set its weight."""
+    box = np.s_[row - radius : row + radius + 1, col - radius : col + radius + 1]
+    return ndimage.gaussian_filter(variance[box].astype(float), sigma, truncate=2.0)
 
 
 def _gaussian_gain(sigma: float) -> float:
@@ -220,16 +189,19 @@ def _gaussian_gain(sigma: float) -> float:
     return noise_gain(np.outer(profile, profile), None)
 
 
-def _overlaps(images: FloatArray, noise_power: FloatArray | None) -> FloatArray:
+def _overlaps(basis: KernelBasis, noise_power: FloatArray | None) -> FloatArray:
     """Return the covariance of unit noise seen through each pair of functions."""
-    flat = images.reshape(len(images), -1)
     if noise_power is None:
+        flat = basis.images().reshape(len(basis.pairs), -1)
         return flat @ flat.T
-    ny, nx = noise_power.shape
-    y, x = np.indices(images.shape[1:])
-    folded = np.zeros((len(images), ny, nx))
-    for image, out in zip(images, folded, strict=True):
-        np.add.at(out, (y % ny, x % nx), image)
-    spectra = np.fft.fft2(folded).reshape(len(images), -1)
-    weighted = spectra * noise_power.ravel()
-    return np.real(weighted @ spectra.conj().T) / (ny * nx)
+    side = basis.taps.shape[1]
+    step = np.arange(side) - side // 2
+    along_y, along_x = (
+        basis.taps @ np.exp(-2j * np.pi * np.outer(step, np.fft.fftfreq(n)))
+        for n in noise_power.shape
+    )
+    spectra = np.einsum(
+        "by,bx->byx", along_y[basis.pairs[:, 0]], along_x[basis.pairs[:, 1]]
+    ).reshape(len(basis.pairs), -1)
+    raw = np.real((spectra * noise_power.ravel()) @ spectra.conj().T)
+    return basis.combine @ (raw / noise_power.size) @ basis.combine.T
