@@ -16,6 +16,7 @@ __all__ = ["LobeFit", "PairGuess", "fit_one_lobe", "fit_pair", "search_lobes"]
 _SEARCH_TAILS = (0.6, 4.0)
 _SEARCH_WIDTHS = (0.65, 1.0, 1.5)
 _RATIO_NODES = np.linspace(-2.4, 2.4, 7)
+_SEARCH_RATIOS = np.linspace(-3.0, 3.0, 7)
 
 
 @dataclass(frozen=True, slots=True)
@@ -30,10 +31,13 @@ class PairGuess:
         Full width, tail over sigma, early over late brightness.
     sense : {1, -1}
         Motion along the normal or against it.
-    log_evidence : float
-        ln of the summed probability.
     gain : float
-        Rise of ln(likelihood) by the second lobe.
+        ln of its probability.
+    alone : float
+        ln of the probability of the best single lobe, for this sense.
+    log_evidence : float
+        ln of the probability of this sense, averaged over one and two lobes and
+        all their places and shapes.
     """
 
     late: float
@@ -42,8 +46,9 @@ class PairGuess:
     tail: float
     ratio: float
     sense: int
-    log_evidence: float
     gain: float
+    alone: float
+    log_evidence: float
 
 
 @dataclass(frozen=True, slots=True)
@@ -68,8 +73,6 @@ class LobeFit:
         Tail over sigma of the best shape.
     sense : {1, -1}
         Motion along the normal or against it.
-    log_evidence : float
-        ln of the integrated probability.
     """
 
     late: float
@@ -86,7 +89,6 @@ class LobeFit:
     full_width: float
     tail: float
     sense: int
-    log_evidence: float
 
 
 def search_lobes(
@@ -96,7 +98,7 @@ def search_lobes(
     anchor_sign: int,
     width: float,
     max_shift: float,
-) -> tuple[float, tuple[PairGuess, PairGuess]]:
+) -> tuple[PairGuess, PairGuess]:
     """Look for the other lobe on both sides of the traced one.
 
     Parameters
@@ -114,9 +116,7 @@ def search_lobes(
 
     Returns
     -------
-    single : float
-        Best ln(likelihood) of one lobe alone.
-    guesses : tuple of two PairGuess
+    tuple of two PairGuess
         The best pair for motion along the normal, and against it.
     """
     near = np.arange(-3.0, 4.0) * max(0.25 * width, 0.7)
@@ -134,13 +134,12 @@ def search_lobes(
         for scale in _SEARCH_WIDTHS
         for t in _SEARCH_TAILS
     ]
-    ratios = np.exp(prior.ratio_scatter * np.array([-1.5, 0.0, 1.5]))
-    singles, guesses = [], []
+    ratios = np.exp(prior.ratio_scatter * _SEARCH_RATIOS)
+    guesses = []
     for sense in (1, -1):
         alone, _ = one_lobe_table(
             profile, prior, places=near, shapes=shapes, sign=anchor_sign, sense=sense
         )
-        singles.append(float(alone.max()))
         late, early = (near, far) if anchor_sign > 0 else (far, near)
         table = two_lobe_table(
             profile,
@@ -160,11 +159,14 @@ def search_lobes(
                 tail=float(table.tails[i]),
                 ratio=float(ratios[n]),
                 sense=sense,
-                log_evidence=_log_sum(table.log_p),
                 gain=float(table.log_p[i, j, k, n]),
+                alone=float(alone.max()),
+                log_evidence=float(
+                    np.logaddexp(_log_mean(alone), _log_mean(table.log_p))
+                ),
             )
         )
-    return max(singles), (guesses[0], guesses[1])
+    return guesses[0], guesses[1]
 
 
 def fit_pair(
@@ -265,7 +267,6 @@ def _summary(
         full_width=float(np.average(table.widths, weights=by_shape)),
         tail=float(table.tails[i]),
         sense=table.sense,
-        log_evidence=_log_sum(table.log_p),
     )
 
 
@@ -275,7 +276,8 @@ def fit_one_lobe(
     *,
     sign: int,
     width: float,
-) -> tuple[LobeFit, float]:
+    sense: int,
+) -> LobeFit:
     """Fit a single lobe near offset 0.
 
     Parameters
@@ -288,28 +290,18 @@ def fit_one_lobe(
         Whether the lobe is of the later epoch or of the earlier one.
     width : float
         Rough full width, PSF included, pixels.
-
-    Returns
-    -------
-    fit : LobeFit
-        For the likelier sense of motion.
-    log_odds : float
-        ln of the odds of that sense, from the asymmetry of the profile.
+    sense : {1, -1}
+        Motion along the normal or against it.
     """
-    places = np.linspace(-1.0, 1.0, 25) * (0.5 * width + 1.0)
+    places = np.linspace(-1.0, 1.0, 17) * (0.5 * width + 1.0)
     shapes = [
         (width * np.exp(step), tail)
-        for step in np.linspace(-0.7, 0.7, 9)
+        for step in np.linspace(-0.7, 0.7, 7)
         for tail in TAILS
     ]
-    tables = [
-        one_lobe_table(profile, prior, places=places, shapes=shapes, sign=sign, sense=s)
-        for s in (1, -1)
-    ]
-    evidence = [_log_sum(log_p) for log_p, _ in tables]
-    best = int(evidence[1] > evidence[0])
-    sense = (1, -1)[best]
-    log_p, amplitude = tables[best]
+    log_p, amplitude = one_lobe_table(
+        profile, prior, places=places, shapes=shapes, sign=sign, sense=sense
+    )
     weight = np.exp(log_p - log_p.max())
     widths = np.array([w for w, _ in shapes])
     i, j = np.unravel_index(np.argmax(log_p), log_p.shape)
@@ -321,7 +313,7 @@ def fit_one_lobe(
     nan = float("nan")
     late = (place, height, height_err) if sign > 0 else (nan, nan, nan)
     early = (place, height, height_err) if sign < 0 else (nan, nan, nan)
-    fit = LobeFit(
+    return LobeFit(
         late=late[0],
         early=early[0],
         shift=nan,
@@ -338,16 +330,16 @@ def fit_one_lobe(
         full_width=float(np.average(widths, weights=weight.sum(axis=1))),
         tail=shapes[i][1],
         sense=sense,
-        log_evidence=evidence[best],
     )
-    return fit, abs(evidence[0] - evidence[1])
 
 
-def _log_sum(log_p: FloatArray) -> float:
-    top = log_p.max()
-    if not np.isfinite(top):
+def _log_mean(log_p: FloatArray) -> float:
+    """Return ln of the mean probability over the grid's possible points."""
+    possible = log_p[np.isfinite(log_p)]
+    if possible.size == 0:
         return -np.inf
-    return float(top + np.log(np.exp(log_p - top).sum()))
+    top = possible.max()
+    return float(top + np.log(np.exp(possible - top).mean()))
 
 
 def _mean_and_err(values: FloatArray, weight: FloatArray) -> tuple[float, float]:

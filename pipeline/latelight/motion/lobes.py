@@ -14,7 +14,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from latelight.motion.shapes import standard_shape
+from latelight.motion._kernels import lobe_products, pair_log_p
+from latelight.motion.shapes import TABLE_START, TABLE_STEP, standard_shape, tables
 from latelight.motion.strip import Profile
 from latelight.records import FloatArray
 
@@ -36,17 +37,19 @@ class LobePrior:
     psf_fwhm: float
     ratio_scatter: float
 
-    def log_ratio(
-        self, ratio: FloatArray, distance_in_widths: FloatArray
+    def log_pair(
+        self, ratio: FloatArray, distance: FloatArray, width: FloatArray
     ) -> FloatArray:
-        """Return ln p of ln(early / late): the nearer the lobes, the more alike.
+        """Return ln p of ln(early / late), and of the distance, but for a constant.
 
-        Dust is smooth over a fraction of a lobe, so the scatter grows with the
-        distance until the lobes are well apart.
+        The nearer the lobes, the more alike: dust is smooth over a fraction of a
+        lobe, so the scatter of the ratio grows until the lobes are well apart.
+        Distances are even in their logarithm, and even in themselves below a width.
         """
-        apart = 1.0 - np.exp(-0.5 * distance_in_widths**2)
+        apart = 1.0 - np.exp(-0.5 * (distance / width) ** 2)
         sigma = self.ratio_scatter * np.sqrt(0.05 + 0.95 * apart)
-        return -0.5 * (np.log(ratio) / sigma) ** 2 - np.log(sigma)
+        like = -0.5 * (np.log(ratio) / sigma) ** 2 - np.log(sigma)
+        return like - np.log1p(distance / width)
 
     def allows(self, width: float, tail: float) -> bool:
         """Return whether a lobe's Gaussian is as wide as the PSF or wider."""
@@ -114,38 +117,22 @@ def two_lobe_table(
     shapes = [shape for shape in shapes if prior.allows(*shape)] or [
         (1.05 * prior.psf_fwhm, 0.0)
     ]
-    front = _white_lobes(profile, late, shapes, sense)
-    back = _white_lobes(profile, early, shapes, sense)
-    data = profile.white
-    r_late, r_early = front @ data, back @ data
-    g_late = np.einsum("sum,sum->su", front, front)
-    g_early = np.einsum("sum,sum->su", back, back)
-    g_both = front @ back.transpose(0, 2, 1)
-
-    q = ratios[None, None, None, :]
-    response = r_late[:, :, None, None] - q * r_early[:, None, :, None]
-    norm = (
-        g_late[:, :, None, None]
-        - 2.0 * q * g_both[..., None]
-        + q**2 * g_early[:, None, :, None]
-    )
-    norm = np.maximum(norm, 1e-12)
-    amplitude = response / norm
-    snr = response / np.sqrt(norm)
-    distance = sense * (late[:, None] - early[None, :])
+    if late.size <= early.size:
+        products = _products(profile, shapes, late, early, sense)
+    else:  # the kernel is quicker with the longer list second
+        r_early, r_late, g_early, g_late, both = _products(
+            profile, shapes, early, late, sense
+        )
+        products = r_late, r_early, g_late, g_early, both.transpose(0, 2, 1).copy()
     widths = np.array([width for width, _ in shapes])
-    apart = distance[None, :, :, None] / widths[:, None, None, None]
-    # Flat in ln(amplitude): the integral over it leaves 1 / snr.
-    log_p = np.where(
-        (snr > 0.0) & (distance > 0.0)[None, :, :, None],
-        0.5 * snr**2 - np.log(np.maximum(snr, 1.0)),
-        -np.inf,
+    distance = sense * (late[:, None] - early[None, :])
+    log_prior = prior.log_pair(
+        ratios, np.maximum(distance, 0.0)[None, :, :, None], widths[:, None, None, None]
     )
-    log_p = log_p + prior.log_ratio(ratios, np.maximum(apart, 0.0))
+    log_prior[:, distance <= 0.0] = -np.inf
+    log_p, amplitude = pair_log_p(*products, ratios, log_prior)
     tails = np.array([tail for _, tail in shapes])
-    return LobeTable(
-        log_p, amplitude, late, early, widths, tails, np.asarray(ratios), sense
-    )
+    return LobeTable(log_p, amplitude, late, early, widths, tails, ratios, sense)
 
 
 def one_lobe_table(
@@ -174,9 +161,9 @@ def one_lobe_table(
         ln of the probability, and the height that fits best; shapes narrower
         than the PSF get no probability.
     """
-    lobes = _white_lobes(profile, places, shapes, sense)
-    norm = np.maximum(np.einsum("sum,sum->su", lobes, lobes), 1e-12)
-    response = sign * (lobes @ profile.white)
+    nowhere = np.empty(0)
+    _, response, _, norm, _ = _products(profile, shapes, nowhere, places, sense)
+    response, norm = sign * response, np.maximum(norm, 1e-12)
     snr = response / np.sqrt(norm)
     allowed = np.array([prior.allows(*shape) for shape in shapes])[:, None]
     log_p = np.where(
@@ -185,15 +172,25 @@ def one_lobe_table(
     return log_p, response / norm
 
 
-def _white_lobes(
+def _products(
     profile: Profile,
-    places: FloatArray,
     shapes: Sequence[tuple[float, float]],
+    late: FloatArray,
+    early: FloatArray,
     sense: int,
-) -> FloatArray:
-    """Return whitened unit lobes, shape (n_shapes, n_places, n_offsets)."""
-    offset = profile.offsets[None, :] - places[:, None]
-    lobes = np.empty((len(shapes), *offset.shape))
-    for i, (width, tail) in enumerate(shapes):
-        lobes[i] = standard_shape(tail).at(offset, width, sense)
-    return lobes @ profile.whiten.T
+) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray, FloatArray]:
+    """Return the products of unit lobes with the profile and with each other."""
+    tails = tuple(sorted({tail for _, tail in shapes}))
+    return lobe_products(
+        profile.offsets,
+        profile.precision,
+        profile.precision @ profile.values,
+        tables(tails),
+        TABLE_START,
+        TABLE_STEP,
+        np.array([width for width, _ in shapes]),
+        np.array([tails.index(tail) for _, tail in shapes]),
+        late,
+        early,
+        sense,
+    )

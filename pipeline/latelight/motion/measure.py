@@ -9,7 +9,6 @@ import numpy as np
 from latelight.motion.bend import Bend, along_trace, bent_trace, measure_bend
 from latelight.motion.fitting import (
     LobeFit,
-    PairGuess,
     fit_one_lobe,
     fit_pair,
     search_lobes,
@@ -89,21 +88,14 @@ def measure_motion(
 
     reach = settings.max_shift_px + 3.0 * width
     strip = cut_strip(difference, arc.trace, reach=reach, sign=sign)
-    profile = average(strip)
-    _, guesses = search_lobes(
-        profile,
-        prior,
-        anchor_sign=anchor,
-        width=width,
-        max_shift=settings.max_shift_px,
-    )
-    bend = _straightening(
-        strip, arc.trace, profile, prior, guesses, anchor, width, settings
-    )
+    near = _window(strip, 0.0, 0.0, width)
+    profile = average(near)
+    alone = fit_one_lobe(profile, prior, sign=anchor, width=width, sense=1)
+    bend = _bend(near, arc.trace, profile, alone, settings)
     trace = bent_trace(arc.trace, bend)
     strip = cut_strip(difference, trace, reach=reach, sign=sign)
     profile = average(strip)
-    single, guesses = search_lobes(
+    guesses = search_lobes(
         profile,
         prior,
         anchor_sign=anchor,
@@ -111,57 +103,37 @@ def measure_motion(
         max_shift=settings.max_shift_px,
     )
     guess = max(guesses, key=lambda g: g.log_evidence)
-    if 2.0 * (guess.gain - single) > settings.lobe_threshold**2:
-        near = _window(strip, guess)
+    odds = abs(guesses[0].log_evidence - guesses[1].log_evidence) / _LOG_10
+    if 2.0 * (guess.gain - guess.alone) > settings.lobe_threshold**2:
+        near = _window(strip, guess.late, guess.early, guess.width)
         profile = average(near)
         fit = fit_pair(profile, prior, guess)
-        odds = abs(guesses[0].log_evidence - guesses[1].log_evidence)
         limit = _MAX_ODDS_TWO_LOBES
     else:
-        near = strip
-        fit, odds = fit_one_lobe(profile, prior, sign=anchor, width=width)
+        near = _window(strip, 0.0, 0.0, width)
+        profile = average(near)
+        fit = fit_one_lobe(profile, prior, sign=anchor, width=width, sense=guess.sense)
         limit = _MAX_ODDS_ONE_LOBE
-    final = _final_bend(near, trace, profile, fit, settings)
+    final = _bend(near, trace, profile, fit, settings)
     return _motion(
         fit,
         profile,
         trace=bent_trace(trace, Bend(0.0, final.slope, final.slope_err, 0.0)),
         slope_err=final.slope_err,
         later=later,
-        odds=min(odds / _LOG_10, limit),
+        odds=min(odds, limit),
         settings=settings,
     )
 
 
-def _straightening(
-    strip: Strip,
-    trace: ArcTrace,
-    profile: Profile,
-    prior: LobePrior,
-    guesses: tuple[PairGuess, PairGuess],
-    anchor: int,
-    width: float,
-    settings: MotionSettings,
-) -> Bend:
-    """Return the first correction of the trace, from the traced lobe alone."""
-    fit, _ = fit_one_lobe(profile, prior, sign=anchor, width=width)
-    return measure_bend(
-        strip,
-        along_trace(trace),
-        _on_strip(strip, profile, fit.model),
-        excess=profile.excess,
-        max_slope=float(np.tan(np.radians(settings.max_turn_deg))),
-    )
-
-
-def _final_bend(
+def _bend(
     strip: Strip,
     trace: ArcTrace,
     profile: Profile,
     fit: LobeFit,
     settings: MotionSettings,
 ) -> Bend:
-    """Return what is left of the turn with the whole fitted profile."""
+    """Return the correction of a trace that a fitted profile asks for."""
     return measure_bend(
         strip,
         along_trace(trace),
@@ -175,12 +147,11 @@ def _on_strip(strip: Strip, profile: Profile, model: FloatArray) -> FloatArray:
     return np.interp(strip.offsets, profile.offsets, model, left=0.0, right=0.0)
 
 
-def _window(strip: Strip, guess: PairGuess) -> Strip:
-    """Return the rows around both lobes."""
-    margin = 3.0 * guess.width + 6.0
-    low = min(guess.late, guess.early) - margin
-    high = max(guess.late, guess.early) + margin
-    rows = (strip.offsets >= low) & (strip.offsets <= high)
+def _window(strip: Strip, one: float, other: float, width: float) -> Strip:
+    """Return the rows around two lobes."""
+    margin = 3.0 * width + 6.0
+    rows = strip.offsets >= min(one, other) - margin
+    rows &= strip.offsets <= max(one, other) + margin
     return Strip(strip.offsets[rows], strip.values[rows], strip.weight[rows])
 
 
@@ -217,8 +188,8 @@ def _motion(
     middle = trace.x.size // 2
     normal = float(trace.normal_angle[middle])
     angle = np.radians(normal)
-    white = profile.white - profile.whiten @ fit.model
-    free = max(white.size - (8 if two else 6), 1)
+    residual = profile.values - fit.model
+    free = max(residual.size - (8 if two else 6), 1)
     return Motion(
         direction_angle=(normal if fit.sense > 0 else normal + 180.0) % 360.0,
         direction_angle_err=float(np.degrees(np.arctan(turn_err))),
@@ -231,6 +202,6 @@ def _motion(
         surface_brightness_counts=height[0],
         surface_brightness_err_counts=height[1],
         sense_odds=float(odds),
-        chi2=float(white @ white / free),
+        chi2=float(residual @ profile.precision @ residual / free),
         lobes=2 if two else 1,
     )

@@ -17,13 +17,25 @@ from scipy.special import erfcx
 
 from latelight.records import FloatArray
 
-__all__ = ["TAILS", "StandardShape", "modified_gaussian", "standard_shape"]
+__all__ = [
+    "TABLE_START",
+    "TABLE_STEP",
+    "TAILS",
+    "StandardShape",
+    "modified_gaussian",
+    "standard_shape",
+    "tables",
+]
 
 TAILS = (0.0, 0.6, 1.2, 2.2, 4.0, 8.0)
 """Exponential scale over Gaussian sigma; neighbours overlap to 99 %."""
 
-_STEP = 0.01
-_FRONT, _BACK = 3.0, 9.0
+TABLE_STEP = 0.01
+TABLE_START = -9.0
+"""Grid of the standard shapes, in units of the full width at half maximum."""
+
+_FRONT = 3.0
+_NEGLIGIBLE = 1e-4
 
 
 @dataclass(frozen=True, slots=True)
@@ -88,15 +100,26 @@ def modified_gaussian(x: FloatArray, sigma: float, tail: float) -> FloatArray:
 @lru_cache(maxsize=32)
 def standard_shape(ratio: float) -> StandardShape:
     """Return the lobe with an exponential of ``ratio`` times its sigma."""
-    reach = np.hypot(2.3548, ratio) * _BACK
+    reach = np.hypot(2.3548, ratio) * -TABLE_START
     fine = np.arange(-reach, 6.0, 0.002)
     height = modified_gaussian(fine, 1.0, ratio)
     top = int(np.argmax(height))
     height /= height[top]
     half = np.flatnonzero(height >= 0.5)
     width = fine[half[-1]] - fine[half[0]]
-    x = np.arange(-_BACK, _FRONT + _STEP, _STEP)
+    x = np.float64(TABLE_START) + TABLE_STEP * np.arange(
+        round((_FRONT - TABLE_START) / TABLE_STEP)
+    )
     table = np.interp(x * width + fine[top], fine, height, left=0.0, right=0.0)
+    table[table < _NEGLIGIBLE] = 0.0
     for array in (x, table):
         array.setflags(write=False)
     return StandardShape(x=x, height=table, sigma=1.0 / width)
+
+
+@lru_cache(maxsize=8)
+def tables(ratios: tuple[float, ...]) -> FloatArray:
+    """Return the heights of several standard shapes, shape (n_ratios, n)."""
+    stacked = np.array([standard_shape(ratio).height for ratio in ratios])
+    stacked.setflags(write=False)
+    return stacked

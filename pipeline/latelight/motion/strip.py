@@ -11,7 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from scipy import fft
-from scipy.linalg import solve_triangular
+from scipy.linalg import lapack
 
 from latelight.records import ArcTrace, Difference, FloatArray
 from latelight.straighten import straighten
@@ -46,7 +46,7 @@ class Strip:
 
 @dataclass(frozen=True, slots=True)
 class Profile:
-    """The mean over an arc, whitened.
+    """The mean over an arc.
 
     Attributes
     ----------
@@ -54,11 +54,8 @@ class Profile:
         Where there are data, pixels along the normal.
     values, err : float64 array, shape (m,)
         Counts and 1 sigma.
-    whiten : float64 array, shape (m, m)
-        Turns values into independent ones of unit variance with the background
-        taken out: the inverse Cholesky factor of their covariance.
-    white : float64 array, shape (m,)
-        The whitened values.
+    precision : float64 array, shape (m, m)
+        Inverse of their covariance, a free background included.
     excess : float
         Variance of a sum over a lobe's width over that of independent pixels.
     """
@@ -66,8 +63,7 @@ class Profile:
     offsets: FloatArray
     values: FloatArray
     err: FloatArray
-    whiten: FloatArray
-    white: FloatArray
+    precision: FloatArray
     excess: float
 
 
@@ -139,7 +135,7 @@ def noise_correlation(difference: Difference, x: float, y: float) -> FloatArray:
 def mean_profile(
     strip: Strip, correlation: FloatArray, *, normal_angle: float, width_px: float
 ) -> Profile:
-    """Average a strip along the arc and whiten the profile.
+    """Average a strip along the arc.
 
     Parameters
     ----------
@@ -171,23 +167,16 @@ def mean_profile(
     free = _BACKGROUND_SIGMAS * np.median(err)
     slope = offsets / np.abs(offsets).max()
     covariance += free**2 * (1.0 + np.outer(slope, slope))
-    lower = _cholesky(covariance, err)
-    whiten = solve_triangular(lower, np.eye(err.size), lower=True)
     lobe = np.exp(-4.0 * np.log(2.0) * (np.arange(-30.0, 31.0) / width_px) ** 2)
-    auto = np.correlate(lobe, lobe, mode="full")[lobe.size - 1 :][: _span(across)]
+    auto = np.correlate(lobe, lobe, mode="full")[lobe.size - 1 :][: across.size]
     excess = 2.0 * float(across[: auto.size] @ auto) - across[0] * auto[0]
     return Profile(
         offsets=offsets,
         values=values,
         err=err,
-        whiten=whiten,
-        white=whiten @ values,
+        precision=_inverse(covariance, err),
         excess=max(excess / auto[0], 0.1),
     )
-
-
-def _span(across: FloatArray) -> int:
-    return min(across.size, 20)
 
 
 def _across_covariance(
@@ -213,12 +202,12 @@ def _cubic_spline(x: FloatArray) -> FloatArray:
     return np.where(a < 1.0, inner, outer)
 
 
-def _cholesky(covariance: FloatArray, err: FloatArray) -> FloatArray:
-    """Factor a covariance whose measured correlation may be slightly impossible."""
+def _inverse(covariance: FloatArray, err: FloatArray) -> FloatArray:
+    """Invert a covariance whose measured correlation may be slightly impossible."""
     diagonal = np.diag(err**2)
     for ridge in (0.02, 0.1, 0.5, 2.0):
-        try:
-            return np.linalg.cholesky(covariance + ridge * diagonal)
-        except np.linalg.LinAlgError:
-            continue
-    return np.sqrt(np.diag(np.diag(covariance)))
+        factor, fault = lapack.dpotrf(covariance + ridge * diagonal, lower=1)
+        if fault == 0:
+            inverse, _ = lapack.dpotri(factor, lower=1)
+            return np.tril(inverse) + np.tril(inverse, -1).T
+    return np.diag(1.0 / np.diag(covariance))
