@@ -157,34 +157,53 @@ def polar_sums(
     half_length = 0.5 * n_blocks * block
     half_height = n_across // 2
     ny, nx = pixels.shape
-    # The chord of the arc and its sagitta bound the box.
-    sagitta = 0.5 * abs(curvature) * half_length * half_length
-    reach_u = half_height + sagitta
-    reach_x = abs(cosine) * reach_u + abs(sine) * half_length
-    reach_y = abs(sine) * reach_u + abs(cosine) * half_length
-    x_first = max(int(np.floor(x0 - reach_x)), 0)
-    x_last = min(int(np.ceil(x0 + reach_x)) + 1, nx)
-    y_first = max(int(np.floor(y0 - reach_y)), 0)
-    y_last = min(int(np.ceil(y0 + reach_y)) + 1, ny)
-    for y in range(y_first, y_last):
+    # The chord of the arc and its sagitta bound the box; so does a whole circle.
+    reach_u = 0.5 * abs(curvature) * half_length * half_length
+    reach_s = half_length
+    if abs(curvature) > 1e-9:
+        reach_u = min(reach_u, 2.0 / abs(curvature))
+        reach_s = min(reach_s, half_height + 1.0 / abs(curvature))
+    reach_u += half_height
+    reach_x = abs(cosine) * reach_u + abs(sine) * reach_s
+    reach_y = abs(sine) * reach_u + abs(cosine) * reach_s
+    for y in range(
+        max(int(np.floor(y0 - reach_y)), 0), min(int(np.ceil(y0 + reach_y)) + 1, ny)
+    ):
         dy = y - y0
-        for x in range(x_first, x_last):
+        # Where this row crosses the strips |u| <= reach_u and |s| <= reach_s.
+        low = -reach_x
+        high = reach_x
+        if abs(cosine) > 1e-6:
+            middle = -dy * sine / cosine
+            low = max(low, middle - reach_u / abs(cosine))
+            high = min(high, middle + reach_u / abs(cosine))
+        if abs(sine) > 1e-6:
+            middle = dy * cosine / sine
+            low = max(low, middle - reach_s / abs(sine))
+            high = min(high, middle + reach_s / abs(sine))
+        for x in range(
+            max(int(np.floor(x0 + low)), 0), min(int(np.ceil(x0 + high)) + 1, nx)
+        ):
             dx = x - x0
             u = dx * cosine + dy * sine
             s = dy * cosine - dx * sine
-            if abs(u) > reach_u + 1.0 or abs(s) > half_length:
-                continue
             ahead = 1.0 - curvature * u
-            if ahead <= 0.1:
+            turn = curvature * s
+            root = np.sqrt(ahead * ahead + turn * turn)
+            if root <= 0.1:  # too near the centre of the circle
                 continue
-            root = np.sqrt(ahead * ahead + curvature * curvature * s * s)
             across = (2.0 * u - curvature * (u * u + s * s)) / (1.0 + root)
             i_across = int(np.floor(across + half_height + 0.5))
             if i_across < 0 or i_across >= n_across:
                 continue
             along = s
-            if abs(curvature) > 1e-9:
-                along = np.arctan2(curvature * s, ahead) / curvature
+            if abs(turn) < 0.3 * ahead:  # arctan by its series, right to 1e-6
+                t = turn / ahead
+                t2 = t * t
+                series = 1.0 - t2 * (1.0 / 3.0 - t2 * (0.2 - t2 / 7.0))
+                along = s / ahead * series
+            elif abs(curvature) > 1e-9:
+                along = np.arctan2(turn, ahead) / curvature
             i_block = int(np.floor((along + half_length) / block))
             if i_block < 0 or i_block >= n_blocks:
                 continue

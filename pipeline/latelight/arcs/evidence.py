@@ -6,14 +6,14 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from latelight.arcs._kernels import block_matches, search_bends
-from latelight.arcs.fit import BLOCK_PX, Fit, PolarSums, Reach, level_free, sum_along
-from latelight.arcs.geometry import Circle
+from latelight.arcs.fit import BLOCK_PX, Fit, PolarSums, level_free, sum_along
 from latelight.arcs.lobes import Lobes
-from latelight.arcs.profiles import lobe_profile, lobe_width
+from latelight.arcs.profiles import lobe_width
+from latelight.arcs.settings import ArcSettings
+from latelight.arcs.surroundings import Line, Ring, filled, follow_line, follow_ring
 from latelight.records import BoolArray, Difference, FloatArray, StarList
 
-__all__ = ["BrightStars", "Evidence", "Line", "gather"]
+__all__ = ["BrightStars", "Evidence", "gather"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -48,25 +48,6 @@ class BrightStars:
 
 
 @dataclass(frozen=True, slots=True)
-class Line:
-    """The straight line through a ridge, as far as it shows.
-
-    Attributes
-    ----------
-    length_px : float
-        Length of its best stretch, pixels.
-    snr : float
-        Its significance as one PSF-wide ridge.
-    at_edge : bool
-        The stretch runs to where the frame ends.
-    """
-
-    length_px: float
-    snr: float
-    at_edge: bool
-
-
-@dataclass(frozen=True, slots=True)
 class Evidence:
     """Facts about one ridge.
 
@@ -84,12 +65,16 @@ class Evidence:
         Significance of each block along the arc.
     trimmed_snr : float
         Significance without the best sixth of the arc, at least two blocks.
+    filled : float
+        Fraction of the length that takes part in the signal.
     masked : float
         Fraction of the lobes' pixels that are masked or outside the frame.
     line : Line
         The straight line through the ridge.
-    longest_px : float
-        Length beyond which a straight ridge is no arc, pixels.
+    ring : Ring
+        The circle through the ridge that is lit most beyond it.
+    settings : ArcSettings
+        Limits of what an arc may be.
     stars : BrightStars
         Bright stars of the frame.
     """
@@ -102,15 +87,23 @@ class Evidence:
     lobe_width_px: float
     block_snr: FloatArray
     trimmed_snr: float
+    filled: float
     masked: float
     line: Line
-    longest_px: float
+    ring: Ring
+    settings: ArcSettings
     stars: BrightStars
 
     @property
     def two_lobed(self) -> bool:
         """The second lobe improves the fit by three sigma."""
         return self.snr**2 - self.single_snr**2 > 9.0
+
+    @property
+    def weaker_share(self) -> float:
+        """Height of the weaker lobe over that of the brighter."""
+        heights = (self.fit.pair.positive_height, -self.fit.pair.negative_height)
+        return min(heights) / max(heights)
 
     @property
     def length_px(self) -> float:
@@ -121,7 +114,7 @@ class Evidence:
 def gather(
     difference: Difference,
     fit: Fit,
-    reach: Reach,
+    settings: ArcSettings,
     *,
     snr: float,
     single_snr: float,
@@ -129,8 +122,9 @@ def gather(
     stars: BrightStars,
 ) -> Evidence:
     """Measure the facts about one fitted ridge."""
-    sums = sum_along(difference, fit.circle, fit.half_length, reach.half_height)
-    matched, power = _blocks(sums, fit.pair.profile(reach.half_height))
+    half_height = int(settings.largest_shift_px + settings.widest_px)
+    sums = sum_along(difference, fit.circle, fit.half_length, half_height)
+    matched, power = _blocks(sums, fit.pair.profile(half_height))
     block_snr = matched / np.sqrt(np.maximum(power, 1e-30)) / noise_ratio
     return Evidence(
         fit=fit,
@@ -141,9 +135,11 @@ def gather(
         lobe_width_px=lobe_width(fit.pair.sigma_px, fit.pair.tail_px),
         block_snr=block_snr,
         trimmed_snr=_trimmed(matched, power) / noise_ratio,
+        filled=filled(matched, power),
         masked=_masked(sums, fit.pair),
-        line=_line(difference, fit, noise_ratio),
-        longest_px=2.0 * reach.half_length,
+        line=follow_line(difference, fit, noise_ratio),
+        ring=follow_ring(difference, fit, noise_ratio),
+        settings=settings,
         stars=stars,
     )
 
@@ -172,31 +168,3 @@ def _masked(sums: PolarSums, lobes: Lobes) -> float:
     usual = np.median(sums.weight[sums.weight > 0.0]) if sums.weight.any() else 1.0
     full = np.minimum(sums.weight / usual, 1.0).sum(axis=0) * BLOCK_PX / area
     return float(1.0 - (full * weight).sum() / weight.sum())
-
-
-def _line(difference: Difference, fit: Fit, noise_ratio: float) -> Line:
-    """Follow the straight line through the ridge across the frame."""
-    ny, nx = difference.pixels.shape
-    diagonal = float(np.hypot(ny, nx))
-    half_height = int(np.ceil(4.0 * difference.fwhm_px))
-    line = Circle(fit.circle.x, fit.circle.y, fit.circle.angle, 0.0)
-    sums = sum_along(difference, line, diagonal, half_height)
-    offset = np.arange(-half_height, half_height + 1, dtype=float)
-    profile = fit.pair.sign * lobe_profile(offset, difference.fwhm_px / 2.3548, 0.0)
-    shape = (sums.along.size, 2 * half_height + 1)
-    matched, power = np.empty(shape), np.empty(shape)
-    block_matches(
-        level_free(sums), sums.weight, profile, 0, profile.size, matched, power
-    )
-    best = np.zeros(5)
-    middle = sums.along.size // 2
-    slopes = np.linspace(-0.05, 0.05, 41)
-    search_bends(
-        matched, power, sums.along, slopes, np.zeros(1), middle - 2, middle + 1, best
-    )
-    gain, _, _, first, last = best.tolist()
-    inside = np.nonzero(sums.count.sum(axis=1) > 0)[0]
-    at_edge = int(first) <= inside[0] + 1 or int(last) >= inside[-1] - 1
-    return Line(
-        (last - first + 1.0) * BLOCK_PX, np.sqrt(gain) / noise_ratio, bool(at_edge)
-    )

@@ -2,14 +2,14 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from latelight.arcs.evidence import BrightStars, Evidence, gather
 from latelight.arcs.fit import Fit, Reach, fit_seed, refine_fit
 from latelight.arcs.lobes import Lobes
-from latelight.arcs.merging import distinct, explains
+from latelight.arcs.merging import explains, mask_explained
 from latelight.arcs.profiles import LobeShapes, coarse_shapes, lobe_width
 from latelight.arcs.pyramid import build_pyramid
 from latelight.arcs.search import Seed, search_level
@@ -19,7 +19,7 @@ from latelight.records import Arc, Difference, FloatArray, StarList
 
 __all__ = ["find_arcs"]
 
-_FITS_A_PLACE = 2
+_FITS_A_PLACE = 3
 """Seeds fitted on one ridge: a second start often finds the better optimum."""
 
 
@@ -62,29 +62,69 @@ def find_arcs(
     """
     seeds, noise = _search(difference, settings)
     reach = Reach(
-        int(settings.largest_shift_px + settings.widest_px), 0.5 * settings.longest_px
+        int(settings.largest_shift_px + settings.widest_px),
+        0.5 * settings.longest_px,
+        1.0 / settings.least_radius_px,
     )
     shapes = coarse_shapes(
         fwhm_px=difference.fwhm_px,
         widest_px=settings.widest_px,
         n_shifts=int(settings.largest_shift_px) + 1,
     )
-    fits = _fit_all(difference, seeds, shapes, reach, noise, settings.threshold)
     bright = BrightStars.of(stars, least_snr=settings.bright_star_snr)
+    # What one ridge explains is masked before the next is fitted.
+    left = replace(difference, mask=difference.mask.copy())
     arcs = []
-    for fit in fits:
-        refined = refine_fit(difference, fit, shapes, reach)
+    while seeds:
+        fit, seeds = _next_fit(left, seeds, shapes, reach, noise)
+        if fit is None or noise.snr(fit.pair) < settings.threshold:
+            continue
+        refined = refine_fit(left, fit, shapes, reach)
+        if noise.snr(refined.pair) < settings.threshold:
+            continue
         evidence = gather(
-            difference,
+            left,
             refined,
-            reach,
+            settings,
             snr=noise.snr(refined.pair),
             single_snr=noise.snr(refined.single),
             noise_ratio=noise.at(refined.pair.sigma_px),
             stars=bright,
         )
-        arcs.append(_arc(evidence, judge(evidence)))
+        verdict, artefact = judge(evidence)
+        arcs.append(_arc(evidence, verdict))
+        mask_explained(left.mask, evidence, artefact=artefact)
+        seeds = [seed for seed in seeds if not _masked(left, seed)]
     return tuple(sorted(arcs, key=lambda arc: (-arc.snr, arc.y, arc.x)))
+
+
+def _next_fit(
+    difference: Difference,
+    seeds: list[Seed],
+    shapes: LobeShapes,
+    reach: Reach,
+    noise: _Noise,
+) -> tuple[Fit | None, list[Seed]]:
+    """Fit the first seed and a few more on the same ridge; return the best fit.
+
+    A second start often finds the better optimum.
+    """
+    best = fit_seed(difference, seeds[0], shapes, reach)
+    rest = seeds[1:]
+    if best is None:
+        return None, rest
+    more = [seed for seed in rest if explains(best, seed)][: _FITS_A_PLACE - 1]
+    for seed in more:
+        fit = fit_seed(difference, seed, shapes, reach)
+        if fit is not None and noise.snr(fit.pair) > noise.snr(best.pair):
+            best = fit
+    return best, [seed for seed in rest if seed not in more]
+
+
+def _masked(difference: Difference, seed: Seed) -> bool:
+    ny, nx = difference.mask.shape
+    row, col = min(round(seed.y), ny - 1), min(round(seed.x), nx - 1)
+    return bool(difference.mask[row, col] != 0)
 
 
 def _search(difference: Difference, settings: ArcSettings) -> tuple[list[Seed], _Noise]:
@@ -97,26 +137,6 @@ def _search(difference: Difference, settings: ArcSettings) -> tuple[list[Seed], 
     seeds.sort(key=lambda seed: (-seed.snr, seed.y, seed.x))
     sigma, ratio = np.array(calibration).T
     return seeds, _Noise(sigma, ratio)
-
-
-def _fit_all(
-    difference: Difference,
-    seeds: list[Seed],
-    shapes: LobeShapes,
-    reach: Reach,
-    noise: _Noise,
-    threshold: float,
-) -> list[Fit]:
-    """Fit the seeds no earlier fit explains; return the distinct ridges."""
-    fits: list[tuple[float, Fit]] = []
-    for seed in seeds:
-        if sum(explains(fit, seed) for _, fit in fits) >= _FITS_A_PLACE:
-            continue
-        fit = fit_seed(difference, seed, shapes, reach)
-        if fit is not None:
-            fits.append((noise.snr(fit.pair), fit))
-    fits.sort(key=lambda item: -item[0])
-    return distinct([fit for snr, fit in fits if snr >= threshold])
 
 
 def _arc(evidence: Evidence, verdict: str) -> Arc:

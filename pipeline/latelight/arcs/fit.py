@@ -36,11 +36,9 @@ _SEED_REACH_PX = 14
 """How far from the seed a lobe may lie: half the widest pair of the bank."""
 _LOBE_REACH_PX = 6
 _SHIFT_PX = 30
-_WIDE = (np.linspace(-0.16, 0.16, 11), np.linspace(-0.012, 0.012, 11))
-_FINE = (np.linspace(-0.04, 0.04, 9), np.linspace(-0.0016, 0.0016, 9))
+_WIDE = (np.linspace(-0.16, 0.16, 11), np.linspace(-1.0, 1.0, 9))
+_FINE = (np.linspace(-0.04, 0.04, 9), np.linspace(-0.25, 0.25, 7))
 _STILL = (np.zeros(1), np.zeros(1))
-_BEND_PRIOR = 0.005
-"""Sigma of the curvature, 1/pixel: echoes curve gently (radius 200 px or more)."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -53,10 +51,13 @@ class Reach:
         Across, pixels.
     half_length : float
         Along, pixels.
+    curvature : float
+        Strongest curvature, 1/pixel.
     """
 
     half_height: int
     half_length: float
+    curvature: float
 
 
 @dataclass(frozen=True, slots=True)
@@ -89,9 +90,10 @@ class Fit:
         Half the stretch, pixels.
     pair, single : Lobes
         Best pair of opposite lobes, and best single lobe.
-    slope_err, bend_err : float
-        1 sigma of the normal's angle, radians, and of the curvature, 1/pixel, for
-        noise as stated by the variance.
+    slope_err : float
+        1 sigma of the normal's angle, radians, for noise as stated by the variance.
+    bend, bend_err : float
+        Curvature without the prior, and 1 sigma, 1/pixel.
     """
 
     circle: Circle
@@ -99,6 +101,7 @@ class Fit:
     pair: Lobes
     single: Lobes
     slope_err: float = float("nan")
+    bend: float = float("nan")
     bend_err: float = float("nan")
 
 
@@ -155,12 +158,12 @@ def fit_seed(
         found = _lobes_within(sums, half, shapes, lobe_reach)
         if found is None:
             return None
-        slope, bend, first, last = _bend(sums, found[0], *grid)
+        slopes, bends = grid
+        slope, bend, first, last = _bend(
+            sums, found[0], slopes, bends * reach.curvature
+        )
         half = 0.5 * (last - first)
-        # Where the circle closes on itself it is no arc.
         circle = circle.bent(slope, bend)
-        if abs(circle.curvature) * max(half, reach.half_height) > 0.9:
-            return None
         circle = circle.moved(0.5 * (first + last), found[0].brighter)
         lobe_reach = _LOBE_REACH_PX
     sums = sum_along(difference, circle, half, reach.half_height)
@@ -256,29 +259,38 @@ def refine_fit(
         if found is None:
             return fit
         pair, single = found
-        (offset, slope, bend), errors = _gauss_newton(sums, pair)
+        step = _gauss_newton(sums, pair, 0.5 * reach.curvature)
         where = pair.brighter
-        circle = fit.circle.bent(slope, bend).moved(0.0, offset + where)
+        circle = fit.circle.bent(step.slope, step.bend)
         fit = Fit(
-            circle,
+            circle.moved(0.0, step.offset + where),
             fit.half_length,
             pair.seen_from(where),
             single.seen_from(where),
-            *errors,
+            step.slope_err,
+            fit.circle.curvature + step.free_bend,
+            step.free_bend_err,
         )
     return fit
 
 
-def _gauss_newton(
-    sums: PolarSums, lobes: Lobes
-) -> tuple[tuple[float, float, float], tuple[float, float]]:
+@dataclass(frozen=True, slots=True)
+class _Step:
+    offset: float
+    slope: float
+    bend: float
+    slope_err: float
+    free_bend: float
+    free_bend_err: float
+
+
+def _gauss_newton(sums: PolarSums, lobes: Lobes, bend_prior: float) -> _Step:
     """Return offset, slope and bend of the arc against its circle, and errors.
 
     The profile p moved by ``d(s) = offset + slope s + bend s^2 / 2`` is ``p - d p'``
-    to first order: a linear fit with a prior on the bend.
+    to first order: a linear fit, with a Gaussian prior on the bend.
     """
-    half_height = sums.signal.shape[1] // 2
-    profile = lobes.profile(half_height)
+    profile = lobes.profile(sums.signal.shape[1] // 2)
     steepness = np.gradient(profile)
     s = sums.along[:, None]
     terms = np.array(
@@ -289,11 +301,12 @@ def _gauss_newton(
             -0.5 * s**2 * steepness,
         ]
     ).reshape(4, -1)
-    weight = sums.weight.ravel()
-    normal = (terms * weight) @ terms.T
-    right = terms @ level_free(sums).ravel()
-    normal[3, 3] += 1.0 / _BEND_PRIOR**2
+    normal = (terms * sums.weight.ravel()) @ terms.T
     normal += np.diag(1e-9 * np.diag(normal) + 1e-30)
+    right = terms @ level_free(sums).ravel()
+    free_covariance = np.linalg.inv(normal)
+    free = free_covariance @ right
+    normal[3, 3] += 1.0 / bend_prior**2
     covariance = np.linalg.inv(normal)
     amplitude, offset, slope, bend = covariance @ right
     amplitude = max(float(amplitude), 0.3)
@@ -302,7 +315,11 @@ def _gauss_newton(
         float(np.clip(value / amplitude, -limit, limit))
         for value, limit in zip((offset, slope, bend), (3.0, 0.1, 0.003), strict=True)
     )
-    return (offset, slope, bend), (
+    return _Step(
+        offset,
+        slope,
+        bend,
         float(np.sqrt(covariance[2, 2])),
-        float(np.sqrt(covariance[3, 3])),
+        float(free[3]) / amplitude,
+        float(np.sqrt(free_covariance[3, 3])),
     )

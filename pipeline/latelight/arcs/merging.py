@@ -1,66 +1,87 @@
-"""Which fits are one and the same ridge."""
+"""What a fitted ridge explains: its own pixels, and the seeds that lie on it."""
 
 from __future__ import annotations
 
 import numpy as np
 
+from latelight.arcs.evidence import Evidence
 from latelight.arcs.fit import Fit
+from latelight.arcs.geometry import Circle
 from latelight.arcs.search import Seed
+from latelight.masks import MaskBit
+from latelight.records import BoolArray, FloatArray, MaskArray
 
-__all__ = ["covers", "distinct", "explains"]
+__all__ = ["explains", "mask_explained"]
 
 _MARGIN_PX = 6.0
 _SAME_ANGLE = np.radians(25.0)
 """Ridges that cross at more than this are two; seeds are right to 15 degrees."""
-
-
-def covers(fit: Fit, x: float, y: float) -> bool:
-    """Tell whether a place lies on a fitted ridge, its lobes or their flanks.
-
-    Parameters
-    ----------
-    fit : Fit
-        The fitted ridge.
-    x, y : float
-        The place, pixels.
-    """
-    s, u = fit.circle.coordinates(x, y)
-    if abs(s) > fit.half_length + _MARGIN_PX:
-        return False
-    low, high = fit.pair.reach
-    flank = 2.0 * np.hypot(fit.pair.sigma_px, fit.pair.tail_px) + _MARGIN_PX
-    return bool(low - flank <= u <= high + flank)
+_EXPLAINED = MaskBit.COMPACT
+"""Any bit will do: the mask is the search's own copy."""
 
 
 def explains(fit: Fit, seed: Seed) -> bool:
     """Tell whether a seed is a piece of a fitted ridge: on it, and along it."""
-    if not covers(fit, seed.x, seed.y):
-        return False
-    s, _ = fit.circle.coordinates(seed.x, seed.y)
+    s, u = fit.circle.coordinates(seed.x, seed.y)
     turn = seed.angle - (fit.circle.angle - fit.circle.curvature * float(s))
-    return bool(abs(np.sin(turn)) < np.sin(_SAME_ANGLE))
+    return bool(_on(fit, s, u)) and bool(abs(np.sin(turn)) < np.sin(_SAME_ANGLE))
 
 
-def distinct(fits: list[Fit]) -> list[Fit]:
-    """Keep the fits that share less than half their length with a better one.
+def mask_explained(mask: MaskArray, evidence: Evidence, *, artefact: str) -> None:
+    """Mask what a judged ridge explains, so that it is not found again.
 
     Parameters
     ----------
-    fits : list of Fit
-        Best first.
+    mask : uint16 array, shape (ny, nx)
+        Changed in place.
+    evidence : Evidence
+        The ridge.
+    artefact : {"", "line", "ring"}
+        What it is part of: nothing, a line across the frame, a ring.
     """
-    kept: list[Fit] = []
-    for fit in fits:
-        if not any(_share(fit, better) or _share(better, fit) for better in kept):
-            kept.append(fit)
-    return kept
+    fit = evidence.fit
+    x, y = fit.circle.point(np.linspace(-1.1, 1.1, 23) * fit.half_length, np.zeros(23))
+    low, high = fit.pair.reach
+    pad = max(-low, high) + _flank(fit)
+    box = _box(mask.shape, x, y, pad)
+    yy, xx = np.mgrid[box]
+    s, u = fit.circle.coordinates(xx, yy)
+    mask[box][_on(fit, s, u)] |= np.uint16(_EXPLAINED)
+    if artefact == "line":
+        _mask_line(mask, evidence.line.circle, 3.0 * evidence.lobe_width_px)
+    if artefact == "ring":
+        ring = evidence.ring
+        reach = ring.radius_px + _flank(fit)
+        box = _box(mask.shape, np.array([ring.x]), np.array([ring.y]), reach)
+        yy, xx = np.mgrid[box]
+        inside = np.hypot(xx - ring.x, yy - ring.y) <= reach
+        mask[box][inside] |= np.uint16(_EXPLAINED)
 
 
-def _share(fit: Fit, other: Fit) -> bool:
-    """Tell whether half of a ridge lies on another."""
-    along = np.linspace(-0.8, 0.8, 9) * fit.half_length
-    x, y = fit.circle.point(along, np.zeros(along.size))
-    on = sum(
-        covers(other, *place) for place in zip(x.tolist(), y.tolist(), strict=True)
+def _mask_line(mask: MaskArray, line: Circle, half_width: float) -> None:
+    ny, nx = mask.shape
+    yy, xx = np.ogrid[0:ny, 0:nx]
+    across = (xx - line.x) * np.cos(line.angle) + (yy - line.y) * np.sin(line.angle)
+    mask[np.abs(across) <= half_width] |= np.uint16(_EXPLAINED)
+
+
+def _box(
+    shape: tuple[int, ...], x: FloatArray, y: FloatArray, pad: float
+) -> tuple[slice, slice]:
+    ny, nx = shape
+    return (
+        slice(max(int(y.min() - pad), 0), min(max(int(y.max() + pad) + 1, 0), ny)),
+        slice(max(int(x.min() - pad), 0), min(max(int(x.max() + pad) + 1, 0), nx)),
     )
-    return on > 0.5 * along.size
+
+
+def _flank(fit: Fit) -> float:
+    return 2.0 * float(np.hypot(fit.pair.sigma_px, fit.pair.tail_px)) + _MARGIN_PX
+
+
+def _on(fit: Fit, s: FloatArray, u: FloatArray) -> BoolArray:
+    """Tell which places lie on the ridge, its lobes or their flanks."""
+    low, high = fit.pair.reach
+    flank = _flank(fit)
+    along = np.abs(s) <= fit.half_length + _MARGIN_PX
+    return np.asarray(along & (u >= low - flank) & (u <= high + flank))

@@ -13,7 +13,7 @@ class ArcSettings(StageSettings):
     """Table ``[arcs]``: which ridges are looked for, and which count as arcs."""
 
     threshold: float = Field(
-        6.5,
+        7.0,
         ge=4.0,
         le=100.0,
         description="Least significance of an arc, both lobes together [sigma].",
@@ -35,6 +35,13 @@ class ArcSettings(StageSettings):
         ge=4.0,
         le=200.0,
         description="Greatest full width of one lobe at half maximum [pixels].",
+    )
+    least_radius_px: float = Field(
+        150.0,
+        ge=30.0,
+        le=10000.0,
+        description="Radius of curvature below which a ridge is a ring, not an arc "
+        "[pixels].",
     )
     largest_shift_px: float = Field(
         40.0,
