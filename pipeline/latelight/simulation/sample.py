@@ -124,7 +124,7 @@ class Field:
 
 THORNAPPLE = Field(
     name="THORNAPPLE",
-    seed=11,
+    seed=67,
     ra=83.20,
     dec=-31.00,
     mjds=(60_210.21, 60_330.17, 60_500.36),
@@ -135,7 +135,7 @@ THORNAPPLE = Field(
 )
 FALLOWMERE = Field(
     name="FALLOWMERE",
-    seed=22,
+    seed=48,
     ra=85.00,
     dec=-32.50,
     mjds=(60_211.30, 60_501.14),

@@ -10,6 +10,7 @@ from typing import Any
 
 import numpy as np
 from astropy.io import fits
+from astropy.time import Time
 
 from latelight.errors import ProductError
 from latelight.simulation.exposures import Exposure
@@ -71,7 +72,8 @@ def exposure_words(
         The exposure.
     words : dict
         The observatory's word for each of the keys of ``STANDARD_WORDS``.  A word
-        for the time that contains ``JD`` but not ``MJD`` gets a Julian date.
+        for the time that contains ``JD`` but not ``MJD`` gets a Julian date alone,
+        any other an MJD, with DATE-OBS beside it.
     observatory : str
         Its name.
     """
@@ -86,6 +88,9 @@ def exposure_words(
         round(start if scale == "MJD" else start + MJD_TO_JD, 7),
         f"start of exposure, {scale} UTC",
     )
+    if scale == "MJD":
+        date = Time(round(start, 7), format="mjd").isot
+        header["DATE-OBS"] = (date, "start of exposure, UTC")
     header[words["exposure"]] = (exposure.exposure_s, "[s] exposure time")
     return header
 
