@@ -5,12 +5,13 @@ import pytest
 from scipy import ndimage, stats
 
 from latelight.simulation import _kernels
+from latelight.simulation.conditions import random_camera, random_exposure
 from latelight.simulation.detector import cosmic_rays, read_out, true_variance
 from latelight.simulation.exposures import BadColumn, Camera
 from latelight.simulation.objects import paint_stars
 from latelight.simulation.optics import MoffatField, convolve_sampled, random_psf
 from latelight.simulation.outburst import LIGHT_CURVES, LightCurve
-from latelight.simulation.scenes import random_camera, random_exposure, random_pair
+from latelight.simulation.scenes import random_pair
 
 pytestmark = pytest.mark.theory
 

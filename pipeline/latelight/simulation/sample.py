@@ -13,17 +13,13 @@ import numpy as np
 from astropy.io import fits
 
 from latelight.records import Source
+from latelight.simulation.conditions import random_camera, random_exposure
 from latelight.simulation.exposures import Camera, Exposure
 from latelight.simulation.objects import random_galaxies, random_stars
 from latelight.simulation.observing import Clutter, Scene, observe, pair_truth
 from latelight.simulation.outburst import LightCurve
 from latelight.simulation.outbursts import EchoPlan, Outburst, place_echoes
-from latelight.simulation.scenes import (
-    OBSERVATORY,
-    STARS_PER_ARCMIN2,
-    random_camera,
-    random_exposure,
-)
+from latelight.simulation.scenes import OBSERVATORY, STARS_PER_ARCMIN2
 from latelight.simulation.tables import (
     Row,
     echo_rows,

@@ -9,9 +9,9 @@ from typing import Literal
 import numpy as np
 from astropy.io import fits
 
-from latelight.simulation.astrometry import frame_wcs, misstate
+from latelight.simulation.conditions import random_camera, random_exposure
 from latelight.simulation.echoes import Echo
-from latelight.simulation.exposures import BadColumn, Camera, Exposure
+from latelight.simulation.exposures import Exposure
 from latelight.simulation.objects import random_galaxies, random_stars
 from latelight.simulation.observing import (
     Clutter,
@@ -19,7 +19,6 @@ from latelight.simulation.observing import (
     observe,
     pair_truth,
 )
-from latelight.simulation.optics import random_psf
 from latelight.simulation.outbursts import (
     EchoPlan,
     Outburst,
@@ -35,22 +34,14 @@ from latelight.simulation.writing import (
     write_image,
 )
 
-__all__ = [
-    "SimulatedFrame",
-    "SimulatedPair",
-    "random_camera",
-    "random_exposure",
-    "random_pair",
-]
+__all__ = ["SimulatedFrame", "SimulatedPair", "random_pair"]
 
 Kind = Literal["echoes", "nuisances"]
+Epoch = Literal["science", "template"]
 
 # Stars of 13-23 mag per square arcminute at the default density.
 STARS_PER_ARCMIN2 = 36.0
 MARGIN_ARCSEC = 30.0
-# Magnitude of one count in 120 s: a 1.5-m telescope at 1.5 electrons a count.
-ZERO_POINT = 28.8
-EXPOSURE_S = 120.0
 OBSERVATORY = "Larkspur Hill 1.5-m"
 
 
@@ -142,29 +133,14 @@ def random_pair(
         raise ValueError(msg)
     streams = [np.random.default_rng(s) for s in np.random.SeedSequence(seed).spawn(5)]
     conditions, sky, dust, first, second = streams
-    camera = random_camera(conditions, (size, size), many_columns=kind == "nuisances")
-    ra, dec = conditions.uniform(0.0, 360.0), conditions.uniform(-65.0, 65.0)
-    mjd = conditions.uniform(60_000.0, 61_500.0)
-    diagonal = size * camera.scale_arcsec / 3600.0 * np.sqrt(0.5)
-    outbursts = _random_outbursts(conditions, ra, dec, mjd, 1.2 * diagonal)
-    days = _random_interval(conditions, outbursts, ra, dec, mjd)
-    sharp = conditions.uniform(1.0, 1.4) / camera.scale_arcsec
-    broad = sharp * conditions.uniform(1.06, 1.4)
-    pixels = (sharp, broad) if science_sharper else (broad, sharp)
-    moments = (mjd, mjd + days if template_later else mjd - days)
-    science, template = (
-        random_exposure(
-            conditions,
-            camera,
-            ra=ra,
-            dec=dec,
-            mjd=moment,
-            fwhm_px=fwhm,
-            field=f"SIM-{seed}",
-        )
-        for moment, fwhm in zip(moments, pixels, strict=True)
+    outbursts, science, template = _random_epochs(
+        conditions,
+        size,
+        kind,
+        sharper="science" if science_sharper else "template",
+        later="template" if template_later else "science",
+        field=f"SIM-{seed}",
     )
-
     echoes: tuple[Echo, ...] = ()
     if kind == "echoes":
         room = min(1.0, (size / 1024) ** 2)
@@ -172,7 +148,7 @@ def random_pair(
         echoes = place_echoes(
             dust, outbursts, plan=plan, science=science, template=template
         )
-    scene = _random_sky(sky, ra, dec, size, n_stars, kind, echoes)
+    scene = _random_sky(sky, science, n_stars, kind, echoes)
     taken = [
         observe(
             scene,
@@ -196,104 +172,33 @@ def random_pair(
     return SimulatedPair(template=template_frame, science=science_frame, truth=truth)
 
 
-def random_camera(
-    rng: np.random.Generator, shape: tuple[int, int], *, many_columns: bool
-) -> Camera:
-    """Draw a camera: its optical axis, its spikes and its faulty columns."""
-    ny, nx = shape
-    count = int(rng.integers(4, 8) if many_columns else rng.integers(1, 4))
-    columns = []
-    for _ in range(count):
-        whole = rng.random() < 0.5
-        columns.append(
-            BadColumn(
-                col=int(rng.integers(5, nx - 5)),
-                first=0 if whole else int(rng.integers(0, ny // 2)),
-                last=ny,
-                gain=float(rng.choice([0.0, 0.4, 1.0])),
-                excess=float(rng.choice([0.0, 150.0, 3000.0])),
-            )
-        )
-    return Camera(
-        shape=shape,
-        spike_angle=float(rng.uniform(0.0, 90.0)),
-        axis_x=nx * float(rng.uniform(0.45, 0.55)),
-        axis_y=ny * float(rng.uniform(0.45, 0.55)),
-        bad_columns=tuple(columns),
-    )
-
-
-def random_exposure(
+def _random_epochs(
     rng: np.random.Generator,
-    camera: Camera,
+    size: int,
+    kind: Kind,
     *,
-    ra: float,
-    dec: float,
-    mjd: float,
-    fwhm_px: float,
+    sharper: Epoch,
+    later: Epoch,
     field: str,
-    filter_word: str = "r",
-    chip_offset_px: tuple[float, float] = (0.0, 0.0),
-) -> Exposure:
-    """Draw the conditions of one exposure of a field.
-
-    Parameters
-    ----------
-    rng : numpy.random.Generator
-        Source of the randomness.
-    camera : Camera
-        The camera.
-    ra, dec : float
-        Where the telescope should point, degrees.
-    mjd : float
-        Middle of the exposure.
-    fwhm_px : float
-        Seeing, pixels.
-    field, filter_word : str
-        Words for the header.
-    chip_offset_px : (float, float)
-        Where the pointing falls from the chip's centre, x and y, pixels.  The same
-        ``rng`` state with another offset makes the next chip of one exposure.
-    """
-    # The optics' own distortion, and a little that changes with every exposure.
-    own = np.array([2.0, 0.3, 0.5, -0.3, 0.2, -0.4, 0.25, 0.3])
-    distortion = own + rng.normal(0.0, 0.12, 8)
-    # Most nights the rotator is right to a quarter of a degree, some nights not.
-    turn = rng.normal(0.0, 0.2) if rng.random() < 0.85 else rng.normal(0.0, 1.0)
-    wcs = frame_wcs(
-        ra=ra,
-        dec=dec,
-        shape=camera.shape,
-        scale_arcsec=camera.scale_arcsec,
-        rotation_deg=float(turn),
-        offset_px=(
-            chip_offset_px[0] + float(rng.uniform(-15.0, 15.0)),
-            chip_offset_px[1] + float(rng.uniform(-15.0, 15.0)),
-        ),
-        distortion=distortion,
+) -> tuple[tuple[Outburst, ...], Exposure, Exposure]:
+    """Draw outbursts and the conditions of the science and template exposures."""
+    camera = random_camera(rng, (size, size), many_columns=kind == "nuisances")
+    ra, dec = rng.uniform(0.0, 360.0), rng.uniform(-65.0, 65.0)
+    mjd = rng.uniform(60_000.0, 61_500.0)
+    diagonal = size * camera.scale_arcsec / 3600.0 * np.sqrt(0.5)
+    outbursts = _random_outbursts(rng, ra, dec, mjd, 1.2 * diagonal)
+    days = _random_interval(rng, outbursts, ra, dec, mjd)
+    sharp = rng.uniform(1.0, 1.4) / camera.scale_arcsec
+    broad = sharp * rng.uniform(1.06, 1.4)
+    seeing = (sharp, broad) if sharper == "science" else (broad, sharp)
+    moments = (mjd, mjd - days if later == "science" else mjd + days)
+    science, template = (
+        random_exposure(
+            rng, camera, ra=ra, dec=dec, mjd=moment, fwhm_px=fwhm, field=field
+        )
+        for moment, fwhm in zip(moments, seeing, strict=True)
     )
-    stated = misstate(
-        wcs,
-        rng,
-        error_px=float(abs(rng.normal(0.0, 2.0))),
-        rotation_err_deg=0.01,
-    )
-    sky_mag = rng.uniform(20.5, 21.3)
-    haze = -2.5 * np.log10(rng.uniform(0.7, 1.0))
-    sky = 10.0 ** (0.4 * (ZERO_POINT - sky_mag)) * camera.scale_arcsec**2
-    return Exposure(
-        camera=camera,
-        mjd=mjd,
-        exposure_s=EXPOSURE_S,
-        filter=filter_word,
-        field=field,
-        wcs=wcs,
-        stated_wcs=stated,
-        psf=random_psf(rng, fwhm_px=fwhm_px, shape=camera.shape),
-        zero_point=float(ZERO_POINT - haze),
-        sky_counts=float(sky),
-        sky_terms=tuple(rng.normal(0.0, [0.03, 0.03, 0.01, 0.01, 0.01]).tolist()),
-    )
+    return outbursts, science, template
 
 
 def _standard_header(exposure: Exposure) -> fits.Header:
@@ -330,14 +235,13 @@ def _random_interval(
 
 def _random_sky(
     rng: np.random.Generator,
-    ra: float,
-    dec: float,
-    size: int,
+    exposure: Exposure,
     n_stars: int | None,
     kind: Kind,
     echoes: tuple[Echo, ...],
 ) -> Scene:
-    scale = Camera(shape=(size, size)).scale_arcsec
+    size, scale = exposure.camera.shape[0], exposure.camera.scale_arcsec
+    ra, dec = (float(v) for v in exposure.wcs.wcs.crval)
     half = 0.5 * size * scale + MARGIN_ARCSEC
     arcmin2 = (size * scale / 60.0) ** 2
     wanted = STARS_PER_ARCMIN2 * arcmin2 if n_stars is None else n_stars
