@@ -216,6 +216,9 @@ def test_cutout_file(tmp_path, place):
     side = cutout.science.shape[0]
     x, y = np.meshgrid([0.0, side / 3, side - 1.0], [0.0, side / 2, side - 1.0])
     parent = scene.wcs.all_pix2world(x + cutout.x0, y + cutout.y0, 0)
+    np.testing.assert_allclose(
+        cutout.wcs.all_pix2world(x, y, 0), parent, rtol=0, atol=1e-9
+    )
     with fits.open(path, checksum=True) as hdus:
         names = [hdu.name for hdu in hdus][1:]
         assert names == ["TEMPLATE", "SCIENCE", "DIFFERENCE", "SNR", "MASK"]
@@ -286,6 +289,15 @@ def test_profile_shows_both_lobes_where_they_are():
     assert at[0.0] == pytest.approx(mean - overlap, abs=5 * err)
     assert at[-8.0] == pytest.approx(overlap - mean, abs=5 * err)
     assert (profile.offset[0], profile.offset[-1]) == (-19.0, 11.0)
+
+
+def test_profile_is_the_same_whichever_lobe_was_traced():
+    """Both traces run through the same columns: 8 pixels apart, same offsets."""
+    scene = Scene()
+    expected = measure_profile(scene.cut(), reach_px=15.0)
+    scene.trace = replace(scene.trace, x=scene.trace.x - 8.0)
+    profile = measure_profile(scene.cut(), reach_px=15.0)
+    np.testing.assert_allclose(profile.value, expected.value, atol=1e-9)
 
 
 def test_profile_leaves_masked_pixels_out():

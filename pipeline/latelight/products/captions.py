@@ -6,7 +6,7 @@ from datetime import date, timedelta
 
 from latelight.products.rows import CandidateRow
 
-__all__ = ["calendar_date", "facts", "interval", "measured"]
+__all__ = ["calendar_date", "facts", "interval", "measured", "shortened"]
 
 # Day 0 of the modified Julian date.
 _MJD_ZERO = date(1858, 11, 17)
@@ -52,6 +52,11 @@ def measured(value: float, err: float | None) -> str:
     return f"{value:.{decimals}f} ± {err:.{decimals}f}"
 
 
+def shortened(text: str, longest: int) -> str:
+    """Return a text cut to a number of letters, with dots where it goes on."""
+    return text if len(text) <= longest else f"{text[: longest - 3]}..."
+
+
 def _brightness(row: CandidateRow) -> list[tuple[str, str]]:
     if row.surface_brightness is not None:
         value = measured(row.surface_brightness, row.surface_brightness_err)
@@ -85,7 +90,7 @@ def _motion(row: CandidateRow) -> list[tuple[str, str]]:
 def _origin(row: CandidateRow) -> list[tuple[str, str]]:
     if not row.source:
         return [("origin", "none listed fits")]
-    parts = [row.source]
+    parts = [shortened(row.source, 28)]
     if row.score is not None:
         parts.append(f"score {row.score:+.1f}")
     if row.away_angle is not None:

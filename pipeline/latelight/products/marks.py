@@ -7,6 +7,7 @@ import math
 import numpy as np
 from PIL import Image, ImageDraw
 
+from latelight.products.captions import shortened
 from latelight.products.cutouts import Cutout, template_offset_px
 from latelight.products.drawing import (
     ARC,
@@ -16,6 +17,7 @@ from latelight.products.drawing import (
     OVERSAMPLING,
     PAPER,
     Canvas,
+    Colour,
     Point,
     nice_step,
     text_width,
@@ -31,6 +33,7 @@ _TEXT = 16
 # Lengths on the panel, as fractions of its side.
 _ARROW, _WEDGE, _ORIGIN_LINE, _COMPASS, _SCALE_BAR = 0.20, 0.30, 0.24, 0.11, 0.30
 _MARGIN = 10
+_LONGEST_NAME = 20
 _PLATE_OPACITY = 0.8
 
 
@@ -50,7 +53,7 @@ class Marks:
         self._canvas = Canvas(panel)
         self._side = panel.width // OVERSAMPLING
         self._zoom = self._side / cutout.science.shape[0]
-        self._texts: list[tuple[Point, str, str]] = []
+        self._texts: list[tuple[Point, str, str, Colour]] = []
         row, trace = cutout.row, cutout.trace
         self._x, self._y = row.x - cutout.x0, row.y - cutout.y0
         # The trace may follow either lobe: this leads to the science epoch's.
@@ -63,8 +66,10 @@ class Marks:
         """Return the panel at its final size, with its texts."""
         panel = self._canvas.finished()
         draw = ImageDraw.Draw(panel)
-        for place, text, anchor in self._texts:
-            write(draw, place, text, size=_TEXT, anchor=anchor, halo=True)
+        for place, text, anchor, colour in self._texts:
+            write(
+                draw, place, text, size=_TEXT, colour=colour, anchor=anchor, halo=True
+            )
         return panel
 
     def ends(self, *, science: bool) -> None:
@@ -116,7 +121,9 @@ class Marks:
         start = self._along_motion(min(self._template_ahead, 0.0) - self._clearance())
         end = self._off(start, towards, _ORIGIN_LINE)
         self._canvas.dashes(start, end, ORIGIN, width=2.0)
-        self._label(self._off(end, towards, 0.03), f"to {row.source}", towards)
+        self._label(
+            self._off(end, towards, 0.03), f"to {shortened(row.source, 28)}", towards
+        )
 
     def compass(self) -> None:
         """Draw north and east in a clear corner, or +x and +y without a WCS."""
@@ -134,14 +141,16 @@ class Marks:
             turn = math.radians(angle)
             tips.append((reach * math.cos(turn), -reach * math.sin(turn)))
         low = [min(tip[axis] for tip in tips) for axis in (0, 1)]
-        size = [max(tip[axis] for tip in tips) - low[axis] + 12.0 for axis in (0, 1)]
+        size = [max(tip[axis] for tip in tips) - low[axis] + 20.0 for axis in (0, 1)]
         left, top = self._clear_corner(size[0], size[1])
         self._plate(left, top, size[0], size[1])
-        foot = (left + 6.0 - low[0], top + 6.0 - low[1])
+        foot = (left + 10.0 - low[0], top + 10.0 - low[1])
         for name, angle in arms.items():
             end = self._off(foot, angle, _COMPASS)
             self._canvas.arrow(foot, end, INK, width=1.8)
-            self._texts.append((self._off(end, angle, 9.0 / self._side), name, "mm"))
+            self._texts.append(
+                (self._off(end, angle, 9.0 / self._side), name, "mm", INK)
+            )
 
     def scale_bar(self) -> None:
         """Draw a bar of a round length in arcsec, or pixels without a WCS."""
@@ -156,7 +165,7 @@ class Marks:
         middle = left + width / 2.0
         ends = [(middle - bar / 2.0, top + 27.0), (middle + bar / 2.0, top + 27.0)]
         self._canvas.line(ends, INK, width=3.0)
-        self._texts.append(((middle, top + 20.0), label, "md"))
+        self._texts.append(((middle, top + 20.0), label, "md", INK))
 
     def _ridge(self, *, science: bool) -> tuple[FloatArray, FloatArray]:
         """Return the ridge at an epoch, cutout pixels."""
@@ -219,9 +228,9 @@ class Marks:
         self._canvas.fill(box, PAPER, opacity=_PLATE_OPACITY)
 
     def _label(self, place: Point, text: str, angle: float) -> None:
-        """Write at the end of a line, on the side away from it, inside the panel."""
+        """Write at the end of the origin's line, on the side away from it, inside the panel."""
         width = text_width(text, size=_TEXT)
         left = place[0] if math.cos(math.radians(angle)) >= 0.0 else place[0] - width
         left = min(max(left, _MARGIN), max(_MARGIN, self._side - _MARGIN - width))
         y = min(max(place[1], 2.0 * _MARGIN), self._side - 2.0 * _MARGIN)
-        self._texts.append(((left, y), text, "lm"))
+        self._texts.append(((left, y), text, "lm", ORIGIN))

@@ -14,7 +14,7 @@ import numpy as np
 from PIL import Image, ImageDraw
 
 from latelight.products.atomic import write_bytes
-from latelight.products.captions import calendar_date, facts, interval
+from latelight.products.captions import calendar_date, facts, interval, shortened
 from latelight.products.cutouts import Cutout, template_offset_px
 from latelight.products.drawing import (
     INK,
@@ -108,9 +108,11 @@ def draw_colour_bar(
     bar = np.repeat(diverging_colours(np.linspace(-1.0, 1.0, width))[None], 8, axis=0)
     picture.paste(Image.fromarray(bar), (x, y + 5))
     draw = ImageDraw.Draw(picture)
+    # Two digits without an exponent, for all but extreme units.
+    end = f"{limit:.0f}" if 10.0 <= limit < 1e6 else f"{limit:.2g}"
     for text, place, anchor in (
-        (f"{-limit:.2g}", x - 6, "rm"),
-        (f"+{limit:.2g} counts", x + width + 6, "lm"),
+        (f"-{end}", x - 6, "rm"),
+        (f"+{end} counts", x + width + 6, "lm"),
     ):
         write(draw, (place, y + 9), text, size=_SMALL, colour=QUIET, anchor=anchor)
 
@@ -123,7 +125,7 @@ def _draw_heading(picture: Image.Image, row: CandidateRow) -> None:
     draw = ImageDraw.Draw(picture)
     write(draw, (_EDGE, 14), row.id, size=_NAME)
     words = [row.field, f"filter {row.filter}" if row.filter else "", row.pair]
-    context = " · ".join(word for word in words if word)
+    context = shortened(" · ".join(word for word in words if word), 120)
     place = (_WIDTH - _EDGE, 22)
     write(draw, place, context, size=_SMALL, colour=QUIET, anchor="ra")
     draw.line([(_EDGE, 52), (_WIDTH - _EDGE, 52)], fill=RULE)
