@@ -122,7 +122,9 @@ class Marks:
         end = self._off(start, towards, _ORIGIN_LINE)
         self._canvas.dashes(start, end, ORIGIN, width=2.0)
         self._label(
-            self._off(end, towards, 0.03), f"to {shortened(row.source, 28)}", towards
+            self._off(end, towards, 0.03),
+            f"to {shortened(row.source, _LONGEST_NAME)}",
+            towards,
         )
 
     def compass(self) -> None:
@@ -228,7 +230,7 @@ class Marks:
         self._canvas.fill(box, PAPER, opacity=_PLATE_OPACITY)
 
     def _label(self, place: Point, text: str, angle: float) -> None:
-        """Write at the end of the origin's line, on the side away from it, inside the panel."""
+        """Write at the far end of the origin's line, inside the panel."""
         width = text_width(text, size=_TEXT)
         left = place[0] if math.cos(math.radians(angle)) >= 0.0 else place[0] - width
         left = min(max(left, _MARGIN), max(_MARGIN, self._side - _MARGIN - width))
