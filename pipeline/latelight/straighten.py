@@ -26,8 +26,9 @@ def straighten(
         Any image on the frame's grid.
     trace : ArcTrace
         Centre line with n points and normals.
-    offsets : float64 array, shape (m,)
-        Distances along the normal, pixels, positive in the normal's sense.
+    offsets : float64 array, shape (m,) or (m, n)
+        Distances along the normal, pixels, positive in the normal's sense; the
+        same for all points of the trace, or for each point its own.
     order : {0, 1, 3}
         Spline order; 0 for masks.
     fill : float
@@ -39,8 +40,9 @@ def straighten(
         Row i holds the image at ``offsets[i]`` from each point of the trace.
     """
     angle = np.radians(trace.normal_angle)
-    x = trace.x[None, :] + offsets[:, None] * np.cos(angle)[None, :]
-    y = trace.y[None, :] + offsets[:, None] * np.sin(angle)[None, :]
+    across = offsets if offsets.ndim == 2 else offsets[:, None]
+    x = trace.x[None, :] + across * np.cos(angle)[None, :]
+    y = trace.y[None, :] + across * np.sin(angle)[None, :]
     # Only the neighbourhood of the arc is touched, never the whole frame.
     pad = 4
     y0, y1 = int(np.floor(y.min())) - pad, int(np.ceil(y.max())) + pad + 1

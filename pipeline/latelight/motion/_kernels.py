@@ -137,7 +137,8 @@ def pair_log_p(
     Returns
     -------
     log_p, amplitude : float64 array, same shape
-        A prior flat in ln(amplitude) leaves 1 / snr of the integral over it.
+        Amplitudes A have the prior A**-2: faint echoes are the commoner ones.  Its
+        integral over the likelihood is 1 / (snr A).
     """
     n_shapes, n_late, n_early = g_both.shape
     log_p = np.full(log_prior.shape, -np.inf)

@@ -9,7 +9,7 @@ import numpy as np
 from latelight.motion.strip import Strip
 from latelight.records import ArcTrace, FloatArray
 
-__all__ = ["Bend", "along_trace", "bent_trace", "measure_bend"]
+__all__ = ["Bend", "along_trace", "bent_trace", "handedness", "measure_bend"]
 
 _STEP = 0.5
 _REACH = 10.0
@@ -32,12 +32,17 @@ class Bend:
         Tangent of the turn, and 1 sigma.
     bend : float
         Change of curvature, 1/pixel.
+    centre, length : float
+        Where the light along the trace is centred, and how far it extends: the
+        length of a uniform arc of the same spread, pixels.
     """
 
     offset: float
     slope: float
     slope_err: float
     bend: float
+    centre: float
+    length: float
 
 
 def along_trace(trace: ArcTrace) -> FloatArray:
@@ -57,11 +62,11 @@ def bent_trace(trace: ArcTrace, bend: Bend) -> ArcTrace:
         x=trace.x + move * np.cos(angle),
         y=trace.y + move * np.sin(angle),
         normal_angle=trace.normal_angle
-        - _handedness(trace) * np.degrees(np.arctan(slope)),
+        - handedness(trace) * np.degrees(np.arctan(slope)),
     )
 
 
-def _handedness(trace: ArcTrace) -> int:
+def handedness(trace: ArcTrace) -> int:
     """Return +1 where the trace runs 90 degrees ahead of its normals, else -1."""
     middle = trace.x.size // 2
     before, after = max(middle - 1, 0), min(middle + 1, trace.x.size - 1)
@@ -139,7 +144,16 @@ def measure_bend(
                 )
             )
     (offset, _), (slope, slope_err), (bend, _) = moments
-    return Bend(offset=offset, slope=slope, slope_err=slope_err, bend=bend)
+    light = _light(response, norm, offset + slope * centres + 0.5 * bend * centres**2)
+    centre, spread = _moments(centres, light)
+    return Bend(
+        offset=offset,
+        slope=slope,
+        slope_err=slope_err,
+        bend=bend,
+        centre=centre,
+        length=min(np.sqrt(12.0) * spread, length),
+    )
 
 
 def _segment_responses(
@@ -198,6 +212,19 @@ def _log_likelihood(
     v = _PATCH_SCATTER**2
     terms = (r + 1.0 / v) ** 2 / (g + 1.0 / v) - 1.0 / v - np.log1p(g * v)
     return 0.5 * terms.sum(axis=-1)
+
+
+def _light(response: FloatArray, norm: FloatArray, move: FloatArray) -> FloatArray:
+    """Return the light along the ridge, of each segment, never negative."""
+    column = np.clip(np.rint((move + _REACH) / _STEP), 0, response.shape[1] - 1)
+    segment = np.arange(move.size)
+    at = segment, column.astype(np.intp)
+    # Three segments are smoothed together: single ones are noisy.
+    box = np.ones(3)
+    light = np.convolve(response[at], box, mode="same")
+    light /= np.maximum(np.convolve(norm[at], box, mode="same"), 1e-12)
+    light = np.clip(light, 0.0, 2.0)
+    return light if light.sum() > 0.0 else np.ones_like(light)
 
 
 def _moments(nodes: FloatArray, weight: FloatArray) -> tuple[float, float]:

@@ -49,7 +49,7 @@ class LobePrior:
         apart = 1.0 - np.exp(-0.5 * (distance / width) ** 2)
         sigma = self.ratio_scatter * np.sqrt(0.05 + 0.95 * apart)
         like = -0.5 * (np.log(ratio) / sigma) ** 2 - np.log(sigma)
-        return like - np.log1p(distance / width)
+        return like - 1.5 * np.log1p(distance / width)
 
     def allows(self, width: float, tail: float) -> bool:
         """Return whether a lobe's Gaussian is as wide as the PSF or wider."""
@@ -164,12 +164,14 @@ def one_lobe_table(
     nowhere = np.empty(0)
     _, response, _, norm, _ = _products(profile, shapes, nowhere, places, sense)
     response, norm = sign * response, np.maximum(norm, 1e-12)
-    snr = response / np.sqrt(norm)
+    snr, amplitude = response / np.sqrt(norm), response / norm
     allowed = np.array([prior.allows(*shape) for shape in shapes])[:, None]
     log_p = np.where(
-        allowed & (snr > 0.0), 0.5 * snr**2 - np.log(np.maximum(snr, 1.0)), -np.inf
+        allowed & (snr > 0.0),
+        0.5 * snr**2 - np.log(np.maximum(snr, 1.0) * np.maximum(amplitude, 1e-30)),
+        -np.inf,
     )
-    return log_p, response / norm
+    return log_p, amplitude
 
 
 def _products(

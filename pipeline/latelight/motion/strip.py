@@ -68,7 +68,12 @@ class Profile:
 
 
 def cut_strip(
-    difference: Difference, trace: ArcTrace, *, reach: float, sign: int
+    difference: Difference,
+    trace: ArcTrace,
+    *,
+    reach: float,
+    sign: int,
+    stretch: FloatArray | None = None,
 ) -> Strip:
     """Unroll a difference along a trace.
 
@@ -82,12 +87,16 @@ def cut_strip(
         How far to go along the normals on both sides, pixels.
     sign : {1, -1}
         -1 turns the difference over, so that the later epoch counts positive.
+    stretch : float64 array, shape (n,), optional
+        What the offsets are multiplied by at each point of the trace: lobes that
+        do not run parallel then lie straight, both of them.
     """
     half = int(np.ceil(reach))
     offsets = np.arange(-half, half + 1, dtype=float)
-    values = straighten(difference.pixels, trace, offsets)
-    variance = straighten(difference.variance, trace, offsets, fill=np.inf)
-    bad = straighten((difference.mask != 0).view(np.uint8), trace, offsets, fill=1.0)
+    across = offsets if stretch is None else np.outer(offsets, stretch)
+    values = straighten(difference.pixels, trace, across)
+    variance = straighten(difference.variance, trace, across, fill=np.inf)
+    bad = straighten((difference.mask != 0).view(np.uint8), trace, across, fill=1.0)
     # A sample leans on four pixels: all of them must be sound.
     good = (bad < 1e-6) & np.isfinite(variance) & (variance > 0.0)
     weight = np.where(good, 1.0 / np.where(good, variance, 1.0), 0.0)
