@@ -56,7 +56,7 @@ def test_a_crowded_field_is_quiet(tmp_path, template, science):
 def test_a_real_variable_is_listed_where_it_is(tmp_path):
     """A microlensing event at x = 100, y = 101 (0-based) of the named frame."""
     folder = "ogle_blg171_i"
-    row, candidates, residuals = run(
+    _, candidates, residuals = run(
         tmp_path, f"{folder}/o204172.7s.fts", f"{folder}/o207131.7s.fts"
     )
     brightest = residuals[np.argmax(np.abs(residuals["snr"]))]
