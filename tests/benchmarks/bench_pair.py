@@ -56,12 +56,12 @@ def make(folder, seed, size, n_stars):
 
 def run_here(small, large):
     """Warm up on the small night, time the large one, print one JSON line."""
-    from latelight.config import load_config
-    from latelight.night.run import run_night
+    from latelight.cli import main as latelight
 
-    run_night(load_config(Path(small)), jobs=1)
+    latelight(["run", small, "--quiet"])
     start = time.perf_counter()
-    run_night(load_config(Path(large)), jobs=1)
+    if latelight(["run", large, "--quiet"]) != 0:
+        sys.exit("the pair failed")
     seconds = time.perf_counter() - start
     peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024**2
     print(json.dumps({"total": round(seconds, 3), "peak_gb": round(peak, 3)}))
