@@ -323,7 +323,7 @@ def _candidate_cells(row: CandidateRow) -> tuple[str, ...]:
         speed = f"{row.speed:.1f} ± {row.speed_err:.1f}"
     towards = "-"
     if row.normal_pa is not None and row.normal_pa_err is not None:
-        towards = f"{row.normal_pa:.0f}° ± {row.normal_pa_err:.0f}°"
+        towards = f"{row.normal_pa:.1f}° ± {row.normal_pa_err:.1f}°"
     score = "-" if row.score is None else f"{row.score:+.1f}"
     snr = f"{row.snr:.1f}"
     return row.id, position, snr, speed, towards, row.source or "-", score

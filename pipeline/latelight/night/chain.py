@@ -90,7 +90,8 @@ def process_pair(task: PairTask) -> Outcome:
         except LatelightError as error:
             journal.close_failed(str(error))
         except Exception as error:
-            reason = f"unexpected {type(error).__name__}: {error}"
+            where = journal.at or "chain"
+            reason = f"{where}: unexpected {type(error).__name__}: {error}"
             journal.close_failed(reason, trace=traceback.format_exc())
     for text in dict.fromkeys(f"{w.category.__name__}: {w.message}" for w in caught):
         journal.say(text, stage="", level=logging.WARNING)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Literal
 
 import numpy as np
@@ -98,7 +98,7 @@ def find_all(
     with journal.stage("arcs"):
         arcs = find_arcs(difference, stars=stars, settings=config.arcs)
     with journal.stage("motion"):
-        moving = _motions(difference, arcs, pair, config)
+        arcs, moving = _motions(difference, arcs, pair, config)
     with journal.stage("origin"):
         origins = {
             index: _best_origin(motion, pair, calibration, sources, config)
@@ -133,16 +133,28 @@ def find_all(
 
 def _motions(
     difference: Difference, arcs: tuple[Arc, ...], pair: Pair, config: NightConfig
-) -> dict[int, Motion]:
-    """Return the motion of every arc that is worth a look, by its index."""
+) -> tuple[tuple[Arc, ...], dict[int, Motion]]:
+    """Measure every arc that is worth a look.
+
+    Returns the arcs, those that cannot be measured set aside with the reason, and
+    the motions by the index of their arc.
+    """
     later: Literal["science", "template"] = (
         "science" if pair.science.mjd > pair.template.mjd else "template"
     )
-    return {
-        index: measure_motion(difference, arc, later=later, settings=config.motion)
-        for index, arc in enumerate(arcs)
-        if arc.verdict == "arc"
-    }
+    judged: list[Arc] = []
+    moving: dict[int, Motion] = {}
+    for index, arc in enumerate(arcs):
+        verdict = arc.verdict
+        if verdict == "arc":
+            try:
+                moving[index] = measure_motion(
+                    difference, arc, later=later, settings=config.motion
+                )
+            except ValueError as error:
+                verdict = f"not measurable: {error}"
+        judged.append(replace(arc, verdict=verdict))
+    return tuple(judged), moving
 
 
 def _best_origin(

@@ -31,6 +31,8 @@ class Journal:
         shows what went well.
     events : list of Event
         In order.
+    at : str
+        The stage that is running, or that failed; empty between stages.
     """
 
     def __init__(self, pair: Pair) -> None:
@@ -38,6 +40,7 @@ class Journal:
         self._start = time.perf_counter()
         self.row: PairRow = failed_pair(pair, "")
         self.events: list[Event] = []
+        self.at = ""
 
     def add(self, **facts: Any) -> None:
         """Fill fields of the row."""
@@ -51,7 +54,9 @@ class Journal:
     def stage(self, name: str) -> Iterator[None]:
         """Time a stage; one that fails leaves no line but the pair's."""
         start = time.perf_counter()
+        self.at = name
         yield
+        self.at = ""
         seconds = time.perf_counter() - start
         memory = peak_memory_mb()
         self.events.append(
@@ -72,5 +77,5 @@ class Journal:
         seconds, memory = time.perf_counter() - self._start, peak_memory_mb()
         self.add(seconds=seconds, peak_memory=memory)
         self.events.append(
-            Event(message, self._name, "", seconds, memory, level, trace)
+            Event(message, self._name, self.at, seconds, memory, level, trace)
         )
