@@ -121,7 +121,7 @@ def search_lobes(
     """
     near = np.arange(-3.0, 4.0) * max(0.25 * width, 0.7)
     step = max(0.35 * width, 1.0)
-    steps = np.arange(1.0, np.ceil(max_shift / step) + 1.0)
+    steps = np.arange(1.0, max(np.floor(max_shift / step), 1.0) + 1.0)
     far = step * np.concatenate([-steps[::-1], [-0.5, 0.5], steps])
     shapes = [
         (
@@ -243,8 +243,8 @@ def _summary(
     by_shape = weight.sum(axis=(1, 2, 3))
     intrinsic = np.sqrt(np.maximum(table.widths**2 - prior.psf_fwhm**2, 0.0))
     width, width_err = _mean_and_err(intrinsic, by_shape)
-    late_height, late_err = _mean_and_err(table.amplitude, weight)
-    early_height, early_err = _mean_and_err(table.amplitude * table.ratios, weight)
+    late_height, late_err = _height(table.amplitude, weight)
+    early_height, early_err = _height(table.amplitude * table.ratios, weight)
     i, j, k, n = np.unravel_index(np.argmax(table.log_p), table.log_p.shape)
     shape = standard_shape(float(table.tails[i]))
     model = table.amplitude[i, j, k, n] * (
@@ -306,7 +306,7 @@ def fit_one_lobe(
     widths = np.array([w for w, _ in shapes])
     i, j = np.unravel_index(np.argmax(log_p), log_p.shape)
     place = float(np.average(places, weights=weight.sum(axis=0)))
-    height, height_err = _mean_and_err(amplitude, weight)
+    height, height_err = _height(amplitude, weight)
     intrinsic = np.sqrt(np.maximum(widths**2 - prior.psf_fwhm**2, 0.0))
     narrow, narrow_err = _mean_and_err(intrinsic, weight.sum(axis=1))
     shape = standard_shape(shapes[i][1])
@@ -347,6 +347,16 @@ def _mean_and_err(values: FloatArray, weight: FloatArray) -> tuple[float, float]
     mean = float((values * weight).sum() / weight.sum())
     variance = float(((values - mean) ** 2 * weight).sum() / weight.sum())
     return mean, float(np.sqrt(variance))
+
+
+def _height(amplitude: FloatArray, weight: FloatArray) -> tuple[float, float]:
+    """Return the geometric mean of amplitudes, and 1 sigma.
+
+    Overlapping lobes leave a long tail of great heights that nearly cancel.
+    """
+    log = np.log(np.where(weight > 0.0, amplitude, 1.0))
+    mean, err = _mean_and_err(log, weight)
+    return float(np.exp(mean)), float(np.exp(mean) * err)
 
 
 def _quantiles(values: FloatArray, weight: FloatArray) -> tuple[float, float, float]:

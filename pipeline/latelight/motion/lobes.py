@@ -44,12 +44,15 @@ class LobePrior:
 
         The nearer the lobes, the more alike: dust is smooth over a fraction of a
         lobe, so the scatter of the ratio grows until the lobes are well apart.
-        Distances are even in their logarithm, and even in themselves below a width.
+        Lobes that nearly cancel are seldom found, so the chance of a distance rises
+        with it up to a width; beyond some widths, large distances are the rarer.
         """
-        apart = 1.0 - np.exp(-0.5 * (distance / width) ** 2)
+        widths = distance / width
+        apart = 1.0 - np.exp(-0.5 * widths**2)
         sigma = self.ratio_scatter * np.sqrt(0.05 + 0.95 * apart)
         like = -0.5 * (np.log(ratio) / sigma) ** 2 - np.log(sigma)
-        return like - 1.5 * np.log1p(distance / width)
+        near = np.log(np.maximum(widths, 1e-9) / (1.0 + widths))
+        return like + near - 1.5 * np.log1p(widths / 4.0)
 
     def allows(self, width: float, tail: float) -> bool:
         """Return whether a lobe's Gaussian is as wide as the PSF or wider."""

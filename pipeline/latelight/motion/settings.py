@@ -38,7 +38,7 @@ class MotionSettings(StageSettings):
         "1 sigma of its natural logarithm.",
     )
     texture: float = Field(
-        0.08,
+        0.06,
         ge=0.0,
         le=1.0,
         description="How far patchy dust pulls the ridge of an echo to one side, "
