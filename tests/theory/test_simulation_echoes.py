@@ -105,6 +105,24 @@ def test_the_rendered_front_moves_as_the_exact_geometry_says(factor, turn):
     assert truth.shift_arcsec == pytest.approx(moved, rel=0.01)
 
 
+def test_shift_is_the_same_seen_from_either_epoch():
+    """The speed is that half-way, so swapping the epochs changes nothing.
+
+    In 250 days this echo moves 10 arcsec and slows down by about 0.1 %.
+    """
+    echo = an_echo(0.6, 20.0)
+    early, late = an_exposure(59_875.0), an_exposure(60_125.0)
+    blank = np.full(SHAPE, 200.0, np.float32)
+    one, other = (
+        measure_echo(echo, *pair, science_variance=blank, template_variance=blank)
+        for pair in ((late, early), (early, late))
+    )
+    assert one.shift_arcsec == pytest.approx(other.shift_arcsec, rel=2e-4)
+    assert one.normal_pa == pytest.approx(other.normal_pa, abs=0.05)
+    assert one.bound == pytest.approx(other.bound, rel=1e-6)
+    assert one.bound_positive == pytest.approx(other.bound_negative, rel=1e-6)
+
+
 def test_the_ridge_lies_where_the_delay_is_the_age_of_peak_light():
     """Thin dust, a slow front: the crest is at delay = age - time of peak."""
     echo = an_echo()
