@@ -7,7 +7,7 @@ from scipy import fft
 from scipy.interpolate import make_interp_spline
 
 from latelight.masks import MaskBit
-from latelight.mask_growth import grow_mask
+from latelight.mask_growth import disc, grow_mask
 from latelight.records import (
     FloatArray,
     MaskArray,
@@ -250,22 +250,28 @@ def convolve_mask(mask: MaskArray, kernel: SpatialKernel) -> MaskArray:
     uint16 array, shape (ny, nx)
         Every bit kept, and spread to where the kernel's weight of the bad pixel
         exceeds 0.1 of its peak (0.001 for saturated, bled or spiked pixels, whose
-        true value is unknown and large).
+        true value is unknown and large); the frame's rim gets the edge bit.
     """
-    _, nx = kernel.shape
-    middle = np.abs(kernel.at((nx - 1) / 2, (kernel.shape[0] - 1) / 2))
-    unknown = (mask & _UNKNOWN).astype(np.uint16)
-    filled = (mask & ~np.uint16(_UNKNOWN)).astype(np.uint16)
-    grown = grow_mask(unknown, footprint=_reach(middle, _UNKNOWN_LIMIT))
-    return grown | grow_mask(filled, footprint=_reach(middle, _FILLED_LIMIT))
+    ny, nx = kernel.shape
+    middle = np.abs(kernel.at((nx - 1) / 2, (ny - 1) / 2))
+    far, near = _reach(middle, _UNKNOWN_LIMIT), _reach(middle, _FILLED_LIMIT)
+    unknown = (mask & np.uint16(_UNKNOWN)).astype(np.uint16)
+    filled = mask & ~np.uint16(_UNKNOWN)
+    out = grow_mask(unknown, footprint=disc(far)) | grow_mask(
+        filled, footprint=disc(near)
+    )
+    rim = int(near)
+    if rim > 0:  # light from beyond the frame is missing there
+        for edge in (out[:rim], out[-rim:], out[:, :rim], out[:, -rim:]):
+            edge |= np.uint16(MaskBit.EDGE)
+    return out
 
 
-def _reach(weights: FloatArray, limit: float) -> np.ndarray:
-    """Return the disc within which a kernel's weight exceeds a limit."""
+def _reach(weights: FloatArray, limit: float) -> float:
+    """Return the radius within which a kernel's weight exceeds a limit."""
     half = weights.shape[0] // 2
     step = np.arange(-half, half + 1)
     radius = np.hypot(step[:, None], step[None, :])
-    # A disc holding 98 % of such pixels: stray noise in the wings is no reach.
+    # That of 98 % of such pixels: stray noise in the wings is no reach.
     strong = np.sort(radius[weights > limit * weights.max()])
-    edge = strong[int(0.98 * (strong.size - 1))]
-    return radius <= edge
+    return float(strong[int(0.98 * (strong.size - 1))])
