@@ -21,6 +21,7 @@ __all__ = ["Profile", "Strip", "cut_strip", "mean_profile", "noise_correlation"]
 _MAX_LAG = 7
 _REGION_PX = 110
 _CLIP_SIGMA = 4.0
+_FEWEST_ROWS = 12
 # Free background of a profile, in units of its noise: flat and sloping.
 _BACKGROUND_SIGMAS = 10.0
 
@@ -157,6 +158,11 @@ def mean_profile(
     width_px : float
         Full width of a lobe, for ``excess``.
 
+    Raises
+    ------
+    ValueError
+        If too few rows hold any usable pixel.
+
     Notes
     -----
     Averaged along the arc, noise with the correlation ``R(lag)`` has the
@@ -165,7 +171,15 @@ def mean_profile(
     """
     weight = strip.weight.sum(axis=1)
     # A row with few data has wild values and hides in the covariance.
-    use = weight > 0.2 * np.median(weight[weight > 0.0]) if weight.any() else weight > 0
+    use = weight > 0.0
+    if use.any():
+        use = weight > 0.2 * np.median(weight[use])
+    if use.sum() < _FEWEST_ROWS:
+        msg = (
+            f"the arc must have {_FEWEST_ROWS} usable rows of pixels across it, got "
+            f"{int(use.sum())}; it lies in masked pixels or off the frame"
+        )
+        raise ValueError(msg)
     offsets, weight = strip.offsets[use], weight[use]
     values = (strip.values * strip.weight).sum(axis=1)[use] / weight
     across = _across_covariance(correlation, normal_angle, strip.offsets.size)

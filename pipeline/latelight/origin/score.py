@@ -256,13 +256,15 @@ def _density_ratio(
         density = direction_density(angles, across=across, tilt=1.0)
         return float(density.mean() / even)
     across, tilt, light = _gradients(known, settings.tilt_scale)
+    density = direction_density(angles[:, None], across=across, tilt=tilt)
+    direction_alone = float(density.mean() / even)
     if not (np.isfinite(seen.speed) and seen.speed > 0.0):
-        density = direction_density(angles[:, None], across=across, tilt=tilt)
-        return float(density.mean() / even)
+        return direction_alone
     slowness = light / _positive_nodes(seen.speed, seen.speed_err)[:, None]
     density = motion_density(angles[:, None, None], slowness, across=across, tilt=tilt)
     even /= np.log(10.0) * settings.speed_decades
-    return float(density.mean() / even)
+    wrong = settings.wrong_speed_fraction
+    return float((1.0 - wrong) * density.mean() / even + wrong * direction_alone)
 
 
 def _gradients(

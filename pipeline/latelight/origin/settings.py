@@ -21,7 +21,7 @@ class OriginSettings(StageSettings):
         "[[sources]] as columns; relative to this file.",
     )
     tilt_scale: float = Field(
-        0.5,
+        0.35,
         gt=0.0,
         le=10.0,
         description="Typical slope of dust sheets against the plane of the sky "
@@ -40,6 +40,13 @@ class OriginSettings(StageSettings):
         le=0.5,
         description="Share of arcs taken to move in any direction whatever their "
         "source.",
+    )
+    wrong_speed_fraction: float = Field(
+        0.1,
+        ge=0.0,
+        le=1.0,
+        description="Share of measured speeds taken to be wrong; their direction still "
+        "counts.",
     )
     speed_decades: float = Field(
         3.0,
