@@ -386,7 +386,11 @@ def search_bends(
                 sum_a[i + 1] = sum_a[i] + a
                 sum_b[i + 1] = sum_b[i] + b
             for first in range(anchor_last + 1):
+                if sum_b[first + 1] <= sum_b[first]:  # no arc ends on a masked block
+                    continue
                 for last in range(max(anchor_first, first + 1), n_blocks):
+                    if sum_b[last + 1] <= sum_b[last]:
+                        continue
                     a = sum_a[last + 1] - sum_a[first]
                     b = sum_b[last + 1] - sum_b[first]
                     if a > 0.0 and b > 0.0 and a * a > result[0] * b:

@@ -10,10 +10,21 @@ from latelight.arcs.fit import BLOCK_PX, Fit, PolarSums, level_free, sum_along
 from latelight.arcs.lobes import Lobes
 from latelight.arcs.profiles import lobe_width
 from latelight.arcs.settings import ArcSettings
-from latelight.arcs.surroundings import Line, Ring, filled, follow_line, follow_ring
+from latelight.arcs.surroundings import (
+    Line,
+    Ring,
+    filled,
+    follow_line,
+    follow_ring,
+    ring_about,
+)
 from latelight.records import BoolArray, Difference, FloatArray, StarList
 
 __all__ = ["BrightStars", "Evidence", "gather"]
+
+
+_PIECE_BLOCKS = 3
+"""Blocks that share one brightness: filaments are longer than 24 pixels."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -53,10 +64,13 @@ class Evidence:
 
     Attributes
     ----------
+    difference : Difference
+        Where it was found; what earlier ridges explain is masked.
     fit : Fit
         Circle, stretch and lobes.
-    snr, single_snr : float
-        Calibrated significance of the pair of lobes and of the best single one.
+    snr, pair_snr, single_snr : float
+        Calibrated significance with the brightness free along the arc, that of the
+        pair of lobes of even brightness, and that of the best single lobe.
     noise_ratio : float
         Noise of such ridges over that stated by the variance.
     fwhm_px, lobe_width_px : float
@@ -69,18 +83,16 @@ class Evidence:
         Fraction of the length that takes part in the signal.
     masked : float
         Fraction of the lobes' pixels that are masked or outside the frame.
-    line : Line
-        The straight line through the ridge.
-    ring : Ring
-        The circle through the ridge that is lit most beyond it.
     settings : ArcSettings
         Limits of what an arc may be.
     stars : BrightStars
         Bright stars of the frame.
     """
 
+    difference: Difference
     fit: Fit
     snr: float
+    pair_snr: float
     single_snr: float
     noise_ratio: float
     fwhm_px: float
@@ -89,21 +101,31 @@ class Evidence:
     trimmed_snr: float
     filled: float
     masked: float
-    line: Line
-    ring: Ring
     settings: ArcSettings
     stars: BrightStars
 
     @property
     def two_lobed(self) -> bool:
         """The second lobe improves the fit by three sigma."""
-        return self.snr**2 - self.single_snr**2 > 9.0
+        return self.pair_snr**2 - self.single_snr**2 > 9.0
 
     @property
     def weaker_share(self) -> float:
         """Height of the weaker lobe over that of the brighter."""
         heights = (self.fit.pair.positive_height, -self.fit.pair.negative_height)
         return min(heights) / max(heights)
+
+    def line(self) -> Line:
+        """Follow the straight line through the ridge."""
+        return follow_line(self.difference, self.fit, self.noise_ratio)
+
+    def ring(self) -> Ring:
+        """Find the circle through the ridge that is lit most beyond it."""
+        return follow_ring(self.difference, self.fit, self.noise_ratio)
+
+    def ring_about(self, x: float, y: float) -> Ring:
+        """Follow the circle about a place through the middle of the ridge."""
+        return ring_about(self.difference, self.fit, x, y, self.noise_ratio)
 
     @property
     def length_px(self) -> float:
@@ -116,7 +138,7 @@ def gather(
     fit: Fit,
     settings: ArcSettings,
     *,
-    snr: float,
+    pair_snr: float,
     single_snr: float,
     noise_ratio: float,
     stars: BrightStars,
@@ -127,8 +149,10 @@ def gather(
     matched, power = _blocks(sums, fit.pair.profile(half_height))
     block_snr = matched / np.sqrt(np.maximum(power, 1e-30)) / noise_ratio
     return Evidence(
+        difference=difference,
         fit=fit,
-        snr=snr,
+        snr=_uneven(pair_snr, block_snr),
+        pair_snr=pair_snr,
         single_snr=single_snr,
         noise_ratio=noise_ratio,
         fwhm_px=difference.fwhm_px,
@@ -137,8 +161,6 @@ def gather(
         trimmed_snr=_trimmed(matched, power) / noise_ratio,
         filled=filled(matched, power),
         masked=_masked(sums, fit.pair),
-        line=follow_line(difference, fit, noise_ratio),
-        ring=follow_ring(difference, fit, noise_ratio),
         settings=settings,
         stars=stars,
     )
@@ -147,6 +169,19 @@ def gather(
 def _blocks(sums: PolarSums, profile: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Return matched signal and power of a profile in each block."""
     return level_free(sums) @ profile, sums.weight @ profile**2
+
+
+def _uneven(pair_snr: float, block_snr: FloatArray) -> float:
+    """Return the significance with the brightness free along the arc.
+
+    With n pieces of significance x the perfect filter would reach sqrt(sum x^2);
+    noise adds n - 1 to the sum beyond the square of the even filter's.
+    """
+    n = max(round(block_snr.size / _PIECE_BLOCKS), 1)
+    pieces = [part.sum() / np.sqrt(part.size) for part in np.array_split(block_snr, n)]
+    even = block_snr.sum() / np.sqrt(block_snr.size)
+    gain = float(np.sum(np.square(pieces)) - even**2) - (n - 1)
+    return float(np.sqrt(pair_snr**2 + max(gain, 0.0)))
 
 
 def _trimmed(matched: FloatArray, power: FloatArray) -> float:

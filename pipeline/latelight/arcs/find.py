@@ -86,7 +86,7 @@ def find_arcs(
             left,
             refined,
             settings,
-            snr=noise.snr(refined.pair),
+            pair_snr=noise.snr(refined.pair),
             single_snr=noise.snr(refined.single),
             noise_ratio=noise.at(refined.pair.sigma_px),
             stars=bright,

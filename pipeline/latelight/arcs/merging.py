@@ -40,6 +40,9 @@ def mask_explained(mask: MaskArray, evidence: Evidence, *, artefact: str) -> Non
         What it is part of: nothing, a line across the frame, a ring.
     """
     fit = evidence.fit
+    # Both look at the ridge itself: before it is masked.
+    line = evidence.line() if artefact == "line" else None
+    ring = evidence.ring() if artefact == "ring" else None
     x, y = fit.circle.point(np.linspace(-1.1, 1.1, 23) * fit.half_length, np.zeros(23))
     low, high = fit.pair.reach
     pad = max(-low, high) + _flank(fit)
@@ -47,10 +50,9 @@ def mask_explained(mask: MaskArray, evidence: Evidence, *, artefact: str) -> Non
     yy, xx = np.mgrid[box]
     s, u = fit.circle.coordinates(xx, yy)
     mask[box][_on(fit, s, u)] |= np.uint16(_EXPLAINED)
-    if artefact == "line":
-        _mask_line(mask, evidence.line.circle, 3.0 * evidence.lobe_width_px)
-    if artefact == "ring":
-        ring = evidence.ring
+    if line is not None:
+        _mask_line(mask, line.circle, 3.0 * evidence.lobe_width_px)
+    if ring is not None:
         reach = ring.radius_px + _flank(fit)
         box = _box(mask.shape, np.array([ring.x]), np.array([ring.y]), reach)
         yy, xx = np.mgrid[box]

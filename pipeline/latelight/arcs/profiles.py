@@ -9,6 +9,7 @@ Gaussian: a Gaussian of sigma s convolved with an exponential of scale t (Grushk
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from scipy.special import erfcx
@@ -65,25 +66,36 @@ def lobe_profile(offset: FloatArray, sigma: float, tail: float) -> FloatArray:
     sigma : float
         Sigma of the Gaussian, pixels, positive.
     tail : float
-        Scale of the exponential, pixels; the tail points to positive offsets
-        when it is positive; 0 gives the Gaussian.
+        Scale of the exponential, pixels, 0.2 to 20 sigma; the tail points to
+        positive offsets when it is positive; 0 gives the Gaussian.
     """
     if tail == 0.0:
         return np.exp(-0.5 * (offset / sigma) ** 2)
-    fine = np.linspace(-3.0 * sigma, 3.0 * sigma, 601)
-    peak = fine[np.argmax(_modified(fine, sigma, abs(tail)))]
-    heights = _modified(np.sign(tail) * offset + peak, sigma, abs(tail))
-    return heights / _modified(np.array([peak]), sigma, abs(tail))[0]
+    ratio = abs(tail) / sigma
+    ratios, modes, heights = _modes()
+    mode = float(np.interp(ratio, ratios, modes))
+    height = float(np.interp(ratio, ratios, heights))
+    return _modified(np.sign(tail) * offset / sigma + mode, ratio) / height
 
 
-def _modified(x: FloatArray, sigma: float, tail: float) -> FloatArray:
+def _modified(x: FloatArray, ratio: float) -> FloatArray:
+    """Return a unit Gaussian convolved with exp(-x / ratio), up to a factor."""
     # erfcx keeps the product exp * erfc finite on both sides.
-    z = (sigma / tail - x / sigma) / np.sqrt(2.0)
+    z = (1.0 / ratio - x) / np.sqrt(2.0)
     right = z < -5.0
-    safe = np.where(right, 0.0, z)
-    near = np.exp(-0.5 * (x / sigma) ** 2) * erfcx(safe)
-    far = 2.0 * np.exp(0.5 * (sigma / tail) ** 2 - x / tail)
+    near = np.exp(-0.5 * x**2) * erfcx(np.where(right, 0.0, z))
+    far = 2.0 * np.exp(0.5 / ratio**2 - x / ratio)
     return np.where(right, far, near)
+
+
+@lru_cache(maxsize=1)
+def _modes() -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Tabulate place and height of the peak against the exponential's scale."""
+    ratios = np.geomspace(0.2, 20.0, 400)
+    x = np.linspace(-1.0, 3.0, 4001)
+    curves = [_modified(x, float(ratio)) for ratio in ratios]
+    modes = np.array([x[curve.argmax()] for curve in curves])
+    return ratios, modes, np.array([curve.max() for curve in curves])
 
 
 def lobe_width(sigma: float, tail: float) -> float:
@@ -152,5 +164,6 @@ def _tabulated(shapes: list[tuple[float, float]], n_shifts: int) -> LobeShapes:
         correlation = np.correlate(row, row, mode="full")[row.size - 1 :]
         size = min(n_shifts, row.size)
         overlap[i, :size] = correlation[:size] / correlation[0]
-    least = np.maximum(1, np.round(0.7 * np.hypot(sigma, 0.5 * tail)))
+    # Closer lobes look the same, only fainter.
+    least = np.maximum(1, np.round(np.hypot(sigma, 0.5 * tail)))
     return LobeShapes(profiles, widths, sigma, tail, overlap, least.astype(np.int64))

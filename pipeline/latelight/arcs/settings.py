@@ -13,7 +13,7 @@ class ArcSettings(StageSettings):
     """Table ``[arcs]``: which ridges are looked for, and which count as arcs."""
 
     threshold: float = Field(
-        7.0,
+        7.5,
         ge=4.0,
         le=100.0,
         description="Least significance of an arc, both lobes together [sigma].",
@@ -23,6 +23,12 @@ class ArcSettings(StageSettings):
         ge=3.0,
         le=100.0,
         description="Least response of the coarse filters worth a closer look [sigma].",
+    )
+    shortest_px: float = Field(
+        40.0,
+        ge=16.0,
+        le=1000.0,
+        description="Least length of an arc [pixels].",
     )
     longest_px: float = Field(
         250.0,
@@ -37,7 +43,7 @@ class ArcSettings(StageSettings):
         description="Greatest full width of one lobe at half maximum [pixels].",
     )
     least_radius_px: float = Field(
-        150.0,
+        200.0,
         ge=30.0,
         le=10000.0,
         description="Radius of curvature below which a ridge is a ring, not an arc "

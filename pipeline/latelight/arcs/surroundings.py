@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -12,7 +12,7 @@ from latelight.arcs.geometry import Circle
 from latelight.arcs.profiles import lobe_profile
 from latelight.records import Difference, FloatArray
 
-__all__ = ["Line", "Ring", "filled", "follow_line", "follow_ring"]
+__all__ = ["Line", "Ring", "filled", "follow_line", "follow_ring", "ring_about"]
 
 _LINE_SLOPES = np.linspace(-0.05, 0.05, 41)
 _RADII_PX = 18.0 * 1.13 ** np.arange(15)
@@ -59,8 +59,9 @@ class Ring:
         Significance of the arc's own profile on the rest of the circle.
     share : float
         Height there over the height on the arc.
-    lit : int
-        How many of the four sectors of the rest show it.
+    lit, dark : int
+        How many of the four sectors of the rest show it, and do not; those without
+        data count as neither.
     """
 
     x: float
@@ -69,6 +70,7 @@ class Ring:
     snr: float
     share: float
     lit: int
+    dark: int
 
 
 def filled(matched: FloatArray, power: FloatArray) -> float:
@@ -138,13 +140,28 @@ def follow_line(difference: Difference, fit: Fit, noise_ratio: float) -> Line:
 
 def follow_ring(difference: Difference, fit: Fit, noise_ratio: float) -> Ring:
     """Look for the arc's own profile on the rest of every circle through it."""
-    best = Ring(fit.circle.x, fit.circle.y, np.inf, 0.0, 0.0, 0)
+    best = Ring(fit.circle.x, fit.circle.y, np.inf, 0.0, 0.0, 0, 0)
     for radius in _RADII_PX:
         for side in (1.0, -1.0):
             ring = _ring(difference, fit, side * float(radius), noise_ratio)
             if (ring.lit, ring.snr) > (best.lit, best.snr):
                 best = ring
     return best
+
+
+def ring_about(
+    difference: Difference, fit: Fit, x: float, y: float, noise_ratio: float
+) -> Ring:
+    """Look for the arc's own profile on the rest of the circle about a place."""
+    s, _ = (float(v) for v in fit.circle.coordinates(x, y))
+    middle = fit.circle.moved(float(np.clip(s, -fit.half_length, fit.half_length)), 0.0)
+    angle = float(np.arctan2(y - middle.y, x - middle.x))
+    side = 1.0 if np.cos(angle - middle.angle) > 0.0 else -1.0
+    aimed = Circle(middle.x, middle.y, angle if side > 0 else angle + np.pi, 0.0)
+    distance = float(np.hypot(x - middle.x, y - middle.y))
+    if distance < _RADII_PX[0]:
+        return Ring(x, y, distance, 0.0, 0.0, 0, 0)
+    return _ring(difference, replace(fit, circle=aimed), side * distance, noise_ratio)
 
 
 def _ring(difference: Difference, fit: Fit, radius: float, noise_ratio: float) -> Ring:
@@ -156,7 +173,7 @@ def _ring(difference: Difference, fit: Fit, radius: float, noise_ratio: float) -
     half = min(fit.half_length, abs(radius))
     on, rest = np.abs(sums.along) <= half, np.abs(sums.along) > half + BLOCK_PX
     weight = sums.weight[on].sum(axis=0)
-    nothing = Ring(x, y, abs(radius), 0.0, 0.0, 0)
+    nothing = Ring(x, y, abs(radius), 0.0, 0.0, 0, 0)
     if weight.min() <= 0.0:
         return nothing
     profile = sums.signal[on].sum(axis=0) / weight
@@ -169,12 +186,16 @@ def _ring(difference: Difference, fit: Fit, radius: float, noise_ratio: float) -
     power = weights @ profile**2
     if power.sum() <= 0.0:
         return nothing
-    lit = 0
+    lit = dark = 0
+    usual = float(sums.weight[on].mean(axis=0) @ profile**2)
     for part, part_power in zip(
         np.array_split(matched, _SECTORS), np.array_split(power, _SECTORS), strict=True
     ):
-        share = part.sum() / max(float(part_power.sum()), 1e-30)
-        lit += int(_snr(part, part_power) > 2.0 * noise_ratio and share > 0.25)
+        if part_power.sum() < 0.3 * usual * part.size:
+            continue
+        share = part.sum() / part_power.sum()
+        shines = _snr(part, part_power) > 2.0 * noise_ratio and share > 0.25
+        lit, dark = lit + int(shines), dark + int(not shines)
     return Ring(
         x,
         y,
@@ -182,6 +203,7 @@ def _ring(difference: Difference, fit: Fit, radius: float, noise_ratio: float) -
         _snr(matched, power) / noise_ratio,
         float(matched.sum() / power.sum()),
         lit,
+        dark,
     )
 
 

@@ -12,6 +12,12 @@ from latelight.arcs.evidence import Evidence
 
 __all__ = ["ARTEFACTS", "Artefact", "judge"]
 
+_SPIKE_SHARE = 0.03
+"""A spike holds no more than this share of its star's light."""
+_HALO_SHARE = 0.05
+"""A halo holds no more than this share of its star's light."""
+_HALO_RADIUS_PX = 120.0
+
 Extent = Literal["", "line", "ring"]
 
 
@@ -50,52 +56,61 @@ def masked(evidence: Evidence) -> bool:
 
 def trail(evidence: Evidence) -> bool:
     """Tell whether a straight, single, evenly lit line goes on beyond the ends."""
-    line = evidence.line
     narrow = evidence.lobe_width_px < 1.5 * evidence.fwhm_px
-    alone = evidence.single_snr**2 > 0.8 * evidence.snr**2
+    if not (narrow or _alone(evidence)):
+        return False
+    line = evidence.line()
     long = line.length_px > evidence.settings.longest_px or line.to_edges
-    lit = line.beyond_snr > 4.0 and line.filled > 0.6
-    return (narrow or alone) and long and lit
+    return long and line.beyond_snr > 4.0 and line.filled > 0.6
 
 
 def spike(evidence: Evidence) -> bool:
-    """Tell whether a narrow ridge points at a bright star it could come from."""
+    """Tell whether a narrow line points at a star that could cast it."""
+    pair = evidence.fit.pair
+    close = abs(pair.positive - pair.negative) < 1.2 * evidence.fwhm_px
     if evidence.lobe_width_px > 1.6 * evidence.fwhm_px:
+        return False
+    if not (close or _alone(evidence)):
         return False
     stars = evidence.stars
     s, u = evidence.fit.circle.coordinates(stars.x, stars.y)
     aimed = np.abs(u) < 1.5 * evidence.fwhm_px + 0.03 * np.abs(s)
     near = np.abs(s) < 2.0 * evidence.length_px
-    return bool(np.any(aimed & near & (_light(evidence) < 0.03 * stars.flux)))
+    light = _height(evidence) * evidence.lobe_width_px * evidence.length_px
+    return bool(np.any(aimed & near & (light < _SPIKE_SHARE * stars.flux)))
 
 
 def halo(evidence: Evidence) -> bool:
-    """Tell whether it lies square to the direction of a star bright enough."""
+    """Tell whether the circle about a bright star through it goes on."""
     stars = evidence.stars
     s, u = evidence.fit.circle.coordinates(stars.x, stars.y)
-    square = np.abs(s) < 0.5 * np.abs(u)
-    near = np.abs(u) < _HALO_RADIUS_PX
-    height = max(evidence.fit.pair.positive_height, -evidence.fit.pair.negative_height)
-    disc = np.pi * u**2 * height
-    return bool(np.any(square & near & (disc < 0.03 * stars.flux)))
+    square = np.abs(s) < 0.5 * (np.abs(u) + evidence.fit.half_length)
+    light = np.pi * u**2 * _height(evidence)
+    could = square & (np.abs(u) < _HALO_RADIUS_PX) & (light < _HALO_SHARE * stars.flux)
+    for x, y in zip(stars.x[could].tolist(), stars.y[could].tolist(), strict=True):
+        found = evidence.ring_about(x, y)
+        if found.lit >= max(1, found.dark) and found.snr > 3.0 and found.share > 0.2:
+            return True
+    return False
 
 
 def ring(evidence: Evidence) -> bool:
     """Tell whether the rest of a circle through it shines too."""
-    found = evidence.ring
-    return found.lit >= 3 and found.snr > 4.5 and found.share > 0.3
+    found = evidence.ring()
+    round_it = found.lit >= max(1, found.dark)
+    return round_it and found.snr > 3.5 and found.share > 0.35
 
 
 def curled(evidence: Evidence) -> bool:
     """Tell whether its curvature is surely stronger than any arc's."""
     fit = evidence.fit
-    surely = abs(fit.bend) - 3.0 * fit.bend_err * evidence.noise_ratio
+    surely = abs(fit.bend) - 2.0 * fit.bend_err * evidence.noise_ratio
     return surely > 1.0 / evidence.settings.least_radius_px
 
 
 def lump(evidence: Evidence) -> bool:
     """Tell whether most of the signal comes from one short piece."""
-    return evidence.trimmed_snr < 0.45 * evidence.snr
+    return evidence.trimmed_snr < 0.45 * evidence.pair_snr
 
 
 def patches(evidence: Evidence) -> bool:
@@ -104,8 +119,9 @@ def patches(evidence: Evidence) -> bool:
 
 
 def stubby(evidence: Evidence) -> bool:
-    """Tell whether it is hardly longer than wide."""
-    return evidence.length_px < 3.0 * evidence.lobe_width_px
+    """Tell whether it is shorter than any arc, or hardly longer than wide."""
+    least = max(evidence.settings.shortest_px, 3.0 * evidence.lobe_width_px)
+    return evidence.length_px < least
 
 
 def wide(evidence: Evidence) -> bool:
@@ -113,24 +129,26 @@ def wide(evidence: Evidence) -> bool:
     return evidence.lobe_width_px > evidence.settings.widest_px
 
 
-def _light(evidence: Evidence) -> float:
-    """Return the counts in the brighter lobe."""
+def _alone(evidence: Evidence) -> bool:
+    """Tell whether one lobe says nearly all: four fifths of the chi-square."""
+    return evidence.single_snr**2 > 0.8 * evidence.pair_snr**2
+
+
+def _height(evidence: Evidence) -> float:
+    """Return the height of the brighter lobe, counts per pixel."""
     pair = evidence.fit.pair
-    height = max(pair.positive_height, -pair.negative_height)
-    return height * evidence.lobe_width_px * evidence.length_px
+    return max(pair.positive_height, -pair.negative_height)
 
-
-_HALO_RADIUS_PX = 120.0
 
 ARTEFACTS = (
     Artefact("masked: over half of it lies on bad pixels", masked),
     Artefact("trail: a straight line longer than any arc", trail, "line"),
     Artefact("spike: points at a bright star", spike),
     Artefact("halo: concentric with a bright star", halo),
-    Artefact("ring: the circle goes on, as a ghost or halo does", ring, "ring"),
     Artefact("curled: its radius is shorter than any arc's", curled),
     Artefact("wide: wider than any echo", wide),
-    Artefact("stub: hardly longer than wide", stubby),
+    Artefact("stub: too short, or hardly longer than wide", stubby),
     Artefact("lump: most of the signal comes from a short piece", lump),
     Artefact("patches: most of its length does not shine", patches),
+    Artefact("ring: the circle goes on, as a ghost or halo does", ring, "ring"),
 )
