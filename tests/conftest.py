@@ -49,3 +49,36 @@ def small_night(tmp_path_factory):
         '[origin]\nsource_table = "sources.ecsv"\n'
     )
     return folder
+
+
+@pytest.fixture(scope="session")
+def star_plane():
+    """Return a maker of planes of Gaussian stars sampled at pixel centres.
+
+    ``make(x, y, flux, shape=..., sigma=..., sky=..., noise=..., rng=...)``: white
+    noise of that sigma, or none without ``rng``.
+    """
+    from latelight.records import Plane
+
+    def make(x, y, flux, *, shape, sigma=1.5, sky=200.0, noise=5.0, rng=None):
+        pixels = np.full(shape, sky)
+        reach = int(np.ceil(7 * sigma))
+        for star_x, star_y, star_flux in zip(x, y, flux, strict=True):
+            col = np.arange(round(star_x) - reach, round(star_x) + reach + 1)
+            row = np.arange(round(star_y) - reach, round(star_y) + reach + 1)
+            col = col[(col >= 0) & (col < shape[1])]
+            row = row[(row >= 0) & (row < shape[0])]
+            profile = np.outer(
+                np.exp(-0.5 * ((row - star_y) / sigma) ** 2),
+                np.exp(-0.5 * ((col - star_x) / sigma) ** 2),
+            )
+            pixels[np.ix_(row, col)] += star_flux * profile / (2 * np.pi * sigma**2)
+        if rng is not None:
+            pixels += rng.normal(0.0, noise, shape)
+        return Plane(
+            pixels.astype(np.float32),
+            np.full(shape, noise**2, np.float32),
+            np.zeros(shape, np.uint16),
+        )
+
+    return make

@@ -140,7 +140,7 @@ def test_every_line_of_the_text_names_the_file(load, tmp_path):
         ("[products]\ndifferences = 1\n", "differences: must be true or false"),
         (
             "[registration]\ninterpolation = 'cubic'\n",
-            "should be 'lanczos3' or 'lanczos4'",
+            "should be 'least-squares', 'lanczos4' or 'lanczos3'",
         ),
         (
             "[[sources]]\nname='a'\nra=1\ndec=1\nage_yr=3\n",

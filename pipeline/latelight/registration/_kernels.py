@@ -6,11 +6,10 @@ import numpy as np
 from numba import njit
 
 from latelight.records import FloatArray, IntArray, MaskArray, PixelArray
+from latelight.registration.interpolation import BEFORE, TAPS
 
 __all__ = ["lag_covariance", "measure_stars", "resample_rows"]
 
-_TAPS = 8
-_BEFORE = 3
 _NO_DATA = np.uint16(1)
 # A tap with a smaller share of the weight does not hand its mask bits on.
 _NEGLIGIBLE = 1e-3
@@ -43,11 +42,11 @@ def _inner(
     # over columns takes a third longer (measured).
     a0 = a1 = a2 = a3 = a4 = a5 = a6 = a7 = np.float32(0.0)
     v0 = v1 = v2 = v3 = v4 = v5 = v6 = v7 = np.float32(0.0)
-    for j in range(_TAPS):
+    for j in range(TAPS):
         w = wy[j]
         w2 = w * w
-        row = pixels[y0 + j, x0 : x0 + _TAPS]
-        var = variance[y0 + j, x0 : x0 + _TAPS]
+        row = pixels[y0 + j, x0 : x0 + TAPS]
+        var = variance[y0 + j, x0 : x0 + TAPS]
         a0 += w * row[0]
         a1 += w * row[1]
         a2 += w * row[2]
@@ -89,13 +88,13 @@ def _near_bad(
     """Sum like :func:`_inner`, with mask bits; the edge pixel stands in outside."""
     ny, nx = pixels.shape
     value, spread, total, bad = 0.0, 0.0, 0.0, 0.0
-    for j in range(_TAPS):
-        for i in range(_TAPS):
+    for j in range(TAPS):
+        for i in range(TAPS):
             total += abs(wy[j] * wx[i])
     bits = 0
-    for j in range(_TAPS):
+    for j in range(TAPS):
         y = min(max(y0 + j, 0), ny - 1)
-        for i in range(_TAPS):
+        for i in range(TAPS):
             x = min(max(x0 + i, 0), nx - 1)
             w = wy[j] * wx[i]
             value += w * pixels[y, x]
@@ -150,8 +149,8 @@ def resample_rows(
             ix, iy = int(np.floor(px)), int(np.floor(py))
             wx = weights[int((px - ix) * phases + 0.5)]
             wy = weights[int((py - iy) * phases + 0.5)]
-            x0, y0 = ix - _BEFORE, iy - _BEFORE
-            inside = x0 >= 0 and y0 >= 0 and x0 + _TAPS <= nx and y0 + _TAPS <= ny
+            x0, y0 = ix - BEFORE, iy - BEFORE
+            inside = x0 >= 0 and y0 >= 0 and x0 + TAPS <= nx and y0 + TAPS <= ny
             if inside and near_bad[iy, ix] == 0:
                 value, spread = _inner(pixels, variance, x0, y0, wx, wy)
             else:
@@ -189,14 +188,14 @@ def lag_covariance(
                 qx = x[n] + jacobian[n, 0, 0] * dx + jacobian[n, 0, 1] * dy
                 qy = y[n] + jacobian[n, 1, 0] * dx + jacobian[n, 1, 1] * dy
                 jx, jy = int(np.floor(qx)), int(np.floor(qy))
-                if abs(jx - ix) >= _TAPS or abs(jy - iy) >= _TAPS:
+                if abs(jx - ix) >= TAPS or abs(jy - iy) >= TAPS:
                     continue
                 ux = weights[int((qx - jx) * phases + 0.5)]
                 uy = weights[int((qy - jy) * phases + 0.5)]
                 along_x, along_y = 0.0, 0.0
-                for k in range(max(0, jx - ix), min(_TAPS, _TAPS + jx - ix)):
+                for k in range(max(0, jx - ix), min(TAPS, TAPS + jx - ix)):
                     along_x += wx[k] * ux[k - jx + ix]
-                for k in range(max(0, jy - iy), min(_TAPS, _TAPS + jy - iy)):
+                for k in range(max(0, jy - iy), min(TAPS, TAPS + jy - iy)):
                     along_y += wy[k] * uy[k - jy + iy]
                 covariance[reach + dy, reach + dx] += along_x * along_y
     return covariance / x.size

@@ -151,10 +151,15 @@ class _Stars:
 
 @dataclass(frozen=True, slots=True)
 class _Rough:
-    """A map good to some pixels, and the stars it pairs."""
+    """A map good to some pixels, and the stars it pairs.
+
+    ``degree`` is the lowest of the polynomial still to be fitted: 0 where the map
+    is right up to a shift, 1 where its linear part came from these stars.
+    """
 
     pixel_map: PixelMap
     pairs: tuple[IntArray, IntArray]
+    degree: int
     method: Literal["wcs", "asterisms"]
 
 
@@ -192,7 +197,7 @@ def _by_offset(
     if shift is None:
         return None
     pairs = _grow(stars, places, Affine(np.eye(2), shift), template_shape, settings)
-    return None if pairs is None else _Rough(predicted, pairs[1], "wcs")
+    return None if pairs is None else _Rough(predicted, pairs[1], 0, "wcs")
 
 
 def _by_asterisms(
@@ -215,7 +220,11 @@ def _by_asterisms(
         grown = _grow(stars, places, found, template_shape, settings)
         if grown is not None:
             affine, pairs = grown
-            return _Rough(_moved(base, affine), pairs, "asterisms")
+            linear = affine.matrix - np.eye(2)
+            reach = np.abs(linear) @ np.ptp(places, axis=0) / 2.0
+            if reach.max() < settings.match_radius_px:
+                return _Rough(base, pairs, 0, "asterisms")
+            return _Rough(_moved(base, affine), pairs, 1, "asterisms")
     return None
 
 
@@ -271,8 +280,6 @@ def _fit(
     """Fit what the rough map leaves, pairing the stars anew with each fit."""
     places = np.column_stack(evaluate(rough.pixel_map, *stars.science.T))
     scale2 = float(np.mean(jacobian_determinant(rough.pixel_map)))
-    # The affine map of asterisms was fitted already: its error must be counted.
-    lowest = 0 if rough.method == "wcs" else 1
     pairs = rough.pairs
     for _ in range(_FINE_ROUNDS):
         one, two = _cleanest(stars, pairs, settings)
@@ -282,7 +289,7 @@ def _fit(
             stars.template[two] - places[one],
             np.sqrt(error2),
             shape=shape,
-            degrees=(lowest, settings.max_degree),
+            degrees=(rough.degree, settings.max_degree),
             clip_sigma=settings.clip_sigma,
             error_floor=settings.error_floor_px,
         )

@@ -1,10 +1,9 @@
 """Resampling: one frame onto another's pixels, with its noise.
 
-Lanczos interpolation (Duchon 1979, J. Appl. Meteorol. 18, 1016,
-doi:10.1175/1520-0450(1979)018<1016:LFIOAT>2.0.CO;2) in one pass: a pixel of the
-output is a weighted sum of 8 x 8 pixels of the input, times the Jacobian of the
-map.  The Jacobian multiplies the whole pixel, sky included: counts per pixel
-scale with the sky area of a pixel, and so the flux of a star is kept.
+One pass: a pixel of the output is a weighted sum of 8 x 8 pixels of the input,
+times the Jacobian of the map.  The Jacobian multiplies the whole pixel, sky
+included: counts per pixel scale with the sky area of a pixel, and so the flux of
+a star is kept.
 """
 
 from __future__ import annotations
@@ -17,16 +16,13 @@ from scipy.interpolate import BSpline, make_interp_spline
 
 from latelight.records import FloatArray, IntArray, PixelArray, PixelMap, Plane
 from latelight.registration._kernels import lag_covariance, resample_rows
+from latelight.registration.interpolation import TAPS, kernel_weights
 from latelight.registration.pixel_map import evaluate, jacobian_determinant
 from latelight.registration.settings import RegistrationSettings
 from latelight.threads import over_rows
 
-__all__ = ["lanczos_weights", "noise_power", "resample"]
+__all__ = ["noise_power", "resample"]
 
-# Positions rounded to 1/4096 px: an error of 0.00007 px rms.
-_PHASES = 4096
-_BEFORE, _TAPS = 3, 8
-_LOBES = {"lanczos3": 3, "lanczos4": 4}
 # The sky put where the template has no pixel is known in blocks of this side.
 _SKY_BLOCK_PX, _SKY_STRIDE_PX = 64, 4
 _POWER_SIZE, _POWER_REACH, _POWER_SAMPLES = 64, 15, 24
@@ -71,11 +67,11 @@ def resample(
         msg = "plane has been resampled before; resample the frame as it was read"
         raise ValueError(msg)
     _check_cover(pixel_map, shape)
-    weights = lanczos_weights(_LOBES[settings.interpolation])
+    weights = kernel_weights(settings.interpolation)
     tables = _spline_tables(pixel_map, shape)
     sky = (*_block_sky(plane), _SKY_BLOCK_PX)
     bad = (plane.mask != 0).view(np.uint8)
-    near_bad = ndimage.maximum_filter(bad, size=_TAPS, origin=-1, mode="nearest")
+    near_bad = ndimage.maximum_filter(bad, size=TAPS, origin=-1, mode="nearest")
     out = (
         np.empty(shape, np.float32),
         np.empty(shape, np.float32),
@@ -103,28 +99,6 @@ def resample(
     return Plane(*out, noise_power=power)
 
 
-def lanczos_weights(lobes: int) -> PixelArray:
-    """Return the taps of the Lanczos kernel for every sub-pixel phase.
-
-    Parameters
-    ----------
-    lobes : {3, 4}
-        Half width of the kernel, pixels.
-
-    Returns
-    -------
-    float32 array, shape (4097, 8)
-        Row p: weights of the pixels at -3 ... 4 from the floor of a position
-        whose fraction is p / 4096; each row sums to 1, so that a constant stays
-        one.
-    """
-    fraction = np.arange(_PHASES + 1)[:, None] / _PHASES
-    distance = np.arange(-_BEFORE, _TAPS - _BEFORE)[None, :] - fraction
-    taps = np.sinc(distance) * np.sinc(distance / lobes)
-    taps[np.abs(distance) >= lobes] = 0.0
-    return (taps / taps.sum(axis=1, keepdims=True)).astype(np.float32)
-
-
 def noise_power(
     pixel_map: PixelMap, *, shape: tuple[int, int], interpolation: str
 ) -> FloatArray:
@@ -136,7 +110,7 @@ def noise_power(
         The map; its true sub-pixel phases, rotation and scale all count.
     shape : (int, int)
         Shape (ny, nx) of the output.
-    interpolation : {"lanczos3", "lanczos4"}
+    interpolation : {"least-squares", "lanczos4", "lanczos3"}
         The kernel.
 
     Returns
@@ -163,7 +137,7 @@ def noise_power(
         here[0],
         here[1],
         np.ascontiguousarray(jacobian),
-        lanczos_weights(_LOBES[interpolation]),
+        kernel_weights(interpolation),
         _POWER_REACH,
     )
     lags = np.zeros((_POWER_SIZE, _POWER_SIZE))

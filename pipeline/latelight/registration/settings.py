@@ -62,8 +62,8 @@ class RegistrationSettings(StageSettings):
         gt=0.0,
         description="Position error no star is believed to be better than, px.",
     )
-    interpolation: Literal["lanczos3", "lanczos4"] = Field(
-        "lanczos4", description="Kernel that resamples the template."
+    interpolation: Literal["least-squares", "lanczos4", "lanczos3"] = Field(
+        "least-squares", description="Kernel that resamples the template."
     )
     bad_weight: float = Field(
         0.1,

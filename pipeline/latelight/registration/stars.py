@@ -35,13 +35,13 @@ __all__ = ["detect_stars"]
 _STAGE = "registration"
 _FWHM_OF_SIGMA = 2.0 * np.sqrt(2.0 * np.log(2.0))
 _SATURATED = int(MaskBit.SATURATED | MaskBit.BLEED | MaskBit.SPIKE)
-_DEBLEND_LEVELS, _DEBLEND_CONTRAST = 16, 0.005
+_DEBLEND_LEVELS, _DEBLEND_CONTRAST = 16, 0.001
 # Widths of this many bright stars set the window.
 _WINDOW_STARS, _WINDOW_ROUNDS = 300, 6
 # A narrower window would see one pixel of an undersampled star.
 _MIN_WINDOW_PX = 0.7
 _APERTURE_FWHM = 1.5
-# A neighbour this near (FWHM) with this share of the flux spoils a centroid.
+# A neighbour this near (FWHM) with this share of the peak spoils a centroid.
 _NEIGHBOUR_FWHM, _NEIGHBOUR_SHARE = 2.0, 0.1
 # Star-like: width and elongation within so many sigmas of the stars around, the
 # noise of a star's own logarithm (in units of 1 / SNR; measured on Moffat stars,
@@ -79,6 +79,8 @@ def detect_stars(plane: Plane, *, settings: RegistrationSettings) -> StarList:
         If the extraction cannot hold the frame: its background is not flat, or
         its variance far too small.
     """
+    if plane.mask.all():
+        return _empty(np.array(plane.pixels))
     sky, above = _subtract_sky(plane, settings.sky_mesh_px)
     found = _extract(above, plane, settings)
     places = np.column_stack([found["x"], found["y"]])
@@ -95,7 +97,7 @@ def detect_stars(plane: Plane, *, settings: RegistrationSettings) -> StarList:
         & (moments.bits == 0)
         & (moments.flux > settings.clean_snr * moments.flux_err)
         & np.isfinite(moments.fwhm)
-        & ~_has_neighbour(moments, _NEIGHBOUR_FWHM * _FWHM_OF_SIGMA * sigma)
+        & ~_has_neighbour(moments, peak, _NEIGHBOUR_FWHM * _FWHM_OF_SIGMA * sigma)
     )
     clean = _star_like(moments, candidate, plane.pixels.shape)
     middle = float(np.nanmedian(moments.fwhm[clean] if clean.any() else moments.fwhm))
@@ -174,6 +176,8 @@ def _extract(
                 # Smooth pixels against plain noise: half the time of sep's
                 # matched filter, and as many stars.
                 filter_type="conv",
+                # sep's cleaning would swallow true neighbours of bright stars.
+                clean=False,
             )
         except Exception as exc:  # sep raises nothing narrower
             reason = str(exc)
@@ -255,14 +259,16 @@ def _axes(
     return axes[0], axes[1]
 
 
-def _has_neighbour(moments: _Moments, reach: float) -> BoolArray:
-    """Whether a source of some weight lies within reach of each star."""
+def _has_neighbour(moments: _Moments, peak: FloatArray, reach: float) -> BoolArray:
+    """Whether a source of some weight lies within reach of each star.
+
+    Peaks are compared: the aperture of a faint star holds its neighbour's light.
+    """
     crowded = np.zeros(moments.x.size, dtype=bool)
     tree = cKDTree(np.column_stack([moments.x, moments.y]))
     first, second = tree.query_pairs(reach, output_type="ndarray").T
-    flux = moments.flux
-    crowded[first[flux[second] > _NEIGHBOUR_SHARE * flux[first]]] = True
-    crowded[second[flux[first] > _NEIGHBOUR_SHARE * flux[second]]] = True
+    crowded[first[peak[second] > _NEIGHBOUR_SHARE * peak[first]]] = True
+    crowded[second[peak[first] > _NEIGHBOUR_SHARE * peak[second]]] = True
     return crowded
 
 
