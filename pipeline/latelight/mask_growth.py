@@ -49,7 +49,7 @@ def grow_mask(mask: MaskArray, *, footprint: BoolArray) -> MaskArray:
     return out
 
 
-@nb.njit(nogil=True, cache=True)  # type: ignore[untyped-decorator]
+@nb.njit(nogil=True, cache=True)
 def _spread(
     mask: MaskArray,
     dy: np.ndarray,

@@ -38,7 +38,9 @@ def fwhm_of(image: FloatArray) -> float:
     coarse = np.sqrt(np.sum(image > 0.5 * peak) / np.pi)
     reach = min(middle, int(np.ceil(2.0 * coarse)) + 3)
     step = np.arange(-reach * zoom, reach * zoom + 1) / zoom + middle
-    fine = ndimage.map_coordinates(image, np.meshgrid(step, step, indexing="ij"), order=3)
+    fine = ndimage.map_coordinates(
+        image, np.meshgrid(step, step, indexing="ij"), order=3
+    )
     labels, _ = ndimage.label(fine > 0.5 * fine.max())
     core = labels == labels[np.unravel_index(np.argmax(fine), fine.shape)]
     return float(2.0 * np.sqrt(core.sum() / np.pi) / zoom)

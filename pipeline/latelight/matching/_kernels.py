@@ -54,16 +54,22 @@ def filter_stamp(
             for tap in range(side):
                 weight = taps[done, tap]
                 if weight != 0.0:
+                    start = left - tap
                     for y in range(height):
+                        # Slices: the inner loops then run over whole vectors.
+                        source = image[top + y, start : start + width]
+                        target = along_x[y]
                         for x in range(width):
-                            along_x[y, x] += weight * image[top + y, left - tap + x]
+                            target[x] += weight * source[x]
         both[:] = 0.0
         for tap in range(side):
             weight = taps[pairs[b, 0], tap]
             if weight != 0.0:
                 for y in range(width):
+                    source = along_x[y + 2 * reach - tap]
+                    target = both[y]
                     for x in range(width):
-                        both[y, x] += weight * along_x[y + 2 * reach - tap, x]
+                        target[x] += weight * source[x]
         for p in range(offsets.shape[0]):
             out[p, b] = both[half + offsets[p, 0], half + offsets[p, 1]]
 

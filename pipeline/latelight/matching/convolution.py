@@ -6,8 +6,8 @@ import numpy as np
 from scipy import fft
 from scipy.interpolate import make_interp_spline
 
-from latelight.masks import MaskBit
 from latelight.mask_growth import disc, grow_mask
+from latelight.masks import MaskBit
 from latelight.records import (
     FloatArray,
     MaskArray,

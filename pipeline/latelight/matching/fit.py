@@ -18,6 +18,7 @@ from latelight.statistics import robust_sigma
 
 __all__ = ["KernelFit", "fit_kernel"]
 
+_STAGE = "matching"
 _ROUNDS = 4
 # Held-out stars must get this much better, in mean log chi-square, to pay for a
 # more complex kernel.
@@ -56,7 +57,9 @@ class _Model:
     spatial_degree: int
     scale_degree: int
 
-    def free(self, basis: KernelBasis, exponents: tuple[tuple[int, int], ...]) -> IntArray:
+    def free(
+        self, basis: KernelBasis, exponents: tuple[tuple[int, int], ...]
+    ) -> IntArray:
         """Return the free parameters in the (basis, term) table, flattened."""
         order = np.array([i + j for i, j in exponents])
         table = np.zeros((len(basis.pairs), len(exponents)), dtype=bool)
@@ -115,7 +118,9 @@ def fit_kernel(
         held[every // 2 :: every] = True
     # Variables and galaxies go first, by a simple model, so that every candidate
     # is judged on the same stars.
-    simple = _Model(0, _affordable(int((~held).sum()), min(1, settings.spatial_degree)), 0)
+    simple = _Model(
+        0, _affordable(int((~held).sum()), min(1, settings.spatial_degree)), 0
+    )
     sound = solver.clip(simple, ~held, settings)
     judges = held & solver.inliers(simple, sound, settings)
     if judges.sum() < _FEWEST_HELD_OUT:
@@ -236,7 +241,7 @@ class _Solver:
                     f"with one another, need {settings.min_stars}; the frames may be "
                     "misaligned, or raise clip_sigma in [matching]"
                 )
-                raise StageError("matching", msg)
+                raise StageError(_STAGE, msg)
             if (fewer == kept).all():
                 break
             kept = fewer
@@ -256,7 +261,9 @@ def _solve_scaled(matrix: FloatArray, right: FloatArray) -> FloatArray:
         values, vectors = linalg.eigh(scaled)
         used = values > 1e-9 * values[-1]
         vectors = vectors[:, used]
-        solution = vectors @ ((vectors.T @ (right / size[:, None])) / values[used, None])
+        solution = vectors @ (
+            (vectors.T @ (right / size[:, None])) / values[used, None]
+        )
     else:
         solution = linalg.cho_solve(factor, right / size[:, None])
     return solution / size[:, None]

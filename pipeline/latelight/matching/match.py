@@ -153,7 +153,10 @@ def match_pair(
         n_fit=int(fit.fitted.sum()),
         n_held_out=int(fit.held_out.sum()),
         held_out_chi2=_held_out_chi2(
-            science_plane, template_plane, stars[fit.held_out], radius=int(np.ceil(_JUDGED_IN_FWHM * fwhm[1])),
+            science_plane,
+            template_plane,
+            stars[fit.held_out],
+            radius=int(np.ceil(_JUDGED_IN_FWHM * fwhm[1])),
         ),
     )
 
@@ -184,9 +187,7 @@ def _flux_ratio(science: StarList, template: StarList, alignment: Alignment) -> 
     return float(np.median(science.flux[s][good] / template.flux[t][good]))
 
 
-def _widths(
-    science: StarList, template: StarList, roles: Roles
-) -> tuple[float, float]:
+def _widths(science: StarList, template: StarList, roles: Roles) -> tuple[float, float]:
     """Return the FWHM of the frame to be convolved and of the other, smoothed."""
     pair = (template.fwhm_px, science.fwhm_px)
     sharp, broad = pair if roles.convolve_template else pair[::-1]

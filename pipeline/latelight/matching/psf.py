@@ -13,6 +13,7 @@ from latelight.widths import FWHM_PER_SIGMA, fwhm_of
 
 __all__ = ["measure_psf", "polynomial_exponents", "positions_matrix"]
 
+_STAGE = "matching"
 _FIRST_HALF = 12
 _FEWEST = 5
 # Half-width of the PSF image in FWHM: a Moffat profile (beta = 3) has 98 % of its
@@ -72,7 +73,9 @@ def measure_psf(
     the position over the stars, with two rounds of clipping of whole stars
     (blends, galaxies) by their scatter about the fit.
     """
-    stamps, kept, weight = _unit_stamps(plane, x, y, half=_FIRST_HALF, settings=settings)
+    stamps, kept, weight = _unit_stamps(
+        plane, x, y, half=_FIRST_HALF, settings=settings
+    )
     width = fwhm_of(np.median(stamps, axis=0))
     half = max(6, int(np.ceil(_HALF_IN_FWHM * width)))
     if half != _FIRST_HALF:
@@ -132,12 +135,12 @@ def _unit_stamps(
         box = np.s_[row[star] - half : row[star] + half + 1,
                     col[star] - half : col[star] + half + 1]  # fmt: skip
         if not plane.mask[box][core].any():
-            take.append(star)
+            take.append(int(star))
         if len(take) == settings.psf_stars:
             break
     if len(take) < _FEWEST:
         msg = f"the PSF needs at least {_FEWEST} clean unmasked stars, got {len(take)}"
-        raise StageError("matching", f"{msg}; lower [registration]'s star threshold")
+        raise StageError(_STAGE, f"{msg}; lower [registration]'s star threshold")
     kept = np.array(take)
     stamps = plane.pixels[
         row[kept, None, None] + step[:, None], col[kept, None, None] + step

@@ -25,7 +25,10 @@ class MatchingSettings(StageSettings):
         0.2, ge=0.05, le=0.5, description="Share of the stars kept out of the fit."
     )
     spatial_degree: int = Field(
-        2, ge=0, le=3, description="Highest degree of the kernel's shape over the frame."
+        2,
+        ge=0,
+        le=3,
+        description="Highest degree of the kernel's shape over the frame.",
     )
     scale_degree: int = Field(
         1, ge=0, le=2, description="Highest degree of the flux scale over the frame."

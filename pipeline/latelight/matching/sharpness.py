@@ -88,7 +88,9 @@ def _excess_moments(broad: FloatArray, sharp: FloatArray) -> tuple[FloatArray, f
     used = (b > _LEAST_TRANSFER) & (s > _LEAST_TRANSFER) & (fx**2 + fy**2 > 0)
     weight = np.minimum(b, s)[used]
     terms = -2.0 * np.pi**2 * np.stack([fx**2, 2.0 * fx * fy, fy**2], axis=-1)[used]
-    logs = np.stack([np.log(b[used] / s[used]), 0.5 * np.log(b[used] * s[used])], axis=-1)
+    logs = np.stack(
+        [np.log(b[used] / s[used]), 0.5 * np.log(b[used] * s[used])], axis=-1
+    )
     weighted = terms * weight[:, None] ** 2
     fitted = np.linalg.solve(weighted.T @ terms, weighted.T @ logs)
     (xx, xy, yy), size = fitted[:, 0], 0.5 * (fitted[0, 1] + fitted[2, 1])

@@ -10,6 +10,7 @@ from latelight.records import Alignment, BoolArray, FloatArray, IntArray, StarLi
 
 __all__ = ["choose_stars", "matched_clean", "spread_over_cells"]
 
+_STAGE = "matching"
 # Response is often curved in the last tenth below saturation.
 _BELOW_SATURATION = 0.9
 # Share of a star's disc that may be masked.
@@ -100,7 +101,7 @@ def choose_stars(
             f"got {rows.size} of S/N above {settings.min_snr}; lower min_snr or "
             "min_stars in [matching], or take a deeper template"
         )
-        raise StageError("matching", msg)
+        raise StageError(_STAGE, msg)
     # Wide PSFs have wide discs: fewer stars then hold as many pixels.
     affordable = max(_LEAST_AFFORDABLE, int(_MOST_PIXELS / (np.pi * radius**2)))
     return spread_over_cells(

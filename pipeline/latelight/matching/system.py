@@ -53,9 +53,7 @@ class StarSystems:
     def chi2(self, coefficients: FloatArray) -> FloatArray:
         """Return each star's reduced chi-square, coefficients (n_stars, n_basis)."""
         gc = np.einsum("sij,sj->si", self.gram, coefficients)
-        raw = self.total + np.einsum(
-            "si,si->s", coefficients, gc - 2.0 * self.cross
-        )
+        raw = self.total + np.einsum("si,si->s", coefficients, gc - 2.0 * self.cross)
         return raw / self.degrees
 
 
@@ -191,9 +189,10 @@ def _gaussian_gain(sigma: float) -> float:
 
 def _overlaps(basis: KernelBasis, noise_power: FloatArray | None) -> FloatArray:
     """Return the covariance of unit noise seen through each pair of functions."""
+    flat = basis.images().reshape(len(basis.pairs), -1)
+    white = np.einsum("ip,jp->ij", flat, flat)
     if noise_power is None:
-        flat = basis.images().reshape(len(basis.pairs), -1)
-        return flat @ flat.T
+        return white
     side = basis.taps.shape[1]
     step = np.arange(side) - side // 2
     along_y, along_x = (
@@ -203,5 +202,7 @@ def _overlaps(basis: KernelBasis, noise_power: FloatArray | None) -> FloatArray:
     spectra = np.einsum(
         "by,bx->byx", along_y[basis.pairs[:, 0]], along_x[basis.pairs[:, 1]]
     ).reshape(len(basis.pairs), -1)
-    raw = np.real((spectra * noise_power.ravel()) @ spectra.conj().T)
-    return basis.combine @ (raw / noise_power.size) @ basis.combine.T
+    parts = np.concatenate([spectra.real, spectra.imag], axis=1)
+    colour = np.tile(noise_power.ravel() - 1.0, 2) / noise_power.size
+    raw = (parts * colour) @ parts.T
+    return white + basis.combine @ raw @ basis.combine.T

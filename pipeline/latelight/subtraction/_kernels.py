@@ -66,13 +66,17 @@ def smooth_rows(
     """Filter along x with symmetric taps, zeros outside."""
     nx = image.shape[1]
     reach = taps.size // 2
+    # Padded lines and slices: the inner loops then run over whole vectors.
+    line = np.zeros(nx + 2 * reach, dtype=np.float32)
     for y in range(first_row, last_row):
-        out[y, :] = 0.0
+        line[reach : reach + nx] = image[y]
+        target = out[y]
+        target[:] = 0.0
         for tap in range(taps.size):
             weight = taps[tap]
-            shift = tap - reach
-            for x in range(max(0, -shift), min(nx, nx - shift)):
-                out[y, x] += weight * image[y, x + shift]
+            source = line[tap : tap + nx]
+            for x in range(nx):
+                target[x] += weight * source[x]
 
 
 @nb.njit(nogil=True, cache=True)
@@ -83,10 +87,12 @@ def smooth_columns(
     ny, nx = image.shape
     reach = taps.size // 2
     for y in range(first_row, last_row):
-        out[y, :] = 0.0
+        target = out[y]
+        target[:] = 0.0
         for tap in range(taps.size):
-            source = y + tap - reach
-            if 0 <= source < ny:
+            row = y + tap - reach
+            if 0 <= row < ny:
                 weight = taps[tap]
+                source = image[row]
                 for x in range(nx):
-                    out[y, x] += weight * image[source, x]
+                    target[x] += weight * source[x]

@@ -49,7 +49,9 @@ class _Filtered:
     weight: PixelArray
 
     def snr(self) -> PixelArray:
-        return self.top / np.sqrt(np.maximum(self.bottom, 1e-30))
+        """Return the S/N of a point source at every pixel."""
+        noise = np.sqrt(np.maximum(self.bottom, 1e-30)).astype(np.float32, copy=False)
+        return self.top / noise
 
 
 def find_compact(
@@ -94,7 +96,9 @@ def find_compact(
     weight = np.where(mask == 0, np.float32(1.0) / variance, np.float32(0.0))
     seen = _filtered(pixels * weight, weight, psf_sigma)
     snr = seen.snr()
-    typical = np.float32(np.median(seen.bottom[mask == 0][::53])) if seen.bottom.any() else 0
+    typical = (
+        np.float32(np.median(seen.bottom[mask == 0][::53])) if seen.bottom.any() else 0
+    )
     solid = (seen.weight > _LEAST_WEIGHT) & (mask == 0)
     # Noise in a difference is correlated, so its filtered map is wider than 1.
     width = max(1.0, robust_sigma(snr[solid & (seen.bottom > 0.5 * typical)][::7]))
@@ -248,7 +252,9 @@ def _on_a_line(
     ray = s.sum(axis=1) / root
     half = _N_ANGLES // 2
     # Both sides, an arc's slight bend allowed for.
-    beyond = np.maximum.reduce([np.roll(ray, half + turn, axis=1) for turn in (-1, 0, 1)])
+    beyond = np.maximum.reduce(
+        [np.roll(ray, half + turn, axis=1) for turn in (-1, 0, 1)]
+    )
     both = (ray + beyond) / np.sqrt(2.0)
     through = (both > _LINE_SIGMA) & (np.minimum(ray, beyond) > 1.0)
     one_sided = (s > 1.0).all(axis=1) & (ray > _LINE_SIGMA)
@@ -302,4 +308,8 @@ def _flux_above_surroundings(
 def _parabola(three: FloatArray) -> float:
     """Return the offset of the top of a parabola through three values."""
     bend = three[0] - 2.0 * three[1] + three[2]
-    return float(np.clip(0.5 * (three[0] - three[2]) / bend, -0.5, 0.5)) if bend < 0 else 0.0
+    return (
+        float(np.clip(0.5 * (three[0] - three[2]) / bend, -0.5, 0.5))
+        if bend < 0
+        else 0.0
+    )

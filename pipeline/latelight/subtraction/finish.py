@@ -25,7 +25,7 @@ _STAR_FOR_SKY = 3.0
 _NEGLIGIBLE = 0.02
 # Side of the blocks the noise is measured in, px, how many, and their fewest pixels.
 _NOISE_BLOCK = 32
-_NOISE_BLOCKS = 600
+_NOISE_BLOCKS = 400
 _FEWEST_SKY = 100
 
 

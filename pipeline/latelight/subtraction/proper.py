@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 import sep
@@ -116,7 +117,10 @@ def subtract_proper(
     size = _block_side((ny, nx), margin, settings.block_px)
     power = template.noise_power
     for corner, weight in _blocks((ny, nx), size, margin):
-        centre = (corner[1] + (size - 1) / 2 - margin, corner[0] + (size - 1) / 2 - margin)
+        centre = (
+            corner[1] + (size - 1) / 2 - margin,
+            corner[0] + (size - 1) / 2 - margin,
+        )
         window = np.s_[corner[0] : corner[0] + size, corner[1] : corner[1] + size]
         parts = _subtract_block(
             [a[window] for a in (inputs.science, inputs.template,
@@ -152,7 +156,10 @@ def _prepare(
     for plane in (science, template):
         ny, nx = plane.pixels.shape
         sky = sep.Background(
-            plane.pixels, mask=plane.mask != 0, bw=min(_SKY_BOX, nx), bh=min(_SKY_BOX, ny)
+            plane.pixels,
+            mask=plane.mask != 0,
+            bw=min(_SKY_BOX, nx),
+            bh=min(_SKY_BOX, ny),
         ).back(dtype=np.float32)
         light.append(plane.pixels - sky)
         skies.append(sky)
@@ -207,7 +214,7 @@ def _ramps(n: int, useful: int) -> list[tuple[int, FloatArray]]:
     place = np.arange(n, dtype=float)
     # Each block hands over to the next in the middle of their overlap: a wide join
     # would average two versions of the noise.
-    joins = [0.5 * (b + a + useful) for a, b in zip(starts, starts[1:], strict=False)]
+    joins = [0.5 * (b + a + useful) for a, b in pairwise(starts)]
     up = [np.ones(n)] + [np.clip((place - j) / _JOIN + 0.5, 0, 1) for j in joins]
     down = [1.0 - u for u in up[1:]] + [np.ones(n)]
     return [
@@ -231,11 +238,11 @@ def _subtract_block(
         ]
     science, template, v_science, v_template = block
     workers = n_threads()
-    filters = _filters(
-        science_psf, template_psf, v_science, v_template, power, size
-    )
+    filters = _filters(science_psf, template_psf, v_science, v_template, power, size)
     shape = (size, size)
-    spectra = fft.rfft2(np.stack([science, template, v_science, v_template]), workers=workers)
+    spectra = fft.rfft2(
+        np.stack([science, template, v_science, v_template]), workers=workers
+    )
     kernels = np.stack([filters.new, filters.reference]) / filters.flux
     kernels = kernels.astype(np.complex64)
     images = fft.irfft2(spectra[:2] * kernels, shape, workers=workers)

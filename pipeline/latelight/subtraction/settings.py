@@ -33,10 +33,16 @@ class SubtractionSettings(StageSettings):
         5.0, ge=3, le=50, description="Least S/N of a compact residual."
     )
     compact_radius_fwhm: float = Field(
-        1.5, ge=0.5, le=5, description="Radius masked about a faint compact residual, FWHM."
+        1.5,
+        ge=0.5,
+        le=5,
+        description="Radius masked about a faint compact residual, FWHM.",
     )
     star_noise_stars: int = Field(
-        400, ge=20, le=5000, description="Most stars the star-residual noise is fitted to."
+        400,
+        ge=20,
+        le=5000,
+        description="Most stars the star-residual noise is fitted to.",
     )
     block_px: int = Field(
         512,
