@@ -12,7 +12,7 @@ from typing import Any
 import numpy as np
 
 from latelight.config import NightConfig
-from latelight.errors import FrameError, LatelightError
+from latelight.errors import LatelightError
 from latelight.frames.headers import FrameHeader
 from latelight.frames.reader import read_frames
 from latelight.matching.match import match_pair
@@ -113,10 +113,8 @@ def load_frame(header: FrameHeader, config: NightConfig) -> Frame:
     FrameError
         If it cannot be used, or is gone.
     """
-    for frame in read_frames(header.path, config.header, config.frames):
-        if frame.chip == header.chip:
-            return frame
-    raise FrameError(header.path, f"chip {header.chip!r} is no longer in the file")
+    (frame,) = read_frames(header.path, config.header, config.frames, chip=header.chip)
+    return frame
 
 
 def _run(task: PairTask, journal: Journal) -> tuple[Findings, Difference, Any]:
