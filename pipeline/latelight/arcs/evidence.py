@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from latelight.arcs.fit import BLOCK_PX, Fit, PolarSums, level_free, sum_along
+from latelight.arcs.fit import BLOCK_PX, Fit, PolarSums, sum_along
 from latelight.arcs.lobes import Lobes
 from latelight.arcs.profiles import lobe_width
 from latelight.arcs.settings import ArcSettings
@@ -18,6 +18,7 @@ from latelight.arcs.surroundings import (
     follow_ring,
     ring_about,
 )
+from latelight.arcs.tracing import block_significance
 from latelight.records import BoolArray, Difference, FloatArray, StarList
 
 __all__ = ["BrightStars", "Evidence", "gather"]
@@ -76,7 +77,7 @@ class Evidence:
     fwhm_px, lobe_width_px : float
         Full widths at half maximum of the PSF and of a lobe, pixels.
     block_snr : float64 array, shape (n,)
-        Significance of each block along the arc.
+        Significance of each block of the best stretch.
     trimmed_snr : float
         Significance without the best sixth of the arc, at least two blocks.
     filled : float
@@ -129,8 +130,8 @@ class Evidence:
 
     @property
     def length_px(self) -> float:
-        """Length of the arc, pixels."""
-        return 2.0 * self.fit.half_length
+        """Length of the ridge, fainter pieces included, pixels."""
+        return self.fit.last - self.fit.first
 
 
 def gather(
@@ -145,13 +146,18 @@ def gather(
 ) -> Evidence:
     """Measure the facts about one fitted ridge."""
     half_height = int(settings.largest_shift_px + settings.widest_px)
-    sums = sum_along(difference, fit.circle, fit.half_length, half_height)
-    matched, power = _blocks(sums, fit.pair.profile(half_height))
+    along, matched, power = block_significance(
+        difference, fit, half_height, max(-fit.first, fit.last)
+    )
     block_snr = matched / np.sqrt(np.maximum(power, 1e-30)) / noise_ratio
+    whole = block_snr[(along > fit.first) & (along < fit.last)]
+    core = np.abs(along) < fit.half_length
+    matched, power, block_snr = matched[core], power[core], block_snr[core]
+    sums = sum_along(difference, fit.circle, fit.half_length, half_height)
     return Evidence(
         difference=difference,
         fit=fit,
-        snr=_uneven(pair_snr, block_snr),
+        snr=_uneven(pair_snr, block_snr, whole),
         pair_snr=pair_snr,
         single_snr=single_snr,
         noise_ratio=noise_ratio,
@@ -166,20 +172,15 @@ def gather(
     )
 
 
-def _blocks(sums: PolarSums, profile: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Return matched signal and power of a profile in each block."""
-    return level_free(sums) @ profile, sums.weight @ profile**2
-
-
-def _uneven(pair_snr: float, block_snr: FloatArray) -> float:
-    """Return the significance with the brightness free along the arc.
+def _uneven(pair_snr: float, core: FloatArray, whole: FloatArray) -> float:
+    """Return the significance of the whole ridge, its brightness free along it.
 
     With n pieces of significance x the perfect filter would reach sqrt(sum x^2);
     noise adds n - 1 to the sum beyond the square of the even filter's.
     """
-    n = max(round(block_snr.size / _PIECE_BLOCKS), 1)
-    pieces = [part.sum() / np.sqrt(part.size) for part in np.array_split(block_snr, n)]
-    even = block_snr.sum() / np.sqrt(block_snr.size)
+    n = max(round(whole.size / _PIECE_BLOCKS), 1)
+    pieces = [part.sum() / np.sqrt(part.size) for part in np.array_split(whole, n)]
+    even = core.sum() / np.sqrt(core.size)
     gain = float(np.sum(np.square(pieces)) - even**2) - (n - 1)
     return float(np.sqrt(pair_snr**2 + max(gain, 0.0)))
 

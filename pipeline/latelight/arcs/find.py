@@ -14,6 +14,7 @@ from latelight.arcs.profiles import LobeShapes, coarse_shapes, lobe_width
 from latelight.arcs.pyramid import build_pyramid
 from latelight.arcs.search import Seed, search_level
 from latelight.arcs.settings import ArcSettings
+from latelight.arcs.tracing import extend
 from latelight.arcs.verdicts import judge
 from latelight.records import Arc, Difference, FloatArray, StarList
 
@@ -74,28 +75,48 @@ def find_arcs(
     bright = BrightStars.of(stars, least_snr=settings.bright_star_snr)
     # What one ridge explains is masked before the next is fitted.
     left = replace(difference, mask=difference.mask.copy())
-    arcs = []
-    while seeds:
-        fit, seeds = _next_fit(left, seeds, shapes, reach, noise)
-        if fit is None or noise.snr(fit.pair) < settings.threshold:
-            continue
-        refined = refine_fit(left, fit, shapes, reach)
-        if noise.snr(refined.pair) < settings.threshold:
-            continue
-        evidence = gather(
-            left,
-            refined,
-            settings,
-            pair_snr=noise.snr(refined.pair),
-            single_snr=noise.snr(refined.single),
-            noise_ratio=noise.at(refined.pair.sigma_px),
-            stars=bright,
-        )
-        verdict, artefact = judge(evidence)
-        arcs.append(_arc(evidence, verdict))
-        mask_explained(left.mask, evidence, artefact=artefact)
-        seeds = [seed for seed in seeds if not _masked(left, seed)]
+    arcs: list[Arc] = []
+    spoiled = True
+    while seeds and spoiled:
+        spoiled = False
+        while seeds:
+            fit, seeds = _next_fit(left, seeds, shapes, reach, noise)
+            if fit is None or noise.snr(fit.pair) < settings.threshold:
+                continue
+            evidence = _evidence(left, fit, shapes, reach, noise, bright, settings)
+            if evidence.pair_snr < settings.threshold:
+                continue
+            verdict, extent = judge(evidence)
+            arcs.append(_arc(evidence, verdict))
+            mask_explained(left.mask, evidence, extent=extent)
+            seeds = [seed for seed in seeds if not _masked(left, seed)]
+            spoiled = spoiled or extent != ""
+        # A trail or ghost outshines what lies beside it: look once more without.
+        if spoiled:
+            seeds, _ = _search(left, settings)
     return tuple(sorted(arcs, key=lambda arc: (-arc.snr, arc.y, arc.x)))
+
+
+def _evidence(
+    difference: Difference,
+    fit: Fit,
+    shapes: LobeShapes,
+    reach: Reach,
+    noise: _Noise,
+    stars: BrightStars,
+    settings: ArcSettings,
+) -> Evidence:
+    refined = refine_fit(difference, fit, shapes, reach)
+    ratio = noise.at(refined.pair.sigma_px)
+    return gather(
+        difference,
+        extend(difference, refined, reach, ratio),
+        settings,
+        pair_snr=noise.snr(refined.pair),
+        single_snr=noise.snr(refined.single),
+        noise_ratio=ratio,
+        stars=stars,
+    )
 
 
 def _next_fit(
@@ -142,14 +163,15 @@ def _search(difference: Difference, settings: ArcSettings) -> tuple[list[Seed], 
 def _arc(evidence: Evidence, verdict: str) -> Arc:
     """Put a fitted ridge into the record, its normal between 0 and 180 degrees."""
     fit = evidence.fit
-    circle, pair = fit.circle, fit.pair
+    half = 0.5 * (fit.last - fit.first)
+    circle, pair = fit.circle.moved(0.5 * (fit.first + fit.last), 0.0), fit.pair
     if not 0.0 <= np.degrees(circle.angle) % 360.0 < 180.0:
         circle, pair = circle.flipped(), pair.mirrored()
     circle = circle.normalised()
     width = lobe_width(pair.sigma_px, pair.tail_px)
     beyond = width**2 - evidence.fwhm_px**2
     return Arc(
-        trace=circle.trace(-fit.half_length, fit.half_length),
+        trace=circle.trace(-half, half),
         sign=1 if pair.sign > 0 else -1,
         snr=evidence.snr,
         x=circle.x,
@@ -157,7 +179,7 @@ def _arc(evidence: Evidence, verdict: str) -> Arc:
         normal_angle=float(np.degrees(circle.angle)),
         normal_angle_err=float(np.degrees(fit.slope_err) * evidence.noise_ratio),
         curvature=circle.curvature,
-        length_px=2.0 * fit.half_length,
+        length_px=2.0 * half,
         width_px=float(np.sqrt(max(beyond, 0.0))),
         surface_brightness_counts=max(pair.positive_height, -pair.negative_height),
         shift_px=pair.positive - pair.negative if evidence.two_lobed else np.nan,

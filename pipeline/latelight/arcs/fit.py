@@ -88,6 +88,8 @@ class Fit:
         Through the brighter lobe of the pair at the middle of the stretch.
     half_length : float
         Half the stretch, pixels.
+    first, last : float
+        Ends of the ridge along the circle, pixels; at first those of the stretch.
     pair, single : Lobes
         Best pair of opposite lobes, and best single lobe.
     slope_err : float
@@ -98,6 +100,8 @@ class Fit:
 
     circle: Circle
     half_length: float
+    first: float
+    last: float
     pair: Lobes
     single: Lobes
     slope_err: float = float("nan")
@@ -173,6 +177,8 @@ def fit_seed(
     where = found[0].brighter
     return Fit(
         circle.moved(0.0, where),
+        half,
+        -half,
         half,
         found[0].seen_from(where),
         found[1].seen_from(where),
@@ -265,6 +271,8 @@ def refine_fit(
         fit = Fit(
             circle.moved(0.0, step.offset + where),
             fit.half_length,
+            fit.first,
+            fit.last,
             pair.seen_from(where),
             single.seen_from(where),
             step.slope_err,

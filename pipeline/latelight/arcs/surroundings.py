@@ -8,6 +8,7 @@ import numpy as np
 
 from latelight.arcs._kernels import block_matches, search_bends
 from latelight.arcs.fit import BLOCK_PX, Fit, level_free, sum_along
+from latelight.arcs.footprint import mask_ridge
 from latelight.arcs.geometry import Circle
 from latelight.arcs.profiles import lobe_profile
 from latelight.records import Difference, FloatArray
@@ -140,10 +141,11 @@ def follow_line(difference: Difference, fit: Fit, noise_ratio: float) -> Line:
 
 def follow_ring(difference: Difference, fit: Fit, noise_ratio: float) -> Ring:
     """Look for the arc's own profile on the rest of every circle through it."""
+    beyond = _without(difference, fit)
     best = Ring(fit.circle.x, fit.circle.y, np.inf, 0.0, 0.0, 0, 0)
     for radius in _RADII_PX:
         for side in (1.0, -1.0):
-            ring = _ring(difference, fit, side * float(radius), noise_ratio)
+            ring = _ring(difference, beyond, fit, side * float(radius), noise_ratio)
             if (ring.lit, ring.snr) > (best.lit, best.snr):
                 best = ring
     return best
@@ -161,33 +163,47 @@ def ring_about(
     distance = float(np.hypot(x - middle.x, y - middle.y))
     if distance < _RADII_PX[0]:
         return Ring(x, y, distance, 0.0, 0.0, 0, 0)
-    return _ring(difference, replace(fit, circle=aimed), side * distance, noise_ratio)
+    beyond = _without(difference, fit)
+    aimed_fit = replace(fit, circle=aimed)
+    return _ring(difference, beyond, aimed_fit, side * distance, noise_ratio)
 
 
-def _ring(difference: Difference, fit: Fit, radius: float, noise_ratio: float) -> Ring:
+def _without(difference: Difference, fit: Fit) -> Difference:
+    """Return the difference with the ridge itself masked."""
+    beyond = replace(difference, mask=difference.mask.copy())
+    mask_ridge(beyond.mask, fit)
+    return beyond
+
+
+def _ring(
+    difference: Difference,
+    beyond: Difference,
+    fit: Fit,
+    radius: float,
+    noise_ratio: float,
+) -> Ring:
     circle = Circle(fit.circle.x, fit.circle.y, fit.circle.angle, 1.0 / radius)
     half_height = int(min(0.7 * abs(radius), 30.0))
     sums = sum_along(difference, circle, np.pi * abs(radius), half_height)
     x, y = (float(v) for v in circle.point(0.0, radius))
-    # A straight arc stays near the circle for about sqrt(radius x width).
-    half = min(fit.half_length, abs(radius))
-    on, rest = np.abs(sums.along) <= half, np.abs(sums.along) > half + BLOCK_PX
+    on = np.abs(sums.along) <= min(fit.half_length, abs(radius))
     weight = sums.weight[on].sum(axis=0)
     nothing = Ring(x, y, abs(radius), 0.0, 0.0, 0, 0)
     if weight.min() <= 0.0:
         return nothing
     profile = sums.signal[on].sum(axis=0) / weight
     profile = profile - np.average(profile, weights=weight)
+    usual = float(weight @ profile**2) / on.sum()
+    sums = sum_along(beyond, circle, np.pi * abs(radius), half_height)
     # Start behind the arc, so that the sectors follow one another.
-    order = np.argsort(np.mod(sums.along[rest], 2.0 * np.pi * abs(radius)))
-    signal, weights = sums.signal[rest][order], sums.weight[rest][order]
+    order = np.argsort(np.mod(sums.along[~on], 2.0 * np.pi * abs(radius)))
+    signal, weights = sums.signal[~on][order], sums.weight[~on][order]
     level = signal.sum(axis=1) / np.maximum(weights.sum(axis=1), 1e-30)
     matched = (signal - level[:, None] * weights) @ profile
     power = weights @ profile**2
     if power.sum() <= 0.0:
         return nothing
     lit = dark = 0
-    usual = float(sums.weight[on].mean(axis=0) @ profile**2)
     for part, part_power in zip(
         np.array_split(matched, _SECTORS), np.array_split(power, _SECTORS), strict=True
     ):
