@@ -1,0 +1,1 @@
+"""Which pixels of a frame are not to be used, and why: one module a fault."""

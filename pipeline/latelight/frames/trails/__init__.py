@@ -1,0 +1,1 @@
+"""Bright straight trails across a frame, found by sums along all lines."""
