@@ -82,3 +82,196 @@ def star_plane():
         )
 
     return make
+
+
+@pytest.fixture(scope="session")
+def moving_ridge():
+    """Return a drawer of echoes moved between two epochs, in noise.
+
+    ``draw(rng, snr=..., shift=..., angle=..., later=...)`` gives a difference, its
+    arc and nothing else: on a circle of ``radius`` the early and the late ridge lie
+    ``shift`` pixels apart, sharp in front (towards ``angle``) and slow behind, and
+    the S/N of a perfect filter is ``snr``.  The arc's trace is off by a little.  With
+    ``blurred`` half of the noise is that of a frame convolved by so many pixels.
+    """
+    from scipy import ndimage
+
+    from latelight.records import Arc, ArcTrace, Difference
+
+    def lobe(u, sigma, tail):
+        """A Gaussian blurred backwards by an exponential, by its definition."""
+        steps = (np.arange(200) + 0.5) / 20.0
+        weight = np.exp(-steps) / np.exp(-steps).sum()
+        return sum(
+            w * np.exp(-0.5 * ((u + tail * t) / sigma) ** 2)
+            for w, t in zip(weight, steps, strict=True)
+        )
+
+    def draw(
+        rng,
+        *,
+        snr,
+        shift,
+        angle,
+        later="science",
+        ratio=1.0,
+        sigma=2.0,
+        tail=2.5,
+        radius=400.0,
+        length=90.0,
+        size=220,
+        blurred=0.0,
+        misplaced=True,
+    ):
+        centre = 0.5 * (size - 1)
+        normal = np.array([np.cos(np.radians(angle)), np.sin(np.radians(angle))])
+        y, x = np.mgrid[:size, :size] - centre
+        distance = np.hypot(x - radius * normal[0], y - radius * normal[1])
+        u, s = radius - distance, y * normal[0] - x * normal[1]
+        fine = np.linspace(-40.0, 40.0, 1601)
+        profile = lobe(fine, sigma, tail)
+        peak = fine[np.argmax(profile)]
+        light = np.exp(-np.log(2.0) * (2.0 * s / length) ** 4)
+        late = np.interp(u - 0.5 * shift + peak, fine, profile) * light
+        early = np.interp(u + 0.5 * shift + peak, fine, profile) * light * ratio
+        signal = (late - early) * (1 if later == "science" else -1)
+        noise = rng.normal(size=signal.shape)
+        variance = power = 1.0
+        if blurred:
+            # The other frame's noise, equal but convolved: less of it in a pixel,
+            # all of it over a lobe's width.
+            other = rng.normal(size=signal.shape)
+            noise += ndimage.gaussian_filter(other, blurred, mode="wrap")
+            variance, power = 1.0 + 1.0 / (4.0 * np.pi * blurred**2), 2.0
+        signal *= snr * np.sqrt(power / (signal**2).sum())
+        on_late = ratio <= 1.0
+        place = 0.5 * shift if on_late else -0.5 * shift
+        own = radius - place
+        turn, off = rng.normal(0.0, [np.radians(1.5), 0.4]) if misplaced else (0.0, 0.0)
+        theta = np.arange(-length / 2, length / 2 + 1) / own + np.arctan2(
+            -normal[1], -normal[0]
+        )
+        middle = radius * normal - own * normal
+        px = radius * normal[0] + own * np.cos(theta) - middle[0]
+        py = radius * normal[1] + own * np.sin(theta) - middle[1]
+        trace = ArcTrace(
+            centre
+            + middle[0]
+            + np.cos(turn) * px
+            - np.sin(turn) * py
+            + off * normal[0],
+            centre
+            + middle[1]
+            + np.sin(turn) * px
+            + np.cos(turn) * py
+            + off * normal[1],
+            np.degrees(theta + np.pi + turn),
+        )
+        half = trace.x.size // 2
+        arc = Arc(
+            trace=trace,
+            sign=1 if on_late == (later == "science") else -1,
+            snr=snr,
+            x=float(trace.x[half]),
+            y=float(trace.y[half]),
+            normal_angle=float(trace.normal_angle[half] % 180.0),
+            normal_angle_err=1.5,
+            curvature=1.0 / own,
+            length_px=length,
+            width_px=3.0,
+            surface_brightness_counts=1.0,
+            shift_px=np.nan,
+            verdict="arc",
+        )
+        difference = Difference(
+            pixels=(signal + noise).astype(np.float32),
+            variance=np.full(signal.shape, variance, np.float32),
+            mask=np.zeros(signal.shape, np.uint16),
+            fwhm_px=4.0,
+            noise_ratio=1.0,
+            method="kernel",
+            compact=(),
+            star_scatter=0.0,
+            star_shift_px=0.0,
+        )
+        return difference, arc
+
+    return draw
+
+
+@pytest.fixture(scope="session")
+def star_pair(star_plane):
+    """Return a maker of two registered frames of the same Gaussian stars.
+
+    ``make(n_stars, size=..., science_sigma=..., template_sigma=..., scale=...,
+    offset=..., shift=..., noise=..., rng=...)``: fluxes 2e4-2e5 counts on a
+    jittered grid; the science frame is ``scale`` times as deep, ``offset`` counts
+    brighter and ``shift`` pixels to the right.  White noise, or none
+    without ``rng``.  The result has the attributes ``science, template,
+    science_stars, template_stars, alignment`` (the arguments of ``match_pair``) and
+    ``x, y, flux``.
+    """
+    from types import SimpleNamespace
+
+    from latelight.records import Alignment, PixelMap, StarList
+
+    def star_list(x, y, flux, sigma, shape):
+        n = x.size
+        return StarList(
+            x=x,
+            y=y,
+            position_err=np.full(n, 0.01),
+            flux=flux,
+            flux_err=np.full(n, 50.0),
+            peak=flux / (2 * np.pi * sigma**2),
+            fwhm=np.full(n, 2.3548 * sigma),
+            elongation=np.ones(n),
+            saturated=np.zeros(n, dtype=bool),
+            clean=np.ones(n, dtype=bool),
+            sky=np.full(shape, 200.0, np.float32),
+            fwhm_px=2.3548 * sigma,
+        )
+
+    def make(
+        n_stars=60,
+        *,
+        size=320,
+        science_sigma=1.8,
+        template_sigma=1.4,
+        scale=1.0,
+        offset=0.0,
+        shift=0.0,
+        noise=5.0,
+        rng=None,
+    ):
+        place = np.random.default_rng(42)
+        side = int(np.ceil(np.sqrt(n_stars)))
+        step = size / side
+        row, col = np.divmod(np.arange(n_stars), side)
+        x = (col + 0.5) * step + place.uniform(-0.2, 0.2, n_stars) * step
+        y = (row + 0.5) * step + place.uniform(-0.2, 0.2, n_stars) * step
+        flux = np.sort(10 ** place.uniform(4.3, 5.3, n_stars))[::-1]
+        shape = (size, size)
+        common = {"shape": shape, "noise": noise, "rng": rng}
+        science = star_plane(
+            x + shift, y, scale * flux, sigma=science_sigma,
+            sky=200.0 * scale + offset, **common,
+        )  # fmt: skip
+        template = star_plane(x, y, flux, sigma=template_sigma, sky=200.0, **common)
+        rows = np.arange(n_stars)
+        nodes = np.array([0.0, size - 1.0])
+        pixel_map = PixelMap(
+            nodes, nodes, *np.meshgrid(nodes, nodes, indexing="ij"), error_px=0.005
+        )
+        return SimpleNamespace(
+            science=science,
+            template=template,
+            science_stars=star_list(x + shift, y, scale * flux, science_sigma, shape),
+            template_stars=star_list(x, y, flux, template_sigma, shape),
+            alignment=Alignment(pixel_map, rows, rows, 0.01, "wcs"),
+            x=x,
+            y=y,
+            flux=flux,
+        )
+
+    return make

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -277,6 +278,7 @@ def fit_one_lobe(
     sign: int,
     width: float,
     sense: int,
+    tails: Sequence[float] = TAILS,
 ) -> LobeFit:
     """Fit a single lobe near offset 0.
 
@@ -292,12 +294,14 @@ def fit_one_lobe(
         Rough full width, PSF included, pixels.
     sense : {1, -1}
         Motion along the normal or against it.
+    tails : sequence of float
+        Tails over sigma to try.
     """
     places = np.linspace(-1.0, 1.0, 17) * (0.5 * width + 1.0)
     shapes = [
         (width * np.exp(step), tail)
         for step in np.linspace(-0.7, 0.7, 7)
-        for tail in TAILS
+        for tail in tails
     ]
     log_p, amplitude = one_lobe_table(
         profile, prior, places=places, shapes=shapes, sign=sign, sense=sense

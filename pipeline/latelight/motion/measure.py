@@ -149,7 +149,12 @@ def _follow(
     )
     profile = ridge.profile(ridge.strip)
     alone = fit_one_lobe(
-        profile, ridge.prior(settings), sign=arc.sign * sign, width=width, sense=1
+        profile,
+        ridge.prior(settings),
+        sign=arc.sign * sign,
+        width=width,
+        sense=1,
+        tails=(0.0,),  # which way the tail points is not known yet
     )
     bend = _bend(ridge.strip, ridge.trace, profile, alone, settings)
     trace = _trimmed(bent_trace(arc.trace, bend), bend)

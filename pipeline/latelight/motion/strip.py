@@ -136,9 +136,9 @@ def noise_correlation(difference: Difference, x: float, y: float) -> FloatArray:
     lags = np.arange(-_MAX_LAG, _MAX_LAG + 1)
     at = np.ix_(lags, lags)
     correlation = products[at].astype(float) / np.maximum(pairs[at], 1.0)
-    # Far lags are little but noise: fade them out.
-    fade = np.cos(0.5 * np.pi * np.hypot.outer(lags, lags) / (_MAX_LAG + 1)) ** 2
-    fade[np.hypot.outer(lags, lags) > _MAX_LAG + 1] = 0.0
+    # Far lags are little but noise: fade them out beyond half of the reach.
+    reach = np.hypot.outer(lags, lags) / (_MAX_LAG + 1)
+    fade = np.cos(np.pi * np.clip(reach - 0.5, 0.0, 0.5)) ** 2
     return correlation * fade
 
 
