@@ -121,15 +121,17 @@ def _bad(
     whole = _offset(total, n, n_sigma) & (alike.mean(axis=0) > MAJORITY)
     bad = _dead(sums, squares, counts) | _offset(sums, counts, n_sigma) | whole
     # What is bad in most blocks is bad in the others too, if less so.
-    return bad | (bad.mean(axis=0) > MAJORITY) | _edge_band(total / np.maximum(n, 1.0))
+    mean = (total / np.maximum(n, 1.0))[0]
+    return bad | (bad.mean(axis=0) > MAJORITY) | _edge_band(mean, n_sigma)
 
 
-def _edge_band(mean: FloatArray) -> BoolArray:
-    """Find lines at either edge, one after another, that are far off the sky."""
-    off = np.abs(mean[0]) > EDGE_SIGMA
-    inwards = np.minimum.accumulate(off)
-    outwards = np.minimum.accumulate(off[::-1])[::-1]
-    band: BoolArray = inwards | outwards
+def _edge_band(mean: FloatArray, n_sigma: float) -> BoolArray:
+    """Find lines at either edge, one after another, that are far off the others."""
+    offset = np.abs(mean - np.median(mean))
+    scatter = 1.4826 * float(np.median(offset))
+    off = offset > max(EDGE_SIGMA, n_sigma * scatter)
+    band: BoolArray = np.logical_and.accumulate(off)
+    band |= np.logical_and.accumulate(off[::-1])[::-1]
     return band
 
 

@@ -7,16 +7,14 @@ from dataclasses import dataclass
 import numpy as np
 from scipy import ndimage
 
-from latelight.frames._kernels import bilinear_rows
 from latelight.frames.trails._kernels import (
     across_profile,
     best_line,
-    binned_rows,
     line_sum,
     line_transform,
 )
+from latelight.frames.trails.squares import binned, halved, pulled_in, without_stars
 from latelight.records import BoolArray, FloatArray, MaskArray, PixelArray
-from latelight.threads import over_rows
 
 __all__ = ["Trail", "find_trails", "trail_mask"]
 
@@ -24,15 +22,11 @@ __all__ = ["Trail", "find_trails", "trail_mask"]
 SQUARES = 512
 # ... or twice as many, for frames larger than this, whose trails would drown.
 LARGE_PX = 2560
-# The local mean is taken over this many squares a side.
-LOCAL = 16
 MAX_TRAILS = 12
 # Over shorter lines than this, in pixels, chance and crowding line stars up.
 MIN_LENGTH_PX = 256.0
-# First bright trails, stars pulled in; then faint ones, stars taken out.
-PULLED_IN = 3.0
-TAKEN_OUT = 3.5
-# ... bright meaning this significant, as chains of stars are easily significant.
+# Bright trails are sought with stars only pulled in, which line up so easily that a
+# trail must be this significant; faint ones with stars taken out.
 BRIGHT_SIGMA = 10.0
 # A trail is bright all along: its median is near its mean, and its dimmer quarter
 # of PIECES pieces not far below.
@@ -121,15 +115,15 @@ def find_trails(
     longest = max(pixels.shape)
     squares = SQUARES if longest <= LARGE_PX else 2 * SQUARES
     fine = max(2, -(-longest // squares))
-    image = _binned(pixels, sky, mask, sigma, fine)
+    image = binned(pixels, sky, mask, sigma, fine)
     frame = _Frame(pixels, sky, mask, sigma, fwhm)
-    coarse = _halved(image)
+    coarse = halved(image)
     bright = _search(
-        coarse, _pulled_in(coarse), frame, 2 * fine, BRIGHT_SIGMA, min_length
+        coarse, pulled_in(coarse), frame, 2 * fine, BRIGHT_SIGMA, min_length
     )
     for trail in bright:
         _blot(image, trail.ends(fine), trail.half_width / fine + 1.0)
-    faint = _search(image, _without_stars(image), frame, fine, n_sigma, min_length)
+    faint = _search(image, without_stars(image), frame, fine, n_sigma, min_length)
     return bright + faint
 
 
@@ -140,69 +134,6 @@ def trail_mask(trails: tuple[Trail, ...], *, shape: tuple[int, int]) -> BoolArra
         _blot(marked, trail.ends(), trail.half_width)
     under: BoolArray = marked == 0.0
     return under
-
-
-def _binned(
-    pixels: PixelArray, sky: PixelArray, mask: MaskArray, sigma: float, size: int
-) -> PixelArray:
-    """Bin the frame, in sigma of the binned noise; zero where little is good."""
-    ny, nx = pixels.shape[0] // size, pixels.shape[1] // size
-    image = np.empty((ny, nx), dtype=np.float32)
-    over_rows(
-        lambda first, last: binned_rows(
-            pixels, sky, mask, sigma, size, image, first, last
-        ),
-        ny,
-    )
-    return image
-
-
-def _halved(image: PixelArray) -> PixelArray:
-    """Bin an image in units of its noise 2 x 2 more, in units of the new noise."""
-    ny, nx = image.shape[0] // 2, image.shape[1] // 2
-    halved: PixelArray = 0.5 * image[: 2 * ny, : 2 * nx].reshape(ny, 2, nx, 2).sum(
-        axis=(1, 3)
-    )
-    return halved
-
-
-def _pulled_in(image: PixelArray) -> PixelArray:
-    """Pull bright squares in and take the local mean off; unit scatter."""
-    work = np.clip(image, -PULLED_IN, PULLED_IN)
-    work -= _local_mean(work, np.ones(work.shape, dtype=bool))
-    unit: PixelArray = work / max(float(work.std()), 1e-6)
-    return unit
-
-
-def _without_stars(image: PixelArray) -> PixelArray:
-    """Set stars to zero, take the local mean off the rest; unit scatter."""
-    low, middle = np.quantile(image[::2, ::2], [0.1587, 0.5])
-    kept = np.abs(image - middle) <= TAKEN_OUT * max(middle - low, 1e-6)
-    kept &= image != 0.0
-    for axis in (0, 1):
-        rolled = np.roll(kept, 1, axis) & np.roll(kept, -1, axis)
-        kept = kept & rolled
-    work = np.where(kept, image - _local_mean(image, kept), np.float32(0.0))
-    unit: PixelArray = work / max(float(work[kept].std()) if kept.any() else 1.0, 1e-6)
-    return unit
-
-
-def _local_mean(image: PixelArray, kept: BoolArray) -> PixelArray:
-    """Return the mean of the kept squares round every square."""
-    ny, nx = (max(side // LOCAL, 1) for side in image.shape)
-    tiles = (slice(0, ny * LOCAL), slice(0, nx * LOCAL))
-    shape = (ny, min(LOCAL, image.shape[0]), nx, min(LOCAL, image.shape[1]))
-    n = kept[tiles].reshape(shape).sum(axis=(1, 3), dtype=np.float32)
-    sums = np.where(kept[tiles], image[tiles], 0).reshape(shape).sum(axis=(1, 3))
-    nodes = ndimage.uniform_filter(sums, 3) / np.maximum(
-        ndimage.uniform_filter(n, 3), 1.0
-    )
-    mean = np.empty_like(image)
-    middle = 0.5 * (LOCAL - 1)
-    bilinear_rows(
-        nodes.astype(np.float32), middle, middle, float(LOCAL), mean, 0, len(image)
-    )
-    return mean
 
 
 def _search(
@@ -368,8 +299,9 @@ def _half_width(
 ) -> float | None:
     """Return how far a trail's wings reach; None if it is none after all.
 
-    It is none where its profile is not significant, or a Gaussian WIDE times the PSF's width fits better than the
-    PSF itself, unless it is brilliant: aircraft are.
+    It is none where its profile is not significant, or where a Gaussian WIDE times
+    the PSF's width fits better than the PSF itself, unless it is brilliant: aircraft
+    are.
     """
     profile = np.empty(2 * MAX_HALF_WIDTH_PX + 1)
     fwhm = frame.fwhm
