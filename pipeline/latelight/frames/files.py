@@ -17,7 +17,14 @@ from latelight.errors import FrameError
 from latelight.frames.settings import HeaderWords
 from latelight.records import PixelArray
 
-__all__ = ["ImageUnit", "find_images", "frame_stem", "open_fits", "pixels_of"]
+__all__ = [
+    "ImageUnit",
+    "find_images",
+    "frame_stem",
+    "open_fits",
+    "pixels_of",
+    "refuse_truncated",
+]
 
 # Extensions with such names go with an image and are none themselves.
 PLANE_NAMES = frozenset(
@@ -25,6 +32,7 @@ PLANE_NAMES = frozenset(
     | {"VARIANCE", "WEIGHT", "WHT"}
 )
 MIN_SIDE_PX = 32
+FITS_BLOCK = 2880  # bytes
 # Damaged sizes must not ask for all the memory there is.
 MAX_PIXELS = 2**30
 
@@ -159,7 +167,7 @@ def pixels_of(path: Path, hdu: Any) -> PixelArray:
     FrameError
         If the file ends before the image does.
     """
-    _refuse_truncated(path, hdu)
+    refuse_truncated(path, hdu)
     raw = np.asarray(hdu.data)
     blank = hdu.header.get("BLANK")
     is_blank = raw == blank if raw.dtype.kind in "iu" and blank is not None else None
@@ -176,13 +184,24 @@ def pixels_of(path: Path, hdu: Any) -> PixelArray:
     return pixels
 
 
-def _refuse_truncated(path: Path, hdu: Any) -> None:
-    """Raise if the file is shorter than its header says (plain files only)."""
+def refuse_truncated(path: Path, hdu: Any) -> None:
+    """Refuse an image that a plain file ends before; the headers suffice to tell.
+
+    Raises
+    ------
+    FrameError
+        If the file is shorter than its header says.  A gzipped file shows that
+        only when it is read.
+    """
     place = hdu.fileinfo()
     if place is None or path.suffix.lower() in {".gz", ".bz2", ".zip", ".z"}:
         return
-    missing = place["datLoc"] + hdu.size - path.stat().st_size
-    if missing > 0 and not isinstance(hdu, fits.CompImageHDU):
+    # A tile-compressed image tells its size in whole FITS blocks only, and the
+    # filling of the last block may be missing without harm.
+    compressed = isinstance(hdu, fits.CompImageHDU)
+    size = place["datSpan"] - FITS_BLOCK + 1 if compressed else hdu.size
+    missing = place["datLoc"] + size - path.stat().st_size
+    if missing > 0:
         reason = f"the file is truncated, {missing} bytes are missing: copy it again"
         raise FrameError(path, reason)
 

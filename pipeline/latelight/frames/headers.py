@@ -6,7 +6,13 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from latelight.frames.celestial import checked_wcs, footprint
-from latelight.frames.files import ImageUnit, find_images, frame_stem, open_fits
+from latelight.frames.files import (
+    ImageUnit,
+    find_images,
+    frame_stem,
+    open_fits,
+    refuse_truncated,
+)
 from latelight.frames.settings import HeaderWords
 from latelight.frames.words import HeaderValues, read_words
 from latelight.records import FloatArray
@@ -72,7 +78,8 @@ def read_headers(path: Path, words: HeaderWords) -> tuple[FrameHeader, ...]:
     Raises
     ------
     FrameError
-        If the file cannot be read, or its words, extensions or WCS are faulty.
+        If the file cannot be read, is shorter than its headers say, or its words,
+        extensions or WCS are faulty.
     """
     with open_fits(path) as file:
         units = find_images(path, file, words=words)
@@ -85,6 +92,7 @@ def describe(path: Path, chip: str) -> str:
 
 
 def _header(path: Path, unit: ImageUnit, words: HeaderWords) -> FrameHeader:
+    refuse_truncated(path, unit.hdu)
     values: HeaderValues = read_words(path, unit.headers, words=words)
     wcs, notes = checked_wcs(path, unit.headers, shape=unit.shape)
     return FrameHeader(
