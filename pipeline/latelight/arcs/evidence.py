@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
+from latelight.arcs.bright import BrightStars
 from latelight.arcs.fit import BLOCK_PX, Fit, PolarSums, sum_along
 from latelight.arcs.lobes import Lobes
 from latelight.arcs.profiles import lobe_width
@@ -19,44 +20,13 @@ from latelight.arcs.surroundings import (
     ring_about,
 )
 from latelight.arcs.tracing import block_significance
-from latelight.records import BoolArray, Difference, FloatArray, StarList
+from latelight.records import Difference, FloatArray
 
-__all__ = ["BrightStars", "Evidence", "gather"]
+__all__ = ["Evidence", "gather"]
 
 
 _PIECE_BLOCKS = 3
 """Blocks that share one brightness: filaments are longer than 24 pixels."""
-
-
-@dataclass(frozen=True, slots=True)
-class BrightStars:
-    """The stars that may cast spikes, bleeds, ghosts and haloes.
-
-    Attributes
-    ----------
-    x, y : float64 array, shape (n,)
-        Pixels.
-    flux : float64 array, shape (n,)
-        Counts.
-    saturated : bool array, shape (n,)
-    """
-
-    x: FloatArray
-    y: FloatArray
-    flux: FloatArray
-    saturated: BoolArray
-
-    @classmethod
-    def of(cls, stars: StarList, *, least_snr: float) -> BrightStars:
-        """Select the saturated stars and those of a least signal-to-noise."""
-        snr = stars.flux / np.maximum(stars.flux_err, 1e-30)
-        bright = stars.saturated | (snr >= least_snr)
-        return cls(
-            stars.x[bright],
-            stars.y[bright],
-            stars.flux[bright],
-            stars.saturated[bright],
-        )
 
 
 @dataclass(frozen=True, slots=True)
@@ -82,6 +52,8 @@ class Evidence:
         Significance without the best sixth of the arc, at least two blocks.
     filled : float
         Fraction of the length that takes part in the signal.
+    away_share : float
+        Height of the ridge away from bright stars over its height everywhere.
     masked : float
         Fraction of the lobes' pixels that are masked or outside the frame.
     settings : ArcSettings
@@ -101,6 +73,7 @@ class Evidence:
     block_snr: FloatArray
     trimmed_snr: float
     filled: float
+    away_share: float
     masked: float
     settings: ArcSettings
     stars: BrightStars
@@ -166,6 +139,7 @@ def gather(
         block_snr=block_snr,
         trimmed_snr=_trimmed(matched, power) / noise_ratio,
         filled=filled(matched, power),
+        away_share=_away(difference, fit, half_height, stars),
         masked=_masked(sums, fit.pair),
         settings=settings,
         stars=stars,
@@ -183,6 +157,19 @@ def _uneven(pair_snr: float, core: FloatArray, whole: FloatArray) -> float:
     even = core.sum() / np.sqrt(core.size)
     gain = float(np.sum(np.square(pieces)) - even**2) - (n - 1)
     return float(np.sqrt(pair_snr**2 + max(gain, 0.0)))
+
+
+def _away(
+    difference: Difference, fit: Fit, half_height: int, stars: BrightStars
+) -> float:
+    """Compare the ridge's height away from bright stars with that everywhere."""
+    mask = difference.mask.copy()
+    mask[stars.residues] |= np.uint16(1)
+    heights = []
+    for where in (difference, replace(difference, mask=mask)):
+        _, matched, power = block_significance(where, fit, half_height, fit.half_length)
+        heights.append(float(matched.sum()) / max(float(power.sum()), 1e-30))
+    return heights[1] / heights[0] if heights[0] > 0.0 else 0.0
 
 
 def _trimmed(matched: FloatArray, power: FloatArray) -> float:

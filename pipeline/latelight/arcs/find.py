@@ -6,7 +6,8 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from latelight.arcs.evidence import BrightStars, Evidence, gather
+from latelight.arcs.bright import BrightStars, bright_stars
+from latelight.arcs.evidence import Evidence, gather
 from latelight.arcs.fit import Fit, Reach, fit_seed, refine_fit
 from latelight.arcs.lobes import Lobes
 from latelight.arcs.merging import explains, mask_explained
@@ -72,7 +73,7 @@ def find_arcs(
         widest_px=settings.widest_px,
         n_shifts=int(settings.largest_shift_px) + 1,
     )
-    bright = BrightStars.of(stars, least_snr=settings.bright_star_snr)
+    bright = bright_stars(difference, stars, least_snr=settings.bright_star_snr)
     # What one ridge explains is masked before the next is fitted.
     left = replace(difference, mask=difference.mask.copy())
     arcs: list[Arc] = []

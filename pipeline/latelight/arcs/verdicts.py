@@ -18,6 +18,9 @@ _HALO_SHARE = 0.05
 """A halo holds no more than this share of its star's light."""
 _HALO_RADIUS_PX = 120.0
 
+_SPIKE_CORES = 15.0
+"""A spike begins within this many radii of the star's saturated core."""
+
 Extent = Literal["", "line", "ring"]
 
 
@@ -51,7 +54,7 @@ def judge(evidence: Evidence) -> tuple[str, Extent]:
 
 def masked(evidence: Evidence) -> bool:
     """Tell whether too little of it is on good pixels to judge."""
-    return evidence.masked > 0.5
+    return evidence.masked > 0.7
 
 
 def trail(evidence: Evidence) -> bool:
@@ -75,7 +78,8 @@ def spike(evidence: Evidence) -> bool:
     stars = evidence.stars
     s, u = evidence.fit.circle.coordinates(stars.x, stars.y)
     aimed = np.abs(u) < 1.5 * evidence.fwhm_px + 0.03 * np.abs(s)
-    near = np.abs(s) < 2.0 * evidence.length_px
+    gap = np.abs(s) - evidence.fit.half_length
+    near = gap < np.maximum(_SPIKE_CORES * stars.core_px, 3.0 * evidence.fwhm_px)
     light = _height(evidence) * evidence.lobe_width_px * evidence.length_px
     return bool(np.any(aimed & near & (light < _SPIKE_SHARE * stars.flux)))
 
@@ -89,7 +93,7 @@ def halo(evidence: Evidence) -> bool:
     could = square & (np.abs(u) < _HALO_RADIUS_PX) & (light < _HALO_SHARE * stars.flux)
     for x, y in zip(stars.x[could].tolist(), stars.y[could].tolist(), strict=True):
         found = evidence.ring_about(x, y)
-        if found.lit >= max(1, found.dark) and found.snr > 3.0 and found.share > 0.2:
+        if found.lit >= found.dark and found.snr > 3.0 and found.share > 0.2:
             return True
     return False
 
@@ -97,8 +101,22 @@ def halo(evidence: Evidence) -> bool:
 def ring(evidence: Evidence) -> bool:
     """Tell whether the rest of a circle through it shines too."""
     found = evidence.ring()
-    round_it = found.lit >= max(1, found.dark)
-    return round_it and found.snr > 3.5 and found.share > 0.35
+    return found.lit >= found.dark and found.snr > 3.5 and found.share > 0.35
+
+
+def residue(evidence: Evidence) -> bool:
+    """Tell whether its light lies close to bright stars."""
+    return evidence.away_share < 0.5
+
+
+def dipole(evidence: Evidence) -> bool:
+    """Tell whether it is a PSF-wide line a fraction of the PSF out of place."""
+    pair = evidence.fit.pair
+    shift = abs(pair.positive - pair.negative)
+    return (
+        evidence.lobe_width_px < 1.3 * evidence.fwhm_px
+        and shift < 0.7 * evidence.fwhm_px
+    )
 
 
 def curled(evidence: Evidence) -> bool:
@@ -141,10 +159,12 @@ def _height(evidence: Evidence) -> float:
 
 
 ARTEFACTS = (
-    Artefact("masked: over half of it lies on bad pixels", masked),
+    Artefact("masked: most of it lies on bad pixels", masked),
     Artefact("trail: a straight line longer than any arc", trail, "line"),
     Artefact("spike: points at a bright star", spike),
     Artefact("halo: concentric with a bright star", halo),
+    Artefact("residue: its light lies close to bright stars", residue),
+    Artefact("dipole: a narrow line a fraction of the PSF out of place", dipole),
     Artefact("curled: its radius is shorter than any arc's", curled),
     Artefact("wide: wider than any echo", wide),
     Artefact("stub: too short, or hardly longer than wide", stubby),
