@@ -12,7 +12,7 @@ from latelight.statistics import robust_sigma
 
 __all__ = ["Polynomial", "fit_displacement", "fit_surface", "terms"]
 
-_CLIP_ROUNDS = 10
+_ABSOLUTE_ROUNDS, _CLIP_ROUNDS = 10, 10
 # Stars for each term of a polynomial before it is thought of at all.
 _STARS_PER_TERM = 3
 # Halvings of the logarithm of a range of 10^7: a part in a thousand.
@@ -195,11 +195,16 @@ def _clip(
     """Stars that agree with one polynomial, and the variance of every star."""
     design = data.design(degree)
     n_terms = design.shape[1]
-    kept = np.ones(data.error.size, dtype=bool)
-    variance = data.error**2 + floor**2
-    for turn in range(_CLIP_ROUNDS):
-        solution, _ = _solve(design, data.displacement, variance, kept)
+    every = np.ones(data.error.size, dtype=bool)
+    # Least absolute deviations first, whatever the errors: a bright star gone
+    # astray would drag a weighted fit along, and stay in it.
+    spread = np.ones(data.error.size)
+    for _ in range(_ABSOLUTE_ROUNDS):
+        solution, _ = _solve(design, data.displacement, spread, every)
         residual = data.displacement - design @ solution
+        spread = np.maximum(np.hypot(*residual.T), floor)
+    kept = every
+    for turn in range(_CLIP_ROUNDS):
         # The median first: wild stars would blow up a likelihood.
         scatter_of = _median_scatter if turn < 2 else _likely_scatter
         freedom = max(kept.sum() - n_terms, 1) / kept.sum()
@@ -210,6 +215,8 @@ def _clip(
         if now.sum() <= n_terms + 1 or settled:
             break
         kept = now
+        solution, _ = _solve(design, data.displacement, variance, kept)
+        residual = data.displacement - design @ solution
     return kept, variance
 
 
