@@ -20,9 +20,13 @@ __all__ = ["KernelFit", "fit_kernel"]
 
 _STAGE = "matching"
 _ROUNDS = 4
+# Complexity at which stars are first judged.
+_MIDDLE_LEVEL = 1
 # Held-out stars must get this much better, in mean log chi-square, to pay for a
 # more complex kernel.
 _WORTHWHILE = 0.005
+# A reduced chi-square this low is as good as any.
+_NOTHING_LEFT = 0.5
 # Keeps the factorisation of a noise-free system from failing by rounding.
 _RIDGE = 1e-12
 # Below this many the held-out stars are too few to choose by.
@@ -119,7 +123,9 @@ def fit_kernel(
     # Variables and galaxies go first, by a simple model, so that every candidate
     # is judged on the same stars.
     simple = _Model(
-        0, _affordable(int((~held).sum()), min(1, settings.spatial_degree)), 0
+        _MIDDLE_LEVEL,
+        _affordable(int((~held).sum()), min(1, settings.spatial_degree)),
+        0,
     )
     sound = solver.clip(simple, ~held, settings)
     judges = held & solver.inliers(simple, sound, settings)
@@ -157,11 +163,11 @@ def _choose(
 
     def score(model: _Model) -> float:
         coefficients, _ = solver.solve(model, fitted)
-        chi2 = np.maximum(solver.chi2(coefficients)[judges], 1e-12)
+        chi2 = np.maximum(solver.chi2(coefficients)[judges], _NOTHING_LEFT)
         return float(np.mean(np.log(chi2)))
 
     most = _affordable(int(fitted.sum()), settings.spatial_degree)
-    best = _Model(min(1, levels - 1), 0, 0)
+    best = _Model(_MIDDLE_LEVEL, 0, 0)
     best = _simplest(score, [replace(best, spatial_degree=d) for d in range(most + 1)])
     best = _simplest(score, [replace(best, level=n) for n in range(levels)])
     highest = min(settings.scale_degree, most)

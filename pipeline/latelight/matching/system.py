@@ -15,9 +15,6 @@ from latelight.threads import over_rows
 
 __all__ = ["FitImages", "StarSystems", "build_systems", "disc_offsets"]
 
-# A star's model error, as a fraction of its light in a pixel: keeps a few very
-# bright stars from ruling the fit.
-_MODEL_ERROR = 0.01
 # Share of the noise term taken out of the normal equations; the rest is a gentle
 # ridge on the functions the stars say nothing about.
 _NOISE_REMOVED = 0.95
@@ -147,8 +144,7 @@ def build_systems(
                 for v in (images.target_variance, images.sharp_variance)
             ]
             target_v, sharp_v = (v[tuple(offsets.T + radius)] for v in smooth)
-            light = np.maximum(scale * basis.combine[0, 0] * functions[:, 0], 0.0)
-            variance = target_v + through * sharp_v + (_MODEL_ERROR * light) ** 2
+            variance = target_v + through * sharp_v
             weight = np.where(images.bad[at], 0.0, 1.0 / variance)
             share = weight / weight.sum()
             functions -= share @ functions
