@@ -138,10 +138,7 @@ def _unit_stamps(
             take.append(int(star))
         if len(take) == settings.psf_stars:
             break
-    if len(take) < _FEWEST:
-        msg = f"the PSF needs at least {_FEWEST} clean unmasked stars, got {len(take)}"
-        raise StageError(_STAGE, f"{msg}; lower [registration]'s star threshold")
-    kept = np.array(take)
+    kept = np.array(take, dtype=int)
     stamps = plane.pixels[
         row[kept, None, None] + step[:, None], col[kept, None, None] + step
     ].astype(float)
@@ -151,6 +148,15 @@ def _unit_stamps(
     stamps -= middle[:, :, None]
     stamps = _shift(stamps, x[kept] - col[kept], y[kept] - row[kept])
     total = stamps[:, core].sum(axis=1)
+    lit = total > 0
+    if lit.sum() < _FEWEST:
+        msg = (
+            f"the PSF needs at least {_FEWEST} clean unmasked stars, got {lit.sum()}; "
+            "lower clean_snr in [registration], or leave the frame out"
+        )
+        raise StageError(_STAGE, msg)
+    stamps, total, kept = stamps[lit], total[lit], kept[lit]
+    around, middle = around[lit], middle[lit]
     noise = MAD_TO_SIGMA * np.median(np.abs(around - middle), axis=1) / total
     weight = 1.0 / np.hypot(noise, _STAR_ERROR)
     return stamps / total[:, None, None], kept, weight[:, None]

@@ -33,9 +33,6 @@ __all__ = [
 
 ComplexArray = NDArray[np.complexfloating]
 
-# Keeps 0 / 0 from arising where both transfers vanish; far below any measured PSF.
-_LEAST_TRANSFER2 = 1e-12
-
 
 @dataclass(frozen=True, slots=True)
 class ProperFilters:
@@ -120,11 +117,10 @@ def proper_filters(
     spectrum = 1.0 if reference_noise is None else reference_noise
     from_new = new_sigma**2 * reference_flux**2
     from_reference = reference_sigma**2 * new_flux**2
-    den = from_new * np.maximum(_power(reference_psf), _LEAST_TRANSFER2)
-    den = den + from_reference * spectrum * np.maximum(
-        _power(new_psf), _LEAST_TRANSFER2
-    )
-    root = np.sqrt(den)
+    den = from_new * _power(reference_psf) + from_reference * spectrum * _power(new_psf)
+    # Only 0 / 0 is kept from arising: however small both transfers are, their ratio
+    # decides, and the noise stays white.
+    root = np.sqrt(np.maximum(den, np.finfo(den.dtype).tiny))
     flux = reference_flux * new_flux / np.sqrt(from_new + from_reference)
     both = reference_flux * new_flux * reference_psf * new_psf
     return ProperFilters(
