@@ -15,11 +15,13 @@ from latelight.echo.geometry import (
     depth_pc,
     light_speed_arcsec_yr,
     observer_distance_pc,
-    paraboloid_depth_pc,
-    paraboloid_speed_arcsec_yr,
     projected_distance_pc,
     scattering_angle_deg,
     source_distance_pc,
+)
+from latelight.echo.paraboloid import (
+    paraboloid_depth_pc,
+    paraboloid_speed_arcsec_yr,
 )
 from latelight.sky import separation_deg
 

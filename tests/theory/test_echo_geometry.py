@@ -11,13 +11,15 @@ from latelight.echo.geometry import (
     depth_pc,
     light_speed_arcsec_yr,
     observer_distance_pc,
-    paraboloid_delay_yr,
-    paraboloid_depth_pc,
-    paraboloid_speed_arcsec_yr,
     projected_distance_pc,
     scattering_angle_deg,
     source_distance_pc,
     speed_arcsec_yr,
+)
+from latelight.echo.paraboloid import (
+    paraboloid_delay_yr,
+    paraboloid_depth_pc,
+    paraboloid_speed_arcsec_yr,
 )
 
 pytestmark = pytest.mark.theory

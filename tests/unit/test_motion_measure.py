@@ -6,8 +6,11 @@ import numpy as np
 import pytest
 
 from latelight.masks import MaskBit
+from latelight.motion.fitting import fit_one_lobe
+from latelight.motion.lobes import LobePrior
 from latelight.motion.measure import measure_motion
 from latelight.motion.settings import MotionSettings
+from latelight.motion.strip import Profile
 from latelight.records import Arc, ArcTrace, Difference, Motion
 from latelight.sky import wrap_180
 
@@ -164,6 +167,14 @@ def test_arc_under_a_mask_is_refused(moving_ridge, rng):
     hidden = replace(difference, mask=np.full_like(difference.mask, MaskBit.TRAIL))
     with pytest.raises(ValueError, match="12 usable rows of pixels across it, got 0"):
         measure((hidden, arc))
+
+
+def test_profile_without_a_ridge_of_the_sign_is_refused():
+    offsets = np.arange(-20.0, 21.0)
+    values = -np.exp(-0.5 * (offsets / 3.0) ** 2)
+    profile = Profile(offsets, values, np.ones(41), np.eye(41), 1.0)
+    with pytest.raises(ValueError, match="must be a ridge of the sign"):
+        fit_one_lobe(profile, LobePrior(4.0, 0.6), sign=1, width=7.0, sense=1)
 
 
 def test_unknown_epoch_is_refused(moving_ridge, rng):

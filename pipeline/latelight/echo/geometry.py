@@ -15,9 +15,8 @@ Symbols, everywhere in this package:
   the source, pc, POSITIVE TOWARDS THE OBSERVER; ``rho`` its distance from that
   line, pc, so ``tan(theta) = rho / (D - z)``.
 
-Everything is exact unless its name begins with ``paraboloid_``: those forms
-hold for ``D >> c t`` and small angles only, and are wrong by 4-60 % at angles of
-a few degrees.  Arguments broadcast; numbers in give numbers out.
+Everything here is exact; the usual approximation is in
+:mod:`latelight.echo.paraboloid`.  Arguments broadcast; numbers in give numbers out.
 """
 
 from __future__ import annotations
@@ -25,6 +24,12 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import ArrayLike
 
+from latelight.echo.arguments import (
+    checked_age,
+    checked_angle,
+    checked_distance,
+    require,
+)
 from latelight.echo.constants import ARCSEC_PER_RADIAN, LIGHT_PC_PER_YEAR
 from latelight.records import FloatArray
 
@@ -35,9 +40,6 @@ __all__ = [
     "depth_pc",
     "light_speed_arcsec_yr",
     "observer_distance_pc",
-    "paraboloid_delay_yr",
-    "paraboloid_depth_pc",
-    "paraboloid_speed_arcsec_yr",
     "projected_distance_pc",
     "scattering_angle_deg",
     "source_distance_pc",
@@ -63,7 +65,7 @@ def light_speed_arcsec_yr(distance_pc: ArrayLike) -> FloatArray:
     ValueError
         If a distance is not positive and finite.
     """
-    return ARCSEC_PER_RADIAN * LIGHT_PC_PER_YEAR / _distance(distance_pc)
+    return ARCSEC_PER_RADIAN * LIGHT_PC_PER_YEAR / checked_distance(distance_pc)
 
 
 def delay_yr(
@@ -92,11 +94,11 @@ def delay_yr(
         If the angle or the distance is out of range, or the dust lies at or
         behind the observer.
     """
-    theta = _angle(theta_deg)
-    distance = _distance(distance_pc)
+    theta = checked_angle(theta_deg)
+    distance = checked_distance(distance_pc)
     depth = np.asarray(depth_pc, dtype=float)
     to_observer = distance - depth
-    _require(to_observer > 0.0, "depth_pc", "less than distance_pc", depth)
+    require(to_observer > 0.0, "depth_pc", "less than distance_pc", depth)
     rho = to_observer * np.tan(theta)
     r = np.hypot(rho, depth)
     # r - z and l - (D - z) without the cancellation between large lengths.
@@ -307,52 +309,6 @@ def delay_gradient(
     return across, per_tilt
 
 
-def paraboloid_depth_pc(
-    theta_deg: ArrayLike, age_yr: ArrayLike, distance_pc: ArrayLike
-) -> FloatArray:
-    """Return the depth in the paraboloid form: rho**2 / (2 c t) - c t / 2, pc.
-
-    ``rho`` is the distance times the angle.  Arguments and errors as for
-    :func:`depth_pc`.
-    """
-    rho, path = _small_angle(theta_deg, age_yr, distance_pc)
-    return rho**2 / (2.0 * path) - path / 2.0
-
-
-def paraboloid_delay_yr(
-    theta_deg: ArrayLike, depth_pc: ArrayLike, distance_pc: ArrayLike
-) -> FloatArray:
-    """Return the delay in the paraboloid form: (sqrt(rho**2 + z**2) - z) / c.
-
-    Arguments and errors as for :func:`delay_yr`.
-    """
-    distance = _distance(distance_pc)
-    rho = distance * _angle(theta_deg)
-    depth = np.asarray(depth_pc, dtype=float)
-    _require(depth < distance, "depth_pc", "less than distance_pc", depth)
-    r = np.hypot(rho, depth)
-    away = np.where(depth > 0.0, rho**2 / (r + np.abs(depth)), r - depth)
-    return away / LIGHT_PC_PER_YEAR
-
-
-def paraboloid_speed_arcsec_yr(
-    theta_deg: ArrayLike,
-    age_yr: ArrayLike,
-    distance_pc: ArrayLike,
-    slope: ArrayLike = 0.0,
-) -> FloatArray:
-    """Return the speed in the paraboloid form: c (z + c t) / (rho - s c t).
-
-    Arguments, sign and errors as for :func:`speed_arcsec_yr`.
-    """
-    rho, path = _small_angle(theta_deg, age_yr, distance_pc)
-    to_source = rho**2 / (2.0 * path) + path / 2.0
-    s = np.asarray(slope, dtype=float)
-    with np.errstate(divide="ignore"):
-        beta = to_source / (rho - s * path)
-    return beta * light_speed_arcsec_yr(distance_pc)
-
-
 class _Ellipsoid:
     """The point of the ellipsoid in one direction, lengths in pc.
 
@@ -368,9 +324,9 @@ class _Ellipsoid:
     def __init__(
         self, theta_deg: ArrayLike, age_yr: ArrayLike, distance_pc: ArrayLike
     ) -> None:
-        self.theta = _angle(theta_deg)
-        self.distance = _distance(distance_pc)
-        self.path = _age(age_yr) * LIGHT_PC_PER_YEAR
+        self.theta = checked_angle(theta_deg)
+        self.distance = checked_distance(distance_pc)
+        self.path = checked_age(age_yr) * LIGHT_PC_PER_YEAR
         self.sin = np.sin(self.theta)
         self.cos = np.cos(self.theta)
         self.versine = 2.0 * np.sin(self.theta / 2.0) ** 2
@@ -381,39 +337,3 @@ class _Ellipsoid:
         self.to_source = (reach + self.path**2) / twice
         self.depth = (reach - self.path**2 * self.cos) / twice
         self.overshoot = self.path**2 * (1.0 + self.cos) / twice  # r - z
-
-
-def _small_angle(
-    theta_deg: ArrayLike, age_yr: ArrayLike, distance_pc: ArrayLike
-) -> tuple[FloatArray, FloatArray]:
-    """Return rho = D theta and the light path c t, pc."""
-    rho = _distance(distance_pc) * _angle(theta_deg)
-    return rho, _age(age_yr) * LIGHT_PC_PER_YEAR
-
-
-def _angle(theta_deg: ArrayLike) -> FloatArray:
-    theta = np.asarray(theta_deg, dtype=float)
-    _require((theta >= 0.0) & (theta < 90.0), "theta_deg", "in [0, 90)", theta)
-    return np.radians(theta)
-
-
-def _age(age_yr: ArrayLike) -> FloatArray:
-    age = np.asarray(age_yr, dtype=float)
-    _require((age > 0.0) & np.isfinite(age), "age_yr", "positive and finite", age)
-    return age
-
-
-def _distance(distance_pc: ArrayLike) -> FloatArray:
-    distance = np.asarray(distance_pc, dtype=float)
-    fit = (distance > 0.0) & np.isfinite(distance)
-    _require(fit, "distance_pc", "positive and finite", distance)
-    return distance
-
-
-def _require(fit: ArrayLike, name: str, rule: str, value: FloatArray) -> None:
-    """Raise ValueError with the first value that breaks the rule."""
-    bad = ~np.asarray(fit)
-    if bad.any():
-        first = np.broadcast_to(value, bad.shape)[bad].flat[0]
-        msg = f"{name} must be {rule}, got {first:g}"
-        raise ValueError(msg)

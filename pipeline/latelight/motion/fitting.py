@@ -16,6 +16,8 @@ __all__ = ["LobeFit", "PairGuess", "fit_one_lobe", "fit_pair", "search_lobes"]
 
 _SEARCH_TAILS = (0.6, 4.0)
 _SEARCH_WIDTHS = (0.65, 1.0, 1.5)
+_ROUNDS = 2
+_NODES = np.linspace(-1.0, 1.0, 13)
 _RATIO_NODES = np.linspace(-2.4, 2.4, 7)
 _SEARCH_RATIOS = np.linspace(-3.0, 3.0, 7)
 
@@ -28,8 +30,8 @@ class PairGuess:
     ----------
     late, early : float
         Places of the lobes, pixels along the normal.
-    width, tail, ratio : float
-        Full width, tail over sigma, early over late brightness.
+    width : float
+        Full width, pixels.
     sense : {1, -1}
         Motion along the normal or against it.
     gain : float
@@ -44,8 +46,6 @@ class PairGuess:
     late: float
     early: float
     width: float
-    tail: float
-    ratio: float
     sense: int
     gain: float
     alone: float
@@ -70,8 +70,6 @@ class LobeFit:
         Fitted profile at the profile's offsets, counts.
     full_width : float
         Full width at half maximum with the PSF, pixels.
-    tail : float
-        Tail over sigma of the best shape.
     sense : {1, -1}
         Motion along the normal or against it.
     """
@@ -88,7 +86,6 @@ class LobeFit:
     height_early_err: float
     model: FloatArray
     full_width: float
-    tail: float
     sense: int
 
 
@@ -151,16 +148,15 @@ def search_lobes(
             ratios=ratios,
             sense=sense,
         )
-        i, j, k, n = np.unravel_index(np.argmax(table.log_p), table.log_p.shape)
+        best = np.unravel_index(np.argmax(table.log_p), table.log_p.shape)
+        i, j, k, _ = best
         guesses.append(
             PairGuess(
                 late=float(late[j]),
                 early=float(early[k]),
                 width=float(table.widths[i]),
-                tail=float(table.tails[i]),
-                ratio=float(ratios[n]),
                 sense=sense,
-                gain=float(table.log_p[i, j, k, n]),
+                gain=float(table.log_p[best]),
                 alone=float(alone.max()),
                 log_evidence=float(
                     np.logaddexp(_log_mean(alone), _log_mean(table.log_p))
@@ -170,9 +166,7 @@ def search_lobes(
     return guesses[0], guesses[1]
 
 
-def fit_pair(
-    profile: Profile, prior: LobePrior, guess: PairGuess, *, rounds: int = 2
-) -> LobeFit:
+def fit_pair(profile: Profile, prior: LobePrior, guess: PairGuess) -> LobeFit:
     """Integrate the probability of two lobes around a guess.
 
     The grid is laid about the guess, then laid again about the mean and spread
@@ -186,15 +180,12 @@ def fit_pair(
         What is known beforehand.
     guess : PairGuess
         Where to begin.
-    rounds : int
-        How often the grid is laid.
     """
     reach = 0.6 * guess.width + 1.0
     late, early = (guess.late, reach), (guess.early, reach)
     width, spread = guess.width, 0.7
     tails: tuple[float, ...] = TAILS
-    for number in range(rounds):
-        n = 13
+    for number in range(_ROUNDS):
         shapes = [
             (width * np.exp(spread * step), tail)
             for step in np.linspace(-1.0, 1.0, 7)
@@ -203,14 +194,14 @@ def fit_pair(
         table = two_lobe_table(
             profile,
             prior,
-            late=late[0] + late[1] * np.linspace(-1.0, 1.0, n),
-            early=early[0] + early[1] * np.linspace(-1.0, 1.0, n),
+            late=late[0] + late[1] * _NODES,
+            early=early[0] + early[1] * _NODES,
             shapes=shapes,
             ratios=np.exp(prior.ratio_scatter * _RATIO_NODES),
             sense=guess.sense,
         )
         weight = np.exp(table.log_p - table.log_p.max())
-        if number + 1 < rounds:
+        if number + 1 < _ROUNDS:
             late = _next_range(table.late, weight.sum(axis=(0, 2, 3)), late[1] / 6.0)
             early = _next_range(table.early, weight.sum(axis=(0, 1, 3)), early[1] / 6.0)
             by_shape = weight.sum(axis=(1, 2, 3))
@@ -266,7 +257,6 @@ def _summary(
         height_early_err=early_err,
         model=model,
         full_width=float(np.average(table.widths, weights=by_shape)),
-        tail=float(table.tails[i]),
         sense=table.sense,
     )
 
@@ -296,6 +286,11 @@ def fit_one_lobe(
         Motion along the normal or against it.
     tails : sequence of float
         Tails over sigma to try.
+
+    Raises
+    ------
+    ValueError
+        If nothing of that sign is there.
     """
     places = np.linspace(-1.0, 1.0, 17) * (0.5 * width + 1.0)
     shapes = [
@@ -306,6 +301,12 @@ def fit_one_lobe(
     log_p, amplitude = one_lobe_table(
         profile, prior, places=places, shapes=shapes, sign=sign, sense=sense
     )
+    if not np.isfinite(log_p).any():
+        msg = (
+            "the arc must be a ridge of the sign it is said to have, got a profile "
+            "without one"
+        )
+        raise ValueError(msg)
     weight = np.exp(log_p - log_p.max())
     widths = np.array([w for w, _ in shapes])
     i, j = np.unravel_index(np.argmax(log_p), log_p.shape)
@@ -332,7 +333,6 @@ def fit_one_lobe(
         * amplitude[i, j]
         * shape.at(profile.offsets - places[j], shapes[i][0], sense),
         full_width=float(np.average(widths, weights=weight.sum(axis=1))),
-        tail=shapes[i][1],
         sense=sense,
     )
 

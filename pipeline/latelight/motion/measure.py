@@ -70,7 +70,8 @@ def measure_motion(
     Raises
     ------
     ValueError
-        If ``later`` is neither word, or no pixel near the arc can be used.
+        If ``later`` is neither word, too few pixels near the arc can be used, or
+        they hold no ridge.
 
     Notes
     -----
@@ -81,6 +82,10 @@ def measure_motion(
     the 16-84 % interval.  Direction: see :func:`latelight.motion.bend.measure_bend`.
     Patchy dust pulls ridges aside; ``settings.texture`` of the width is added to
     the errors for it.
+
+    An outburst with a flat maximum that outlasts the motion leaves one lobe at
+    the front and one at the back of its echo: a wide echo that moved little and a
+    narrow one that moved far look the same, and the latter is taken.
     """
     if later not in ("science", "template"):
         msg = f"later must be 'science' or 'template', got {later!r}"
