@@ -13,9 +13,18 @@ from latelight.frames.background import sky_map
 from latelight.frames.flags.bits import has_bit, set_bit
 from latelight.frames.flags.columns import find_bad_lines, find_flat_areas
 from latelight.frames.flags.cosmic_rays import find_cosmic_rays, measure_sharpness
-from latelight.frames.flags.saturation import estimate_saturation, flag_saturated
+from latelight.frames.flags.saturation import (
+    SaturatedStars,
+    estimate_saturation,
+    flag_saturated,
+)
 from latelight.frames.flags.spikes import flag_spikes
-from latelight.frames.noise import NoiseModel, noise_model, variance_plane
+from latelight.frames.noise import (
+    NoiseModel,
+    difference_sigma,
+    noise_model,
+    variance_plane,
+)
 from latelight.frames.settings import FrameSettings
 from latelight.frames.trails.find import find_trails, trail_mask
 from latelight.masks import MaskBit
@@ -117,26 +126,21 @@ def examine(
     )
     try:
         sky = sky_map(counts, mask, cell=settings.sky_cell_px)
+        bad = find_bad_lines(
+            counts,
+            sky,
+            mask,
+            sigma=difference_sigma(counts, mask),
+            n_sigma=settings.bad_column_sigma,
+        )
+        set_bit(mask, bad, MaskBit.BAD_COLUMN)
         noise = noise_model(counts, sky, mask, gain=gain, read_noise=read_noise)
     except ValueError as error:
         reason = (
             f"no noise can be measured ({error}): constant or hardly any good pixel"
         )
         raise FrameError(path, reason) from error
-    spread = float(np.sqrt(noise.sky_variance))
-    bad = find_bad_lines(
-        counts, sky, mask, sigma=spread, n_sigma=settings.bad_column_sigma
-    )
-    set_bit(mask, bad, MaskBit.BAD_COLUMN)
-    _flag_artefacts(counts, sky, mask, noise, settings)
-    flag_spikes(
-        counts,
-        sky,
-        mask,
-        stars=stars,
-        core_factor=settings.core_factor,
-        sigma=spread,
-    )
+    _flag_artefacts(counts, sky, mask, stars, noise, settings)
     _flag_edge(mask, settings.edge_px)
     filled = _filled(counts, sky, mask)
     built = variance_plane(filled, sky, noise=noise)
@@ -208,10 +212,12 @@ def _flag_artefacts(
     counts: PixelArray,
     sky: PixelArray,
     mask: MaskArray,
+    stars: SaturatedStars,
     noise: NoiseModel,
     settings: FrameSettings,
 ) -> None:
-    """Flag cosmic rays and trails in ``mask``, in place."""
+    """Flag cosmic rays, spikes and trails in ``mask``, in place."""
+    sigma = float(np.sqrt(noise.sky_variance))
     sharpness = measure_sharpness(counts, sky, mask, noise=noise)
     rays = find_cosmic_rays(
         counts,
@@ -223,11 +229,15 @@ def _flag_artefacts(
         margin=settings.cosmic_ray_margin,
     )
     set_bit(mask, rays, MaskBit.COSMIC_RAY)
+    # Before trails, for which long spikes would be taken.
+    flag_spikes(
+        counts, sky, mask, stars=stars, core_factor=settings.core_factor, sigma=sigma
+    )
     trails = find_trails(
         counts,
         sky,
         mask,
-        sigma=float(np.sqrt(noise.sky_variance)),
+        sigma=sigma,
         fwhm=sharpness.fwhm_px,
         n_sigma=settings.trail_sigma,
         min_length=settings.trail_min_length,

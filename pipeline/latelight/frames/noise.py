@@ -14,7 +14,7 @@ from latelight.frames._kernels import (
 from latelight.records import FloatArray, IntArray, MaskArray, PixelArray
 from latelight.threads import over_rows
 
-__all__ = ["NoiseModel", "noise_model", "variance_plane"]
+__all__ = ["NoiseModel", "difference_sigma", "noise_model", "variance_plane"]
 
 # Second moments are taken within CLIP sigma; a Gaussian keeps this share of its
 # variance there: 1 - 2 c phi(c) / (2 Phi(c) - 1).
@@ -170,7 +170,7 @@ def _measure(
     pixels: PixelArray, sky: PixelArray, mask: MaskArray, stride: int
 ) -> _Measured:
     """Measure the variance of second differences in bins of height."""
-    guess = _first_guess(pixels, mask)
+    guess = difference_sigma(pixels, mask)
     steps = int(6.0 * HISTOGRAM_STEPS_PER_SIGMA * 4)
     n_bins = HEIGHTS.size
     per_count = 0.0
@@ -215,8 +215,16 @@ def _measure(
     )
 
 
-def _first_guess(pixels: PixelArray, mask: MaskArray) -> float:
-    """Return a rough sigma from differences of neighbours in every third row."""
+def difference_sigma(pixels: PixelArray, mask: MaskArray) -> float:
+    """Return a rough sigma from differences of neighbours in every third row.
+
+    Good to some per cent in sparse fields, and somewhat high in crowded ones.
+
+    Raises
+    ------
+    ValueError
+        If neighbours do not differ, or none are good.
+    """
     left, right = pixels[::3, :-1], pixels[::3, 1:]
     good = (mask[::3, :-1] | mask[::3, 1:]) == 0
     steps = np.abs(right - left)[good]
@@ -291,10 +299,9 @@ def _transfer_gain(measured: _Measured, level: float, notes: list[str]) -> float
 def _plausible_gain(gain: float, level: float, sky_variance: float) -> float:
     """Lower a gain that would leave more read noise than detectors have.
 
-    Only where photons of the sky explain most of its noise, so that no sky was
-    taken off.
+    Only where the counts still hold the sky, whose photons make most of its noise.
     """
-    if not level / sky_variance < gain < 3.0 * level / sky_variance:
+    if level < 5.0 * np.sqrt(sky_variance) or gain < level / sky_variance:
         return gain
     # Read noise squared = gain^2 variance - gain level, solved for the gain.
     root = np.sqrt(level**2 + 4.0 * sky_variance * MAX_READ_NOISE**2)

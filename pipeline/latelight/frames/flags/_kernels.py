@@ -8,14 +8,11 @@ import numpy as np
 from numba import njit
 
 __all__ = [
-    "column_sums",
     "cosmic_ray_rows",
-    "flat_rows",
     "group_pixels",
     "grow_cosmic_rays",
     "mark_bleeds",
     "ray_profiles",
-    "row_sums",
     "stamp_discs",
     "star_sharpness",
 ]
@@ -62,6 +59,11 @@ def star_sharpness(
             along_y = p - 0.5 * (pixels[y - 1, x] + pixels[y + 1, x])
             rising = p - 0.5 * (pixels[y - 1, x - 1] + pixels[y + 1, x + 1])
             falling = p - 0.5 * (pixels[y - 1, x + 1] + pixels[y + 1, x - 1])
+            # Along a trail it hardly drops: a star does in every direction.
+            if min(along_x, along_y) < 0.3 * max(along_x, along_y):
+                continue
+            if min(rising, falling) < 0.3 * max(rising, falling):
+                continue
             out[n, 0] = max(along_x, along_y) / (p - base)
             out[n, 1] = max(rising, falling) / (p - base)
             n += 1
@@ -299,84 +301,6 @@ def group_pixels(ys: Any, xs: Any, shape: Any, labels: Any) -> int:
                         depth += 1
         groups += 1
     return groups
-
-
-@njit(nogil=True, cache=True)
-def column_sums(
-    pixels: Any,
-    sky: Any,
-    mask: Any,
-    sigma: float,
-    block: int,
-    sums: Any,
-    squares: Any,
-    counts: Any,
-    first: int,
-    last: int,
-) -> None:
-    """Sum each column's height above the sky, block by block of rows.
-
-    Heights are in sigma and pulled in to +-2, so that stars count for little.
-    """
-    ny, nx = pixels.shape
-    scale = 1.0 / sigma
-    for k in range(first, last):
-        for y in range(k * block, min((k + 1) * block, ny)):
-            for x in range(nx):
-                if mask[y, x] == 0:
-                    z = min(max((pixels[y, x] - sky[y, x]) * scale, -2.0), 2.0)
-                    sums[k, x] += z
-                    squares[k, x] += z * z
-                    counts[k, x] += 1.0
-
-
-@njit(nogil=True, cache=True)
-def row_sums(
-    pixels: Any,
-    sky: Any,
-    mask: Any,
-    sigma: float,
-    block: int,
-    sums: Any,
-    squares: Any,
-    counts: Any,
-    first: int,
-    last: int,
-) -> None:
-    """Sum each row's height above the sky, block by block of columns."""
-    nx = pixels.shape[1]
-    scale = 1.0 / sigma
-    for y in range(first, last):
-        for k in range(sums.shape[1]):
-            total, square, n = 0.0, 0.0, 0.0
-            for x in range(k * block, min((k + 1) * block, nx)):
-                if mask[y, x] == 0:
-                    z = min(max((pixels[y, x] - sky[y, x]) * scale, -2.0), 2.0)
-                    total += z
-                    square += z * z
-                    n += 1.0
-            sums[y, k] = total
-            squares[y, k] = square
-            counts[y, k] = n
-
-
-@njit(nogil=True, cache=True)
-def flat_rows(pixels: Any, flat: Any, first: int, last: int) -> None:
-    """Mark pixels whose four neighbours across hold exactly the same value."""
-    ny, nx = pixels.shape
-    for y in range(max(first, 1), min(last, ny - 1)):
-        for x in range(1, nx - 1):
-            p = pixels[y, x]
-            flat[y, x] = (
-                pixels[y, x - 1] == p
-                and pixels[y, x + 1] == p
-                and pixels[y - 1, x] == p
-                and pixels[y + 1, x] == p
-                and pixels[y - 1, x - 1] == p
-                and pixels[y + 1, x + 1] == p
-                and pixels[y - 1, x + 1] == p
-                and pixels[y + 1, x - 1] == p
-            )
 
 
 @njit(nogil=True, cache=True)

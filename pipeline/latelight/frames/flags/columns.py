@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 from scipy import ndimage
 
-from latelight.frames.flags._kernels import column_sums, flat_rows, row_sums
+from latelight.frames._kernels import column_sums, flat_rows, row_sums
 from latelight.records import BoolArray, FloatArray, MaskArray, PixelArray
 from latelight.threads import over_rows
 
@@ -141,7 +141,8 @@ def _dead(sums: FloatArray, squares: FloatArray, counts: FloatArray) -> BoolArra
     n = np.maximum(counts, 1.0)
     spread = np.sqrt(np.maximum(squares / n - (sums / n) ** 2, 0.0))
     usual = float(np.median(spread[enough])) if enough.any() else 0.0
-    dead: BoolArray = enough & (spread < DEAD_NOISE * usual)
+    # A bright trail along a line leaves no spread either, all heights being cut.
+    dead: BoolArray = enough & (spread < DEAD_NOISE * usual) & (sums / n < 1.0)
     return dead
 
 

@@ -40,8 +40,8 @@ QUANTILE = 0.95
 OUTLIER = 2.5
 GAP = 0.2
 # Faint neighbours of a hit are hits at this many sigma.
-GROW_SIGMA = 2.5
-GROW_PASSES = 3
+GROW_SIGMA = 1.5
+GROW_PASSES = 4
 
 
 @dataclass(frozen=True, slots=True)

@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 
 from latelight.frames.flags._kernels import group_pixels, mark_bleeds, stamp_discs
-from latelight.frames.flags.bits import has_bit, set_bit
+from latelight.frames.flags.bits import set_bit
 from latelight.masks import MaskBit
 from latelight.records import FloatArray, MaskArray, PixelArray
 
@@ -34,7 +34,7 @@ class SaturatedStars:
     y, x : float64 array, shape (n,)
         Centres, pixels.
     radius : float64 array, shape (n,)
-        Of a disc as large as the saturated area without bleeds, pixels.
+        Half the width of the saturated area across its bleed, pixels.
     """
 
     y: FloatArray
@@ -137,7 +137,7 @@ def flag_saturated(
         sky,
         sigma,
     )
-    stars = _stars(ys, xs, mask)
+    stars = _stars(ys, xs, mask.shape, not along_rows)
     stamp_discs(ys, xs, np.full(ys.size, float(rim)), int(MaskBit.SATURATED), mask)
     stamp_discs(
         np.rint(stars.y).astype(np.int64),
@@ -149,15 +149,21 @@ def flag_saturated(
     return stars
 
 
-def _stars(ys: Any, xs: Any, mask: MaskArray) -> SaturatedStars:
-    """Group saturated pixels into stars, bleeds left out."""
-    round_ones = ~has_bit(mask[ys, xs], MaskBit.BLEED)
-    ys, xs = ys[round_ones], xs[round_ones]
+def _stars(ys: Any, xs: Any, shape: tuple[int, int], upright: bool) -> SaturatedStars:
+    """Group saturated pixels into stars; their widest rows tell, not their bleeds."""
     labels = np.empty(ys.size, dtype=np.int64)
-    n = group_pixels(ys, xs, mask.shape, labels)
+    n = group_pixels(ys, xs, shape, labels)
     area = np.bincount(labels, minlength=n)
-    y = np.bincount(labels, weights=ys, minlength=n) / np.maximum(area, 1)
-    x = np.bincount(labels, weights=xs, minlength=n) / np.maximum(area, 1)
-    order = np.argsort(-area, kind="stable")
+    lines = ys if upright else xs
+    # One entry a group and line across the bleed: how many pixels it holds.
+    keys, width = np.unique(labels * max(shape) + lines, return_counts=True)
+    group = keys // max(shape)
+    widest = np.zeros(n, dtype=np.int64)
+    np.maximum.at(widest, group, width)
+    core = np.isin(labels * max(shape) + lines, keys[width >= 0.8 * widest[group]])
+    share = np.maximum(np.bincount(labels[core], minlength=n), 1)
+    y = np.bincount(labels[core], weights=ys[core], minlength=n) / share
+    x = np.bincount(labels[core], weights=xs[core], minlength=n) / share
+    order = np.argsort(-widest, kind="stable")
     order = order[area[order] >= MIN_STAR_PIXELS]
-    return SaturatedStars(y[order], x[order], np.sqrt(area[order] / np.pi))
+    return SaturatedStars(y[order], x[order], 0.5 * widest[order].astype(float))

@@ -17,7 +17,7 @@ __all__ = ["flag_spikes"]
 RAYS = 360
 MAX_STARS = 40
 MIN_RADIUS = 2.0
-REACH_PX = 120
+REACH_PX = 240
 # Spikes stand out of the mean ray by this many robust sigma, over all stars.
 N_SIGMA = 6.0
 # A spike is followed in steps this long, until its mean falls below this.
@@ -93,7 +93,7 @@ def _above_mean_ray(rays: FloatArray) -> FloatArray:
 def _spike_angles(stars: list[FloatArray]) -> IntArray:
     """Return the rays that stand out on the mean star."""
     # Each sample is pulled in, so that no single neighbour makes a spike.
-    near = REACH_PX // 3
+    near = REACH_PX // 6
     mean = np.mean([np.clip(rays[:, :near], -4.0, 4.0) for rays in stars], axis=0)
     profile = ndimage.uniform_filter1d(mean.mean(axis=1), 3, mode="wrap")
     profile -= np.median(profile)

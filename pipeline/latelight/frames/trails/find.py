@@ -38,6 +38,8 @@ CONFIRMED = 0.7
 # Width of the alternative to a trail, in PSF widths.
 WIDE = 3.0
 BRILLIANT_SIGMA = 3.0
+# Wings this high, in sigma of a pixel, would still sum up to a false arc.
+WING_SIGMA = 0.05
 MAX_HALF_WIDTH_PX = 40
 
 
@@ -328,7 +330,7 @@ def _half_width(
     # Wings are averaged over both sides and three offsets, and end in the noise.
     folded = 0.5 * (profile[MAX_HALF_WIDTH_PX:] + profile[MAX_HALF_WIDTH_PX::-1])
     smooth = np.append(ndimage.uniform_filter1d(folded, 3, mode="nearest"), -np.inf)
-    end = float(np.argmax(smooth < 1.5 * noise))
+    end = float(np.argmax(smooth < max(2.0 * noise, WING_SIGMA)))
     return min(max(end, 1.2 * fwhm) + 1.0, float(MAX_HALF_WIDTH_PX))
 
 

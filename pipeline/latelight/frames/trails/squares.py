@@ -38,7 +38,8 @@ def halved(image: PixelArray) -> PixelArray:
     """Bin an image in units of its noise 2 x 2 more, in units of the new noise."""
     ny, nx = image.shape[0] // 2, image.shape[1] // 2
     tiles = image[: 2 * ny, : 2 * nx].reshape(ny, 2, nx, 2)
-    coarse: PixelArray = 0.5 * tiles.sum(axis=(1, 3), dtype=np.float32)
+    coarse: PixelArray = tiles.sum(axis=(1, 3), dtype=np.float32)
+    coarse *= np.float32(0.5)
     return coarse
 
 
@@ -58,7 +59,8 @@ def without_stars(image: PixelArray) -> PixelArray:
     for axis in (0, 1):
         rolled = np.roll(kept, 1, axis) & np.roll(kept, -1, axis)
         kept = kept & rolled
-    work = np.where(kept, image - _local_mean(image, kept), np.float32(0.0))
+    work = image - _local_mean(image, kept)
+    work[~kept] = 0.0
     unit: PixelArray = work / max(float(work[kept].std()) if kept.any() else 1.0, 1e-6)
     return unit
 
