@@ -283,3 +283,26 @@ def test_a_file_too_large_for_the_system_is_told(small_night, tmp_path):
     assert "File too large" in run.stderr
     assert "Traceback" not in run.stderr
     assert not list((tmp_path / "o").rglob("*.part"))
+
+
+def test_a_fault_of_the_program_costs_one_pair(small_night, tmp_path, monkeypatch):
+    from latelight.night import chain
+
+    find_all = chain.find_all
+
+    def faulty(difference, matched, *, pair, **rest):
+        if pair.name == "A_2-A_1":
+            raise ZeroDivisionError("a fault of the program")
+        return find_all(difference, matched, pair=pair, **rest)
+
+    monkeypatch.setattr(chain, "find_all", faulty)
+    output = ["--output", str(tmp_path / "o")]
+    assert main(["run", str(small_night / "night.toml"), "-q", *output]) == 1
+    pairs = Table.read(tmp_path / "o" / "pairs.ecsv")
+    assert list(pairs["pair"]) == ["A_2-A_1", "B_2-B_1"]
+    assert list(pairs["status"]) == ["failed", "done"]
+    assert "unexpected ZeroDivisionError: a fault of the program" in pairs["reason"][0]
+    # What went well before stays in the row, and the log tells the rest.
+    assert pairs["noise_ratio"][0] > 0
+    log = (tmp_path / "o" / "log.jsonl").read_text()
+    assert "Traceback" in log

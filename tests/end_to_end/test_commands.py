@@ -1,11 +1,15 @@
 """The commands as a user runs them, on a small simulated night."""
 
+import fcntl
 import json
 import os
+import pty
 import shutil
 import signal
+import struct
 import subprocess
 import sys
+import termios
 import time
 
 import pytest
@@ -239,3 +243,44 @@ def test_output_to_a_closed_pipe_is_no_traceback(small_night):
     )
     os.close(write)
     assert "Traceback" not in run.stderr
+
+
+def test_a_terminal_gets_a_bar(small_night, tmp_path):
+    """Standard error is a terminal here, standard output is not."""
+    ours, theirs = pty.openpty()
+    rows_and_columns = struct.pack("HHHH", 24, 80, 0, 0)
+    fcntl.ioctl(theirs, termios.TIOCSWINSZ, rows_and_columns)
+    command = [
+        sys.executable,
+        "-m",
+        "latelight",
+        "run",
+        str(small_night / "night.toml"),
+    ]
+    command += ["--output", str(tmp_path / "o")]
+    with subprocess.Popen(
+        command, stderr=theirs, stdout=subprocess.PIPE, text=True
+    ) as run:
+        os.close(theirs)
+        shown = b""
+        while True:
+            try:
+                piece = os.read(ours, 4096)
+            except OSError:  # the other side has closed
+                break
+            if not piece:
+                break
+            shown += piece
+        said, _ = run.communicate(timeout=60)
+    os.close(ours)
+    assert run.returncode == 0
+    assert "\r" not in said
+    assert b"pairs:" in shown
+    assert b"2/2" in shown
+
+
+def test_more_talk_tells_every_stage(small_night, tmp_path, capsys):
+    output = ["--output", str(tmp_path / "o")]
+    assert main(["run", str(small_night / "night.toml"), "-vv", *output]) == 0
+    said = capsys.readouterr().err
+    assert "A_2-A_1: subtraction done (" in said
