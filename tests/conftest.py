@@ -31,10 +31,10 @@ def small_night(tmp_path_factory):
     """Write a folder of two small fields, two epochs each; do not change it.
 
     ``frames/`` holds A_1, A_2, B_1 and B_2 (``.fits``); field A has echoes of the
-    sources in ``sources.ecsv``, which ``night.toml`` names.
+    sources in ``sources.ecsv``, which ``night.toml`` names; ``truth.ecsv`` has them.
     """
     from latelight.simulation.scenes import random_pair
-    from latelight.simulation.tables import source_rows, write_table
+    from latelight.simulation.tables import echo_rows, source_rows, write_table
 
     folder = tmp_path_factory.mktemp("small_night")
     for field, seed, kind in (("A", 5, "echoes"), ("B", 6, "nuisances")):
@@ -44,6 +44,7 @@ def small_night(tmp_path_factory):
         if field == "A":
             rows = source_rows(pair.truth.sources)
             write_table(folder / "sources.ecsv", rows)
+            write_table(folder / "truth.ecsv", echo_rows(pair.truth))
     (folder / "night.toml").write_text(
         '[night]\nframes = ["frames/*.fits*"]\noutput = "night"\n'
         '[origin]\nsource_table = "sources.ecsv"\n'
