@@ -32,7 +32,7 @@ def cell_levels(
     The clipping width is measured below the median, where no star adds to it.
     """
     ny, nx = pixels.shape
-    step = max(1, cell // 22)
+    step = max(1, cell // 16)
     values = np.empty((cell // step + 1) ** 2, np.float32)
     for row in range(first, last):
         for col in range(levels.shape[1]):

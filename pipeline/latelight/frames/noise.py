@@ -23,6 +23,10 @@ CLIPPED_SHARE = 0.911257
 # Heights above the sky, in sigma: blank sky, then ever brighter.
 HEIGHTS = np.concatenate([[-1.0, 0.33], np.geomspace(3.0, 3000.0, 13)])
 MIN_PIXELS = 100
+# A clipped sigma of n pixels is good to about sqrt(3 / n) / 2.
+ENOUGH_PIXELS = 150_000
+# Differences up to 24 sigma have bins of their own.
+HISTOGRAM_STEPS = int(24 * HISTOGRAM_STEPS_PER_SIGMA)
 # Header and pixels disagree beyond this fraction of the variance.
 TOLERANCE = 0.1
 # Gains from photon transfer worse than this are not used.
@@ -106,7 +110,7 @@ def noise_model(
         If the pixels have no noise at all (a constant frame).
     """
     level = float(np.median(sky[::16, ::16]))
-    stride = 1 if gain is None else 5
+    stride = 1 if gain is None else _stride(pixels.shape)
     measured = _measure(pixels, sky, mask, stride)
     notes: list[str] = []
     if gain is None:
@@ -166,53 +170,70 @@ def variance_plane(
     return variance
 
 
+def _stride(shape: tuple[int, ...]) -> int:
+    """Return a spacing of pixels that leaves enough to know sigma to 0.5 %."""
+    return max(1, int(np.sqrt(shape[0] * shape[1] / ENOUGH_PIXELS)))
+
+
 def _measure(
     pixels: PixelArray, sky: PixelArray, mask: MaskArray, stride: int
 ) -> _Measured:
     """Measure the variance of second differences in bins of height."""
     guess = difference_sigma(pixels, mask)
-    steps = int(6.0 * HISTOGRAM_STEPS_PER_SIGMA * 4)
-    n_bins = HEIGHTS.size
-    per_count = 0.0
-    # Twice: the veto on structure needs a slope, and the first comes without.
-    for _ in range(2):
-        counts = np.zeros((n_bins, steps), dtype=np.int64)
-        squares = np.zeros((n_bins, steps))
-        heights = np.zeros(n_bins)
-        difference_histogram(
-            pixels,
-            sky,
-            mask,
-            guess,
-            per_count,
-            HEIGHTS,
-            stride,
-            counts,
-            squares,
-            heights,
-        )
-        found = [_clipped_variance(counts[k], squares[k]) for k in range(n_bins)]
-        variances = np.array([value for value, _ in found]) * guess**2
-        totals = np.array([float(total) for _, total in found])
-        if per_count > 0.0 or stride > 1:
-            break
-        enough = totals[1:-1] >= MIN_PIXELS
-        if not enough.any():
-            break
-        first = 1 + int(np.argmax(enough))
-        mean_height = heights[first] / totals[first]
-        per_count = max(float(variances[first] - variances[0]), 0.0) / mean_height
-        per_count = max(per_count, 1e-6 * guess)
-    if totals[0] < MIN_PIXELS or not variances[0] > 0.0:
+    # Twice: the veto on structure needs a slope, and the first one comes without.
+    heights, variances, counts = _binned_variances(
+        pixels, sky, mask, 2 * stride, guess, 0.0
+    )
+    bright = np.flatnonzero(counts[1:-1] >= MIN_PIXELS) + 1
+    slope = 0.0
+    if bright.size and counts[0] >= MIN_PIXELS:
+        first = int(bright[0])
+        rise = float(variances[first] - variances[0])
+        slope = max(rise, 0.0) / float(heights[first])
+    heights, variances, counts = _binned_variances(
+        pixels, sky, mask, stride, guess, slope
+    )
+    if counts[0] < MIN_PIXELS or not variances[0] > 0.0:
         msg = "the blank sky has no noise"
         raise ValueError(msg)
     return _Measured(
         sky_variance=float(variances[0]),
-        wide_variance=float(variances[-1]) if totals[-1] >= MIN_PIXELS else np.nan,
-        heights=heights[1:-1] / np.maximum(totals[1:-1], 1.0),
+        wide_variance=float(variances[-1]) if counts[-1] >= MIN_PIXELS else np.nan,
+        heights=heights[1:-1],
         variances=variances[1:-1],
-        counts=totals[1:-1],
+        counts=counts[1:-1],
     )
+
+
+def _binned_variances(
+    pixels: PixelArray,
+    sky: PixelArray,
+    mask: MaskArray,
+    stride: int,
+    sigma: float,
+    per_count: float,
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return mean height, clipped variance and number of pixels of each bin."""
+    n_bins = HEIGHTS.size
+    counts = np.zeros((n_bins, HISTOGRAM_STEPS), dtype=np.int64)
+    squares = np.zeros((n_bins, HISTOGRAM_STEPS))
+    heights = np.zeros(n_bins)
+    difference_histogram(
+        pixels,
+        sky,
+        mask,
+        sigma,
+        per_count,
+        HEIGHTS,
+        stride,
+        counts,
+        squares,
+        heights,
+    )
+    found = [_clipped_variance(counts[k], squares[k]) for k in range(n_bins)]
+    variances = np.array([value for value, _ in found]) * sigma**2
+    used = np.array([float(total) for _, total in found])
+    return heights / np.maximum(counts.sum(axis=1), 1), variances, used
 
 
 def difference_sigma(pixels: PixelArray, mask: MaskArray) -> float:
