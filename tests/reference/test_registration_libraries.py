@@ -74,6 +74,8 @@ def test_jacobian_is_the_ratio_of_pixel_areas(pair):
 def test_no_map_without_wcs_or_inverse(pair):
     assert wcs_map(None, pair[1], shape=SHAPE) is None
     assert wcs_map(pair[0], None, shape=SHAPE) is None
+    other_side_of_the_sky = sip_wcs(ra=30.0, dec=-54.0)
+    assert wcs_map(pair[0], other_side_of_the_sky, shape=SHAPE) is None
 
 
 def test_values_agree_with_reproject_bicubic(pair, star_plane, rng):

@@ -173,6 +173,21 @@ def test_a_perfect_wcs_leaves_a_shift_to_fit(rng):
     assert map_error(alignment, move) < 3 * ERROR_PX * np.sqrt(2 / 250) * np.sqrt(3)
 
 
+def test_frames_that_overlap_by_a_third_align(rng):
+    x, y, flux = sky(rng)
+    # 400 rows of 0.4 arcsec.
+    wcs = (tan_wcs(), tan_wcs(dec=-30.0 + 400 * 0.4 / 3600.0))
+
+    def move(x, y):
+        return wcs[1].all_world2pix(*wcs[0].all_pix2world(x, y, 0), 0)
+
+    alignment = run(
+        star_list(x, y, flux, rng), star_list(*move(x, y), flux, rng), wcs=wcs
+    )
+    assert alignment.method == "wcs"
+    assert map_error(alignment, move) < 0.02
+
+
 def test_swapping_the_frames_inverts_the_map(rng):
     x, y, flux = sky(rng)
 

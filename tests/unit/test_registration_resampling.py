@@ -60,16 +60,17 @@ def lanczos(lobes):
 @pytest.mark.parametrize(("name", "lobes"), [("lanczos3", 3), ("lanczos4", 4)])
 def test_values_and_variance_are_those_of_the_formula(rng, name, lobes):
     plane = noise_plane(rng)
-    angle = np.radians(20.0)
-    c, s = np.cos(angle), np.sin(angle)
+    angle, scale = np.radians(20.0), 0.9
+    c, s = scale * np.cos(angle), scale * np.sin(angle)
     pixel_map = affine_map(((c, -s), (s, c)), (30.3, -11.6))
     settings = RegistrationSettings(interpolation=name)
     got = resample(plane, pixel_map, shape=SHAPE, settings=settings)
     for row, col in ((60, 70), (44, 80), (73, 55)):
         value, variance = slow_resample(plane, pixel_map, row, col, lanczos(lobes))
         # Phases are rounded to 1/8192 px at most; slopes are some sigma a pixel.
-        assert got.pixels[row, col] == pytest.approx(value, abs=6 / 8192 + 1e-4)
-        assert got.variance[row, col] == pytest.approx(variance, rel=1e-3)
+        area = scale**2
+        assert got.pixels[row, col] == pytest.approx(value * area, abs=6 / 8192 + 1e-4)
+        assert got.variance[row, col] == pytest.approx(variance * area**2, rel=1e-3)
         assert got.mask[row, col] == 0
 
 
@@ -115,6 +116,22 @@ def test_bad_pixels_flag_where_their_weight_counts(rng):
     strict = RegistrationSettings(bad_weight=0.001)
     more = resample(plane, shift, shape=SHAPE, settings=strict)
     assert (more.mask[10:-10, 10:-10] != 0).sum() > 2 * len(flagged)
+
+
+def test_flags_are_those_of_the_formula(rng):
+    plane = noise_plane(rng)
+    plane.mask[rng.random(SHAPE) < 0.02] = MaskBit.DECLARED
+    settings = RegistrationSettings(bad_weight=0.004)
+    got = resample(plane, shift_map(0.5, 0.25), shape=SHAPE, settings=settings)
+    weights = kernel_weights(settings.interpolation).astype(float)
+    share = np.abs(np.outer(weights[1024], weights[2048]))
+    share /= share.sum()
+    share[share < 1e-3] = 0.0
+    for row in range(20, 90):
+        for col in range(20, 110):
+            box = plane.mask[row - 3 : row + 5, col - 3 : col + 5] != 0
+            expected = share[box].sum() > settings.bad_weight
+            assert (got.mask[row, col] != 0) == expected, (row, col)
 
 
 def test_off_the_template_there_is_no_data_but_sky(rng):

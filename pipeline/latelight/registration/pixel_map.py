@@ -84,11 +84,12 @@ def wcs_map(
     grid = identity_map(shape)
     # Flat private copies: a shared (n, 2) input of astropy's WCS is not safe.
     sky = science_wcs.all_pix2world(grid.map_x.ravel(), grid.map_y.ravel(), 0)
-    if not np.isfinite(sky).all():
+    # The projection alone first: the far side of the sky has no place on it.
+    if not np.isfinite([*sky, *template_wcs.wcs_world2pix(*sky, 0)]).all():
         return None
     # quiet: an inverse that does not converge is told by its values below.
     x, y = template_wcs.all_world2pix(*sky, 0, quiet=True)
-    if not (np.isfinite(x).all() and np.isfinite(y).all()):
+    if not np.isfinite([x, y]).all():
         return None
     size = grid.map_x.shape
     return PixelMap(
