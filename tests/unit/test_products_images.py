@@ -261,6 +261,13 @@ def test_a_cutout_without_wcs_and_with_odd_letters_is_written(tmp_path):
         assert hdus[0].header["SOURCE"] == r"\u03b7 X"
 
 
+@pytest.mark.parametrize("length", [20, 45, 62, 66, 120])
+def test_long_names_stay_whole_in_the_header(tmp_path, length):
+    name = ("a'b" * length)[:length]
+    write_cutout(tmp_path / "cut.fits", Scene(pair=name).cut())
+    assert fits.getheader(tmp_path / "cut.fits")["PAIR"] == name
+
+
 def test_files_are_the_same_each_time(tmp_path):
     for name in ("a", "b"):
         write_cutout(tmp_path / f"{name}.fits", Scene().cut())

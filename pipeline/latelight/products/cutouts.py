@@ -239,11 +239,15 @@ def mask_cards() -> list[tuple[str, str]]:
 def _card(column: Column, value: Any) -> fits.Card:
     keyword, meaning = CARDS[column.name]
     unit = f"[{column.unit}] " if column.unit else ""
+    comment = unit + meaning
     if isinstance(value, str):
         value = ascii_text(value)
+        # A card is 80 letters: a long name leaves no room for words about it.
+        taken = len("KEYWORD = '' / ") + len(value.replace("'", "''"))
+        comment = comment if taken + len(comment) <= 80 else ""
     elif value is not None and column.format:
         value = float(format(float(value), column.format))
-    return fits.Card(keyword, value, unit + meaning)
+    return fits.Card(keyword, value, comment)
 
 
 def _window(
