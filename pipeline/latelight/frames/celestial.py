@@ -16,9 +16,14 @@ __all__ = ["checked_wcs", "footprint"]
 
 ROUND_TRIP_PX = 0.01
 GRID_NODES = 7
+# Of the SIP convention (Shupe et al. 2005, ASP Conf. Ser. 347, 491).
+MAX_SIP_ORDER = 9
 # Axes that say nothing of the sky: plain pixels.
 PIXEL_AXES = frozenset({"", "LINEAR", "PIXEL"})
 SIP_WORD = re.compile(r"[AB]_\d+_\d+|[AB]_ORDER")
+NUMBER_WORD = re.compile(
+    r"CR(?:VAL|PIX)[12]|CDELT[12]|CD[12]_[12]|PC[12]_[12]|" + SIP_WORD.pattern
+)
 # PVi_0 to PVi_4 of the longitude axis tell the projection's native pole
 # (Calabretta & Greisen 2002, A&A 395, 1077, section 2.5); the rest distorts.
 DISTORTING_PV = re.compile(r"PV1_(?:[5-9]|\d\d)|PV2_\d+")
@@ -59,10 +64,12 @@ def checked_wcs(
         except FrameError:
             raise
         except Exception as error:
-            text = str(error).strip().splitlines()
+            text = (str(error).strip().splitlines() or [""])[-1]
+            if "Singular" in type(error).__name__:
+                text = "the CD matrix is singular"
             reason = (
-                f"broken WCS ({type(error).__name__}: {text[-1] if text else ''}): "
-                "solve the frame again, or remove its WCS words"
+                f"broken WCS ({type(error).__name__}: {text}): solve the frame again, "
+                "or remove its WCS words"
             )
             raise FrameError(path, reason) from error
 
@@ -89,6 +96,7 @@ def _checked(
     if all(axis in PIXEL_AXES for axis in types):
         return None, (_no_wcs_note(headers),)
     _refuse_axes(path, types)
+    _refuse_text(path, header)
     _refuse_distortions(path, header, types)
     notes = _refuse_system(path, headers)
     # Imported here because it takes longer than reading a frame does.
@@ -120,9 +128,27 @@ def _refuse_axes(path: Path, types: list[str]) -> None:
     raise FrameError(path, reason)
 
 
+def _refuse_text(path: Path, header: Any) -> None:
+    """Refuse words that must be numbers and are not: they would count as zero."""
+    for word in header:
+        if NUMBER_WORD.fullmatch(word) and not isinstance(header[word], int | float):
+            reason = (
+                f"broken WCS: {word} must be a number, got {header[word]!r}: solve the "
+                "frame again"
+            )
+            raise FrameError(path, reason)
+
+
 def _refuse_distortions(path: Path, header: Any, types: list[str]) -> None:
     """Refuse distortions that one reader would apply and another would not."""
     words = list(header)
+    for word in ("A_ORDER", "B_ORDER", "AP_ORDER", "BP_ORDER"):
+        if word in header and not 0 <= header[word] <= MAX_SIP_ORDER:
+            reason = (
+                f"broken WCS: {word} must be 0 to {MAX_SIP_ORDER}, got "
+                f"{header[word]!r}: solve the frame again"
+            )
+            raise FrameError(path, reason)
     has_sip = any(SIP_WORD.fullmatch(word) for word in words)
     says_sip = [axis.endswith("-SIP") for axis in types]
     if has_sip and not all(says_sip):

@@ -87,7 +87,11 @@ def open_fits(path: Path) -> Iterator[Any]:
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")
         try:
-            with fits.open(path, memmap=False, do_not_scale_image_data=True) as file:
+            # Opened here, as the library leaves a file open that it gives up on.
+            with (
+                path.open("rb") as stream,
+                fits.open(stream, memmap=False, do_not_scale_image_data=True) as file,
+            ):
                 yield file
         except FrameError:
             raise
