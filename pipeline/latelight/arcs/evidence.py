@@ -47,11 +47,11 @@ class Evidence:
     fwhm_px, lobe_width_px : float
         Full widths at half maximum of the PSF and of a lobe, pixels.
     block_snr : float64 array, shape (n,)
-        Significance of each block of the best stretch.
+        Significance of each block along the ridge.
     trimmed_snr : float
-        Significance without the best sixth of the arc, at least two blocks.
+        Significance without the best sixth of the ridge, at least two blocks.
     filled : float
-        Fraction of the length that takes part in the signal.
+        Fraction of the best stretch that takes part in the signal.
     away_share : float
         Height of the ridge away from bright stars over its height everywhere.
     masked : float
@@ -123,22 +123,21 @@ def gather(
         difference, fit, half_height, max(-fit.first, fit.last)
     )
     block_snr = matched / np.sqrt(np.maximum(power, 1e-30)) / noise_ratio
-    whole = block_snr[(along > fit.first) & (along < fit.last)]
+    whole = (along > fit.first) & (along < fit.last)
     core = np.abs(along) < fit.half_length
-    matched, power, block_snr = matched[core], power[core], block_snr[core]
     sums = sum_along(difference, fit.circle, fit.half_length, half_height)
     return Evidence(
         difference=difference,
         fit=fit,
-        snr=_uneven(pair_snr, block_snr, whole),
+        snr=_uneven(pair_snr, block_snr[core], block_snr[whole]),
         pair_snr=pair_snr,
         single_snr=single_snr,
         noise_ratio=noise_ratio,
         fwhm_px=difference.fwhm_px,
         lobe_width_px=lobe_width(fit.pair.sigma_px, fit.pair.tail_px),
-        block_snr=block_snr,
-        trimmed_snr=_trimmed(matched, power) / noise_ratio,
-        filled=filled(matched, power),
+        block_snr=block_snr[whole],
+        trimmed_snr=_trimmed(matched[whole], power[whole]) / noise_ratio,
+        filled=filled(matched[core], power[core]),
         away_share=_away(difference, fit, half_height, stars),
         masked=_masked(sums, fit.pair),
         settings=settings,

@@ -25,7 +25,7 @@ class ArcSettings(StageSettings):
         description="Least response of the coarse filters worth a closer look [sigma].",
     )
     shortest_px: float = Field(
-        32.0,
+        45.0,
         ge=16.0,
         le=1000.0,
         description="Least length of an arc [pixels].",

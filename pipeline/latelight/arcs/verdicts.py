@@ -9,6 +9,7 @@ from typing import Literal
 import numpy as np
 
 from latelight.arcs.evidence import Evidence
+from latelight.arcs.surroundings import Ring
 
 __all__ = ["ARTEFACTS", "Artefact", "judge"]
 
@@ -20,6 +21,9 @@ _HALO_RADIUS_PX = 120.0
 
 _SPIKE_CORES = 15.0
 """A spike begins within this many radii of the star's saturated core."""
+
+_SINGLE_FACTOR = 1.4
+"""How much more significant an arc of one lobe must be: most artefacts have one."""
 
 Extent = Literal["", "line", "ring"]
 
@@ -54,17 +58,19 @@ def judge(evidence: Evidence) -> tuple[str, Extent]:
 
 def masked(evidence: Evidence) -> bool:
     """Tell whether too little of it is on good pixels to judge."""
-    return evidence.masked > 0.7
+    return evidence.masked > 0.4
 
 
 def trail(evidence: Evidence) -> bool:
-    """Tell whether a straight, single, evenly lit line goes on beyond the ends."""
-    narrow = evidence.lobe_width_px < 1.5 * evidence.fwhm_px
-    if not (narrow or _alone(evidence)):
-        return False
+    """Tell whether a straight, evenly lit line goes on beyond the ends."""
     line = evidence.line()
-    long = line.length_px > evidence.settings.longest_px or line.to_edges
-    return long and line.beyond_snr > 4.0 and line.filled > 0.6
+    longest = evidence.settings.longest_px
+    if line.length_px > 2.0 * longest and line.beyond_snr > 8.0 and line.filled > 0.8:
+        return True
+    narrow = evidence.lobe_width_px < 1.5 * evidence.fwhm_px
+    long = line.length_px > longest or line.to_edges
+    lit = line.beyond_snr > 4.0 and line.filled > 0.6
+    return (narrow or _alone(evidence)) and long and lit
 
 
 def spike(evidence: Evidence) -> bool:
@@ -93,7 +99,7 @@ def halo(evidence: Evidence) -> bool:
     could = square & (np.abs(u) < _HALO_RADIUS_PX) & (light < _HALO_SHARE * stars.flux)
     for x, y in zip(stars.x[could].tolist(), stars.y[could].tolist(), strict=True):
         found = evidence.ring_about(x, y)
-        if found.lit >= found.dark and found.snr > 3.0 and found.share > 0.2:
+        if _goes_round(found) and found.snr > 2.5 and found.share > 0.15:
             return True
     return False
 
@@ -101,7 +107,7 @@ def halo(evidence: Evidence) -> bool:
 def ring(evidence: Evidence) -> bool:
     """Tell whether the rest of a circle through it shines too."""
     found = evidence.ring()
-    return found.lit >= found.dark and found.snr > 3.5 and found.share > 0.35
+    return _goes_round(found) and found.snr > 3.5 and found.share > 0.35
 
 
 def residue(evidence: Evidence) -> bool:
@@ -127,8 +133,19 @@ def curled(evidence: Evidence) -> bool:
 
 
 def lump(evidence: Evidence) -> bool:
-    """Tell whether most of the signal comes from one short piece."""
-    return evidence.trimmed_snr < 0.45 * evidence.pair_snr
+    """Tell whether most of the signal comes from one short piece.
+
+    The rest may be enough for an arc with a bright knot, but not a source's wings.
+    """
+    share = evidence.trimmed_snr / evidence.pair_snr
+    enough = evidence.trimmed_snr > evidence.settings.threshold
+    return share < (0.25 if enough else 0.45)
+
+
+def single(evidence: Evidence) -> bool:
+    """Tell whether it shows one lobe only and is not strong enough for that."""
+    weak = evidence.snr < _SINGLE_FACTOR * evidence.settings.threshold
+    return weak and not evidence.two_lobed
 
 
 def patches(evidence: Evidence) -> bool:
@@ -147,6 +164,11 @@ def wide(evidence: Evidence) -> bool:
     return evidence.lobe_width_px > evidence.settings.widest_px
 
 
+def _goes_round(found: Ring) -> bool:
+    """Tell whether more sectors of a circle shine than not, of those with data."""
+    return found.lit > found.dark or found.dark == 0
+
+
 def _alone(evidence: Evidence) -> bool:
     """Tell whether one lobe says nearly all: four fifths of the chi-square."""
     return evidence.single_snr**2 > 0.8 * evidence.pair_snr**2
@@ -159,8 +181,8 @@ def _height(evidence: Evidence) -> float:
 
 
 ARTEFACTS = (
-    Artefact("masked: most of it lies on bad pixels", masked),
     Artefact("trail: a straight line longer than any arc", trail, "line"),
+    Artefact("masked: too much of it lies on bad pixels", masked),
     Artefact("spike: points at a bright star", spike),
     Artefact("halo: concentric with a bright star", halo),
     Artefact("residue: its light lies close to bright stars", residue),
@@ -169,6 +191,7 @@ ARTEFACTS = (
     Artefact("wide: wider than any echo", wide),
     Artefact("stub: too short, or hardly longer than wide", stubby),
     Artefact("lump: most of the signal comes from a short piece", lump),
+    Artefact("single: one lobe only, and faint", single),
     Artefact("patches: most of its length does not shine", patches),
     Artefact("ring: the circle goes on, as a ghost or halo does", ring, "ring"),
 )
