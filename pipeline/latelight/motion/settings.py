@@ -44,9 +44,17 @@ class MotionSettings(StageSettings):
         description="How far patchy dust pulls the ridge of an echo to one side, "
         "1 sigma as a fraction of its width.",
     )
+    relief_px: float = Field(
+        0.25,
+        ge=0.0,
+        le=10.0,
+        description="How far hills of a dust sheet push an echo's front to and fro, "
+        "1 sigma; it bends the front but leaves the shift alone [pixel].",
+    )
     texture_length_px: float = Field(
         40.0,
         gt=0.0,
         le=1000.0,
-        description="Length along an arc over which that pull stays the same [pixel].",
+        description="Length along an arc over which texture and relief stay the same "
+        "[pixel].",
     )
