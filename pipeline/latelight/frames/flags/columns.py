@@ -24,7 +24,7 @@ SHARP = 0.4
 DEAD_NOISE = 0.15
 # A Gaussian cut at 2 sigma keeps this much of its standard deviation.
 CUT_SIGMA = 0.95
-MAJORITY = 0.6
+MAJORITY = 0.8
 # Dark or bright bands along an edge: the mean of their lines is this far off.
 EDGE_SIGMA = 0.7
 MIN_FLAT_PIXELS = 25
