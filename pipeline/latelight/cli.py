@@ -16,6 +16,7 @@ from typing import TYPE_CHECKING, Any
 
 import latelight
 from latelight.errors import LatelightError, ProductError, SettingsError
+from latelight.threads import quiet_libraries
 
 if TYPE_CHECKING:
     from latelight.config import NightConfig
@@ -42,6 +43,7 @@ def main(argv: Sequence[str] | None = None) -> int:
         Arguments; those of the process by default.
     """
     arguments = _parser().parse_args(argv)
+    quiet_libraries()
     _talk(arguments.verbose)
     try:
         return int(arguments.command(arguments))

@@ -10,7 +10,14 @@ import os
 from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
 
-__all__ = ["n_threads", "over_rows", "set_threads"]
+__all__ = ["n_threads", "over_rows", "quiet_libraries", "set_threads"]
+
+_LIBRARY_VARIABLES = (
+    "OMP_NUM_THREADS",
+    "OPENBLAS_NUM_THREADS",
+    "MKL_NUM_THREADS",
+    "NUMBA_NUM_THREADS",
+)
 
 _threads = max(1, os.cpu_count() or 1)
 
@@ -33,6 +40,16 @@ def set_threads(count: int) -> None:
         msg = f"count must be at least 1, got {count}"
         raise ValueError(msg)
     _threads = count
+
+
+def quiet_libraries() -> None:
+    """Keep linear algebra and compiled loops to one thread; call before numpy loads.
+
+    Their sums depend in the last digit on how many threads share them, and theirs
+    would come on top of ours.
+    """
+    for variable in _LIBRARY_VARIABLES:
+        os.environ[variable] = "1"
 
 
 def n_threads() -> int:

@@ -1,5 +1,7 @@
 """Blocks of rows cover every row once, whatever the number of threads."""
 
+import os
+
 import numpy as np
 import pytest
 
@@ -40,3 +42,11 @@ def test_a_failing_block_is_not_swallowed(keep_threads):
 def test_count_below_one_is_refused(keep_threads):
     with pytest.raises(ValueError, match="count must be at least 1, got 0"):
         threads.set_threads(0)
+
+
+def test_libraries_are_kept_to_one_thread(monkeypatch):
+    for variable in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS"):
+        monkeypatch.setenv(variable, "8")
+    monkeypatch.setenv("NUMBA_NUM_THREADS", "8")
+    threads.quiet_libraries()
+    assert os.environ["OPENBLAS_NUM_THREADS"] == os.environ["OMP_NUM_THREADS"] == "1"

@@ -16,19 +16,12 @@ from concurrent.futures.process import BrokenProcessPool
 from dataclasses import dataclass
 from typing import TypeVar
 
-from latelight.threads import set_threads
+from latelight.threads import quiet_libraries, set_threads
 
 __all__ = ["Lost", "run_tasks"]
 
 Task = TypeVar("Task")
 Result = TypeVar("Result")
-
-_THREAD_VARIABLES = (
-    "OMP_NUM_THREADS",
-    "OPENBLAS_NUM_THREADS",
-    "MKL_NUM_THREADS",
-    "NUMBA_NUM_THREADS",
-)
 
 
 @dataclass(frozen=True, slots=True)
@@ -154,6 +147,5 @@ class _Pool(ProcessPoolExecutor):
 def _limit_worker(threads: int) -> None:
     """Set a worker's share of the machine, and leave interrupts to the driver."""
     signal.signal(signal.SIGINT, signal.SIG_IGN)
-    for variable in _THREAD_VARIABLES:
-        os.environ[variable] = str(threads)
+    quiet_libraries()
     set_threads(threads)
