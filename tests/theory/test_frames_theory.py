@@ -64,6 +64,19 @@ def test_weights_do_not_follow_the_noise(rng):
     assert abs(mean - level) < 0.05
 
 
+def test_weights_do_not_follow_the_noise_of_faint_light(rng):
+    """The same on faint smooth light, about one sigma of the sky high."""
+    level, gain, read_noise, light = 30.0, 2.0, 2.0, 4.0
+    pixels, _ = frame(rng, level=level + light, gain=gain, read_noise=read_noise)
+    sky = np.full((N, N), level, np.float32)
+    noise = NoiseModel(level, level / gain + 1.0, gain, read_noise, ())
+    weight = 1.0 / variance_plane(pixels, sky, noise=noise).astype(float)
+    mean = np.sum(weight * pixels) / np.sum(weight)
+    # Its own counts would cost 0.5; of nine they are a quarter, the 2 sigma cut
+    # below which none count adds to it.
+    assert abs(mean - level - light) < 0.25
+
+
 def test_bright_light_has_its_photon_noise(rng):
     """On a halo too the squared residual over the variance averages to one (2 %)."""
     light = halo(5000.0)

@@ -264,6 +264,14 @@ class TestTrails:
         trail = flagged(look(expose(rng, light + 0.45 * SIGMA * shape)), MaskBit.TRAIL)
         assert trail[across < 2.0].mean() > 0.9
 
+    def test_a_chain_of_stars_is_none(self, rng):
+        light, _, _ = stars(rng, 512, fwhm=4.0, count=100)
+        yy, xx = np.mgrid[:512, :512]
+        for place in np.linspace(20, 490, 24):
+            distance = (yy - 0.5 * place - 100) ** 2 + (xx - place) ** 2
+            light += 40 * SIGMA * np.exp(-0.5 * distance / 2.9)
+        assert not flagged(look(expose(rng, light)), MaskBit.TRAIL).any()
+
     def test_none_in_a_field_of_stars(self, rng):
         light, _, _ = stars(rng, 512, fwhm=4.0, count=1000)
         assert not flagged(look(expose(rng, light)), MaskBit.TRAIL).any()
@@ -282,12 +290,14 @@ class TestTrails:
         assert not flagged(look(expose(rng, light)), MaskBit.TRAIL).any()
 
 
-def test_spikes_of_saturated_stars(rng):
+@pytest.mark.parametrize("place", [150, 20])
+def test_spikes_of_saturated_stars(rng, place):
+    """Also of stars near the edge, half of whose spikes lie outside."""
     n = 512
     light, _, _ = stars(rng, n, fwhm=4.0, count=200, brightest=1e4)
     yy, xx = np.mgrid[:n, :n]
     on_spike = np.zeros((n, n), dtype=bool)
-    for cy, cx in ((150, 160), (350, 300)):
+    for cy, cx in ((place, 160), (n - 1 - place, 300)):
         distance = np.hypot(yy - cy, xx - cx)
         light += 3e5 * (1 + distance**2 / 9.0) ** -2.5
         for angle in (np.pi / 4, 3 * np.pi / 4):

@@ -20,9 +20,11 @@ MIN_RADIUS = 2.0
 REACH_PX = 240
 # Spikes stand out of the mean ray by this many robust sigma, over all stars.
 N_SIGMA = 6.0
+# A ray with fewer samples than this tells nothing.
+MIN_SAMPLES = 10
 # A spike is followed in steps this long, until its mean falls below this.
 STEP_PX = 8
-END_SIGMA = 1.0
+END_SIGMA = 0.5
 HALF_WIDTH_PX = 2.5
 
 
@@ -83,31 +85,39 @@ def flag_spikes(
 
 
 def _above_mean_ray(rays: FloatArray) -> FloatArray:
-    """Take the median over all angles off each radius; masked samples become 0."""
+    """Take the median over all angles off each radius; NaN where masked."""
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", RuntimeWarning)
         middle = np.nanmedian(rays, axis=0)
-    return np.nan_to_num(rays - middle[None, :])
+    above: FloatArray = rays - middle[None, :]
+    return above
 
 
 def _spike_angles(stars: list[FloatArray]) -> IntArray:
     """Return the rays that stand out on the mean star."""
-    # Each sample is pulled in, so that no single neighbour makes a spike.
     near = REACH_PX // 6
-    mean = np.mean([np.clip(rays[:, :near], -4.0, 4.0) for rays in stars], axis=0)
-    profile = ndimage.uniform_filter1d(mean.mean(axis=1), 3, mode="wrap")
-    profile -= np.median(profile)
+    inner = np.concatenate([rays[:, :near] for rays in stars], axis=1)
+    # Each sample is pulled in, so that no single neighbour makes a spike.
+    seen = np.isfinite(inner)
+    total = np.where(seen, np.clip(inner, -4.0, 4.0), 0.0).sum(axis=1)
+    profile = total / np.maximum(seen.sum(axis=1), 1)
+    known = seen.sum(axis=1) >= MIN_SAMPLES
+    profile = ndimage.uniform_filter1d(profile, 3, mode="wrap")
+    profile -= np.median(profile[known]) if known.any() else 0.0
     scatter = 1.4826 * float(np.median(np.abs(profile)))
-    # A spike is a peak with one like it on the other side of the star.
-    peak = profile == ndimage.maximum_filter1d(profile, 15, mode="wrap")
-    opposite = np.roll(ndimage.maximum_filter1d(profile, 5, mode="wrap"), RAYS // 2)
     limit = N_SIGMA * max(scatter, 0.05)
-    return np.flatnonzero(peak & (profile > limit) & (opposite > 0.5 * limit))
+    # A spike is a peak with one like it on the other side, if that is in the frame.
+    peak = profile == ndimage.maximum_filter1d(profile, 15, mode="wrap")
+    beyond = ndimage.maximum_filter1d(profile, 5, mode="wrap") > 0.5 * limit
+    return np.flatnonzero(
+        known & peak & (profile > limit) & np.roll(beyond | ~known, RAYS // 2)
+    )
 
 
 def _length(rays: FloatArray, angle: int) -> int:
     """Return how far a spike can be followed on one star, pixels."""
-    beside = rays[[(angle - 1) % RAYS, angle, (angle + 1) % RAYS]].max(axis=0)
+    rays = np.nan_to_num(rays[[(angle - 1) % RAYS, angle, (angle + 1) % RAYS]])
+    beside = rays.max(axis=0)
     steps = beside[: REACH_PX // STEP_PX * STEP_PX].reshape(-1, STEP_PX).mean(axis=1)
     # The largest of three noisy samples averages 0.85 sigma on its own.
     seen = steps - 0.85 > END_SIGMA

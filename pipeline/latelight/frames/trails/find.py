@@ -32,7 +32,7 @@ BRIGHT_SIGMA = 10.0
 # of PIECES pieces not far below.
 EVEN_MEDIAN = 0.6
 PIECES = 8
-EVEN = 0.35
+EVEN = 0.5
 # The unbinned profile across must show this share of the sum's significance.
 CONFIRMED = 0.7
 # Width of the alternative to a trail, in PSF widths.
