@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 import sep
 
+from latelight.errors import StageError
 from latelight.mask_growth import disc, grow_mask
 from latelight.masks import MaskBit
 from latelight.matching._kernels import fill_bad
@@ -19,7 +20,7 @@ from latelight.matching.convolution import (
     kernel_sum,
 )
 from latelight.matching.fit import KernelFit, fit_kernel
-from latelight.matching.psf import gaussian_sigma, measure_psf
+from latelight.matching.psf import measure_psf
 from latelight.matching.settings import MatchingSettings
 from latelight.matching.sharpness import Roles, assign_roles
 from latelight.matching.stars import choose_stars, matched_clean, spread_over_cells
@@ -36,8 +37,11 @@ from latelight.records import (
     StarList,
 )
 from latelight.threads import over_rows
+from latelight.widths import FWHM_PER_SIGMA
 
 __all__ = ["match_pair"]
+
+_STAGE = "matching"
 
 # Disc of the fit, in FWHM of the broader PSF: a Moffat of exponent 3 has 0.1 % of
 # its light farther out.
@@ -96,7 +100,8 @@ def match_pair(
     ValueError
         If the two planes differ in shape.
     StageError
-        If there are too few common clean stars, before or after clipping.
+        If there are too few common clean stars, before or after clipping, or the
+        kernel's sum is not positive everywhere.
 
     Notes
     -----
@@ -130,25 +135,34 @@ def match_pair(
         ratio=ratio if roles.convolve_template else 1.0 / ratio,
         settings=settings,
     )
-    matched_sharp = _convolved(sharp, fit.kernel)
     total = kernel_sum(fit.kernel)
+    if not total.min() > 0:
+        msg = (
+            f"the kernel's sum falls to {total.min():.3g}, it must be positive; lower "
+            "scale_degree in [matching], or leave the pair out"
+        )
+        raise StageError(_STAGE, msg)
+    matched = _convolved(sharp, fit.kernel)
+    middle = float(fit.kernel.planes[0].sum())
     if roles.convolve_template:
-        matched_science, matched_template = broad, matched_sharp
+        scale, science_layer, template_layer = middle, broad, matched
     else:
-        matched_science = _scaled(matched_sharp, 1.0 / total)
-        matched_template = _scaled(broad, 1.0 / total)
-    science_plane, template_plane = _plane(matched_science), _plane(matched_template)
-    middle = fit.kernel.planes[:, :, :].sum(axis=(1, 2))[0]
-    scale = float(middle if roles.convolve_template else 1.0 / middle)
+        # The kernel took the science frame to template counts: bring both back.
+        scale, science_layer, template_layer = (
+            1.0 / middle,
+            _scaled(matched, 1.0 / total),
+            _scaled(broad, 1.0 / total),
+        )
+    science_plane, template_plane = _plane(science_layer), _plane(template_layer)
     return MatchedPair(
         science=science_plane,
         template=template_plane,
-        model=matched_template.light,
+        model=template_layer.light,
         convolved="template" if roles.convolve_template else "science",
         kernel=fit.kernel,
         smoothing_px=roles.smoothing_px,
         scale=scale,
-        scale_err=float(fit.sum_err / middle * scale),
+        scale_err=fit.sum_err / middle * scale,
         fwhm_px=fwhm[1],
         n_fit=int(fit.fitted.sum()),
         n_held_out=int(fit.held_out.sum()),
@@ -191,8 +205,7 @@ def _widths(science: StarList, template: StarList, roles: Roles) -> tuple[float,
     """Return the FWHM of the frame to be convolved and of the other, smoothed."""
     pair = (template.fwhm_px, science.fwhm_px)
     sharp, broad = pair if roles.convolve_template else pair[::-1]
-    smoothing = roles.smoothing_px * sharp / gaussian_sigma(sharp)
-    return sharp, float(np.hypot(broad, smoothing))
+    return sharp, float(np.hypot(broad, FWHM_PER_SIGMA * roles.smoothing_px))
 
 
 def _radius(fwhm: float) -> int:
@@ -263,7 +276,7 @@ def _fit(
     settings: MatchingSettings,
 ) -> tuple[KernelFit, IntArray]:
     """Fit the kernel; also return the (row, column) of its stars, shape (n, 2)."""
-    sigma = gaussian_sigma(fwhm[0]), gaussian_sigma(fwhm[1])
+    sigma = fwhm[0] / FWHM_PER_SIGMA, fwhm[1] / FWHM_PER_SIGMA
     basis = make_basis(sharp_sigma=sigma[0], broad_sigma=sigma[1])
     radius = _radius(fwhm[1])
     images, pad = _fit_images(

@@ -9,7 +9,7 @@ from latelight.errors import StageError
 from latelight.matching.settings import MatchingSettings
 from latelight.records import FloatArray, Plane, SpatialKernel, SpatialPsf
 from latelight.statistics import MAD_TO_SIGMA
-from latelight.widths import FWHM_PER_SIGMA, fwhm_of
+from latelight.widths import fwhm_of
 
 __all__ = ["measure_psf", "polynomial_exponents", "positions_matrix"]
 
@@ -169,8 +169,3 @@ def _shift(stamps: FloatArray, dx: FloatArray, dy: FloatArray) -> FloatArray:
     fx = fft.rfftfreq(n)[None, :]
     phase = fy * dy[:, None, None] + fx * dx[:, None, None]
     return fft.irfft2(fft.rfft2(stamps) * np.exp(2j * np.pi * phase), (n, n))
-
-
-def gaussian_sigma(fwhm: float) -> float:
-    """Return the sigma of a Gaussian of a full width at half maximum."""
-    return float(fwhm / FWHM_PER_SIGMA)

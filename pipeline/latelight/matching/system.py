@@ -122,17 +122,17 @@ def build_systems(
     weights w and variance V it is ``sum_i w_i V_i * <(K_m * n)(K_n * n)>``, known
     from the variance plane, and handed on to be removed.
     """
-    n_stars, n_basis = len(centre), len(basis.pairs)
+    n_stars, n_raw = len(centre), len(basis.pairs)
     offsets = disc_offsets(radius)
     taps = basis.taps.astype(np.float32)
     kernel_sigma = np.sqrt(max(broad_sigma**2 - sharp_sigma**2, 0.0))
     through = scale**2 * _gaussian_gain(float(kernel_sigma))
-    gram = np.zeros((n_stars, n_basis, n_basis))
-    cross = np.zeros((n_stars, n_basis))
+    gram = np.zeros((n_stars, n_raw, n_raw))
+    cross = np.zeros((n_stars, n_raw))
     total, noise, degrees = np.zeros((3, n_stars))
 
     def do_stars(first: int, last: int) -> None:
-        functions = np.empty((len(offsets), n_basis))
+        functions = np.empty((len(offsets), n_raw))
         for star in range(first, last):
             row, col = centre[star]
             filter_stamp(
@@ -185,7 +185,7 @@ def _gaussian_gain(sigma: float) -> float:
 
 def _overlaps(basis: KernelBasis, noise_power: FloatArray | None) -> FloatArray:
     """Return the covariance of unit noise seen through each pair of functions."""
-    flat = basis.images().reshape(len(basis.pairs), -1)
+    flat = basis.images().reshape(len(basis), -1)
     white = np.einsum("ip,jp->ij", flat, flat)
     if noise_power is None:
         return white

@@ -32,6 +32,9 @@ _MOST_SPREAD = 0.97
 # Where the neighbourhood is searched for the rest of a ridge, in FWHM.
 _ALONG_FWHM = (2.0, 3.0, 4.0, 5.0, 6.0)
 _N_ANGLES = 24
+# Most that an elongated PSF's wings may add there along its long axis, of the peak,
+# at the first of these distances; they fall with its cube.
+_WINGS = 0.05
 _LINE_SIGMA = 4.0
 # Share of the filter's weight that must be unmasked.
 _LEAST_WEIGHT = 0.6
@@ -243,9 +246,12 @@ def _on_a_line(
         top = _sample(seen.top, *at) * sign[:, None]
         points.append(top / np.sqrt(np.maximum(_sample(seen.bottom, *at), 1e-30)))
     # (n_peaks, n_distances, n_angles); what all directions share (the PSF's own
-    # wings) is no line.
+    # wings) is no line, nor is what an elongated PSF has of them.
     s = np.stack(points, axis=1) / width
     s -= np.median(s, axis=2, keepdims=True)
+    own = np.abs(seen.top[row, col]) / np.sqrt(seen.bottom[row, col]) / width
+    fall = _WINGS * (_ALONG_FWHM[0] / np.array(_ALONG_FWHM)) ** 3
+    s -= own[:, None, None] * fall[:, None]
     # One bright neighbour must not pass for a line: no point counts for more than 3.
     s = np.clip(s, -3.0, 3.0)
     root = np.sqrt(len(_ALONG_FWHM))
