@@ -55,16 +55,51 @@ def filter_rows(
     first: int,
     last: int,
 ) -> None:
-    """Multiply a spectrum by the Gaussian exp(-(xx kx^2 + 2 xy kx ky + yy ky^2))."""
+    """Multiply a spectrum by the Gaussian exp(-(xx kx^2 + 2 xy kx ky + yy ky^2)).
+
+    Columns are evenly spaced: along a row the Gaussian follows from two products a
+    column.  Below exp(-10) it is taken as zero.
+    """
+    n_cols = spectrum.shape[1]
+    step = kx[1] - kx[0]
+    decay = np.exp(-2.0 * xx * step * step)
     for row in range(first, last):
         v = ky[row]
-        for col in range(spectrum.shape[1]):
-            u = kx[col]
-            exponent = xx * u * u + 2.0 * xy * u * v + yy * v * v
-            if exponent < 14.0:
-                out[row, col] = spectrum[row, col] * np.float32(np.exp(-exponent))
-            else:
-                out[row, col] = 0.0
+        # Where the exponent stays below 10: a stretch of columns, if any.
+        centre = -xy * v / xx
+        least = (yy - xy * xy / xx) * v * v
+        begin = 0
+        end = 0
+        if least < 10.0:
+            reach = np.sqrt((10.0 - least) / xx)
+            begin = min(max(int(np.ceil((centre - reach) / step)), 0), n_cols)
+            end = min(max(int(np.floor((centre + reach) / step)) + 1, begin), n_cols)
+        out[row, :begin] = 0.0
+        out[row, end:] = 0.0
+        u = begin * step
+        value = np.exp(-(xx * u * u + 2.0 * xy * u * v + yy * v * v))
+        ratio = np.exp(-(xx * step * (2.0 * u + step) + 2.0 * xy * step * v))
+        for col in range(begin, end):
+            out[row, col] = spectrum[row, col] * np.float32(value)
+            value *= ratio
+            ratio *= decay
+
+
+@njit(nogil=True, cache=True)
+def keep_best(
+    best: np.ndarray,
+    code: np.ndarray,
+    value: np.ndarray,
+    here: np.ndarray,
+    least: np.float32,
+    number: int,
+) -> None:
+    """Keep the greater of two rows where there is data, and which it was."""
+    name = np.int16(number)
+    for col in range(best.size):
+        better = here[col] > least and value[col] > best[col]
+        best[col] = value[col] if better else best[col]
+        code[col] = name if better else code[col]
 
 
 @njit(nogil=True, cache=True)
@@ -91,45 +126,40 @@ def update_rows(
     """
     n_steps = steps.shape[0]
     far = n_steps - 1
+    n_cols = best.shape[1]
     flank = np.float32(overlap[n_steps])
+    least = np.float32(floor)
+    half = np.float32(0.5)
+    value = np.empty(n_cols, np.float32)
     for row in range(first, last):
         y = row + margin
+        here = power[y, margin : margin + n_cols]
         for j in range(n_steps):
             dy = steps[j, 0]
-            dx = steps[j, 1]
+            dx = steps[j, 1] + margin
+            ahead = response[y + dy, dx : dx + n_cols]
+            ahead_power = power[y + dy, dx : dx + n_cols]
+            dx = margin - steps[j, 1]
+            behind = response[y - dy, dx : dx + n_cols]
+            behind_power = power[y - dy, dx : dx + n_cols]
             rho = np.float32(2.0 * overlap[j])
             scale = np.float32(inverse[1 + j])
-            least = np.float32(floor)
-            for col in range(best.shape[1]):
-                x = col + margin
-                here = power[y, x]
-                ahead = power[y + dy, x + dx]
-                behind = power[y - dy, x - dx]
-                rise = response[y + dy, x + dx] - response[y - dy, x - dx]
-                noise = max(ahead + behind - rho * here, least)
-                value = rise * rise / noise * scale
-                if here > least and value > best[row, col]:
-                    best[row, col] = value
-                    code[row, col] = base + 1 + j
-        dy = steps[far, 0]
-        dx = steps[far, 1]
-        half = np.float32(0.5)
-        rho = np.float32(overlap[far])
-        scale = np.float32(inverse[0])
-        least = np.float32(floor)
-        for col in range(best.shape[1]):
-            x = col + margin
-            here = power[y, x]
-            sides = power[y + dy, x + dx] + power[y - dy, x - dx]
-            rise = response[y, x] - half * (
-                response[y + dy, x + dx] + response[y - dy, x - dx]
-            )
-            noise = here * (1 + half * rho - flank)
-            noise += half * sides * (half - flank)
-            value = rise * rise / max(noise, least) * scale
-            if here > least and value > best[row, col]:
-                best[row, col] = value
-                code[row, col] = base
+            for col in range(n_cols):
+                rise = ahead[col] - behind[col]
+                noise = ahead_power[col] + behind_power[col] - rho * here[col]
+                value[col] = rise * rise / max(noise, least) * scale
+            keep_best(best[row], code[row], value, here, least, base + 1 + j)
+            if j == far:
+                rho = np.float32(overlap[far])
+                scale = np.float32(inverse[0])
+                middle = response[y, margin : margin + n_cols]
+                for col in range(n_cols):
+                    sides = ahead_power[col] + behind_power[col]
+                    rise = middle[col] - half * (ahead[col] + behind[col])
+                    noise = here[col] * (1 + half * rho - flank)
+                    noise += half * sides * (half - flank)
+                    value[col] = rise * rise / max(noise, least) * scale
+                keep_best(best[row], code[row], value, here, least, base)
 
 
 @njit(nogil=True, cache=True)

@@ -61,14 +61,14 @@ def bright_stars(
 
     saturated = np.uint16(MaskBit.SATURATED | MaskBit.BLEED)
     label, n = ndimage.label(difference.mask & saturated)
-    index = np.arange(1, n + 1)
-    area = np.bincount(label.ravel(), minlength=n + 1)[1:].astype(float)
-    centre = np.array(
-        ndimage.center_of_mass(label > 0, label, index), dtype=float
-    ).reshape(-1, 2)
+    rows, cols = np.nonzero(label)
+    which = label[rows, cols] - 1
+    area = np.bincount(which, minlength=n).astype(float)
+    centre_x = np.bincount(which, weights=cols, minlength=n) / np.maximum(area, 1.0)
+    centre_y = np.bincount(which, weights=rows, minlength=n) / np.maximum(area, 1.0)
     core = np.sqrt(area / np.pi)
-    all_x = np.concatenate([x, centre[:, 1]])
-    all_y = np.concatenate([y, centre[:, 0]])
+    all_x = np.concatenate([x, centre_x])
+    all_y = np.concatenate([y, centre_y])
     all_core = np.concatenate([np.zeros(x.size), core])
     residues: MaskArray = np.zeros(difference.mask.shape, np.uint16)
     for star_x, star_y, radius in zip(all_x, all_y, all_core, strict=True):

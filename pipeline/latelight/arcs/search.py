@@ -11,6 +11,7 @@ robust width.
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -27,7 +28,10 @@ _LENGTHS = (8.0, 18.0)
 """Sigma along the ridge in units of sigma across; longer arcs lose little."""
 _STEPS = (0.75, 1.5, 2.75)
 """Half the distance between the lobes of a pair, units of sigma across."""
-_CALIBRATION_STRIDE = 5
+_CALIBRATION_POINTS = 5_000
+"""Places whose responses calibrate a filter: their median is good to 1.7 %."""
+_ROWS_WORTH_THREADS = 700
+"""Fewer rows take less time than starting the threads (0.3 ms, measured)."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -119,6 +123,14 @@ def _transform(image: PixelArray, margin: int, shape: tuple[int, int]) -> PixelA
     return fft.rfft2(padded, workers=n_threads(), overwrite_x=True)
 
 
+def _spread(kernel: Callable[[int, int], None], n_rows: int) -> None:
+    """Run a kernel over rows, in threads where starting them pays."""
+    if n_rows < _ROWS_WORTH_THREADS:
+        kernel(0, n_rows)
+    else:
+        over_rows(kernel, n_rows)
+
+
 def _filtered(
     spectrum: PixelArray, shape: tuple[int, int], ridge: _Ridge, *, squared: bool
 ) -> PixelArray:
@@ -136,7 +148,7 @@ def _filtered(
     def multiply(first: int, last: int) -> None:
         filter_rows(product, spectrum, ky, kx, xx, xy, yy, first, last)
 
-    over_rows(multiply, shape[0])
+    _spread(multiply, shape[0])
     image = fft.irfft2(product, s=shape, workers=n_threads(), overwrite_x=True)
     if squared:  # the square of the unit-sum Gaussian sums to 1 / (4 pi s l)
         image *= np.float32(1.0 / (4.0 * np.pi * ridge.length))
@@ -162,11 +174,11 @@ def _update(
     overlap = np.exp(-0.25 * (reach**2 + slip**2))
     ny, nx = best.shape
     inner = power[margin : margin + ny, margin : margin + nx]
-    sample = inner[::_CALIBRATION_STRIDE, ::_CALIBRATION_STRIDE]
-    floor = 0.1 * float(np.median(sample))
+    stride = max(1, round(np.sqrt(ny * nx / _CALIBRATION_POINTS)))
+    floor = 0.1 * float(np.median(inner[::stride, ::stride]))
     if floor <= 0.0:
         return np.ones(1 + len(_STEPS))
-    widths = _widths(response, power, margin, best.shape, steps, overlap, floor)
+    widths = _widths(response, power, margin, best.shape, steps, overlap, floor, stride)
 
     def update(first: int, last: int) -> None:
         update_rows(
@@ -184,7 +196,7 @@ def _update(
             last,
         )
 
-    over_rows(update, ny)
+    _spread(update, ny)
     return widths
 
 
@@ -196,12 +208,13 @@ def _widths(
     steps: np.ndarray,
     overlap: FloatArray,
     floor: float,
+    stride: int,
 ) -> FloatArray:
     """Return the robust sigma of each kind of response, on a sparse lattice."""
 
     def at(image: PixelArray, dy: int = 0, dx: int = 0) -> FloatArray:
-        rows = slice(margin + dy, margin + dy + shape[0], _CALIBRATION_STRIDE)
-        cols = slice(margin + dx, margin + dx + shape[1], _CALIBRATION_STRIDE)
+        rows = slice(margin + dy, margin + dy + shape[0], stride)
+        cols = slice(margin + dx, margin + dx + shape[1], stride)
         return image[rows, cols].astype(float)
 
     here, middle = at(power), at(response)

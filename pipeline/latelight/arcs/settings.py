@@ -19,7 +19,7 @@ class ArcSettings(StageSettings):
         description="Least significance of an arc, both lobes together [sigma].",
     )
     seed_threshold: float = Field(
-        4.5,
+        5.0,
         ge=3.0,
         le=100.0,
         description="Least response of the coarse filters worth a closer look [sigma].",
