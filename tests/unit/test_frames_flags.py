@@ -255,7 +255,8 @@ class TestTrails:
         )
         # Stars may cut a trail's ends off; its middle is covered, wings included.
         assert trail[across < 3.0].mean() > 0.9
-        assert not trail[across > 45.0].any()
+        # A chance line of the noise is masked in one frame of a hundred.
+        assert trail[across > 45.0].mean() < 0.02
 
     def test_faint_in_a_pixel_but_not_in_sum(self, rng):
         # 0.45 sigma along 512 pixels: matched S/N = 0.45 sqrt(512 sqrt(pi) 1.7) = 18.

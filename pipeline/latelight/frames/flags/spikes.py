@@ -20,6 +20,7 @@ MIN_RADIUS = 2.0
 REACH_PX = 240
 # Spikes stand out of the mean ray by this many robust sigma, over all stars.
 N_SIGMA = 6.0
+WINDOW = 45
 # A ray with fewer samples than this tells nothing.
 MIN_SAMPLES = 10
 # A spike is followed in steps this long, until its mean falls below this.
@@ -103,7 +104,8 @@ def _spike_angles(stars: list[FloatArray]) -> IntArray:
     profile = total / np.maximum(seen.sum(axis=1), 1)
     known = seen.sum(axis=1) >= MIN_SAMPLES
     profile = ndimage.uniform_filter1d(profile, 3, mode="wrap")
-    profile -= np.median(profile[known]) if known.any() else 0.0
+    # Spikes are narrow: lopsided haloes and neighbours are wider than WINDOW rays.
+    profile -= ndimage.median_filter(profile, size=WINDOW, mode="wrap")
     scatter = 1.4826 * float(np.median(np.abs(profile)))
     limit = N_SIGMA * max(scatter, 0.05)
     # A spike is a peak with one like it on the other side, if that is in the frame.
