@@ -91,6 +91,19 @@ def test_a_wide_blob_is_left_alone(rng):
     assert find(point(150, 150, 60000.0, sigma=4 * SIGMA), rng) == ()
 
 
+def test_the_streak_of_a_fast_mover_is_listed_and_covered(rng):
+    """Drawn out over 6 px, a FWHM and a half."""
+    streak = sum(point(150 + t, 150 + t, 900.0) for t in np.linspace(-2.1, 2.1, 9))
+
+    found = find(streak, rng)
+
+    mask = mask_compact(
+        np.zeros(SHAPE, np.uint16), found, fwhm_px=FWHM, radius_fwhm=1.5
+    )
+    assert len(found) == 1
+    assert (mask[streak > NOISE] != 0).all()
+
+
 def test_masked_places_give_nothing(rng):
     mask = np.zeros(SHAPE, np.uint16)
     mask[145:156, 145:156] = MaskBit.SATURATED

@@ -28,10 +28,10 @@ __all__ = [
 # A block of this side keeps its transforms in the processor's cache.
 _BLOCK = 256
 # Pixels whose true value is unknown and large: they spoil wherever the kernel
-# gives them a thousandth of its peak.  The others were filled from their
+# gives them some 1e-4 of its peak.  The others were filled from their
 # neighbours, so only the kernel's core matters.
 _UNKNOWN = MaskBit.SATURATED | MaskBit.BLEED | MaskBit.SPIKE
-_UNKNOWN_LIMIT = 1e-3
+_UNKNOWN_LIMIT = 2e-4
 _FILLED_LIMIT = 0.1
 
 
@@ -249,7 +249,7 @@ def convolve_mask(mask: MaskArray, kernel: SpatialKernel) -> MaskArray:
     -------
     uint16 array, shape (ny, nx)
         Every bit kept, and spread to where the kernel's weight of the bad pixel
-        exceeds 0.1 of its peak (0.001 for saturated, bled or spiked pixels, whose
+        exceeds 0.1 of its peak (0.0002 for saturated, bled or spiked pixels, whose
         true value is unknown and large); the frame's rim gets the edge bit.
     """
     ny, nx = kernel.shape
