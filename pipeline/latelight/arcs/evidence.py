@@ -80,8 +80,14 @@ class Evidence:
 
     @property
     def two_lobed(self) -> bool:
-        """The second lobe improves the fit by three sigma."""
-        return self.pair_snr**2 - self.single_snr**2 > 9.0
+        """The second lobe improves the fit by three sigma and is no mere trifle."""
+        improved = self.pair_snr**2 - self.single_snr**2 > 9.0
+        return improved and self.weaker_share > 0.2
+
+    @property
+    def shift_px(self) -> float:
+        """Distance between the lobes, pixels."""
+        return abs(self.fit.pair.positive - self.fit.pair.negative)
 
     @property
     def weaker_share(self) -> float:

@@ -43,7 +43,7 @@ class ArcSettings(StageSettings):
         description="Greatest full width of one lobe at half maximum [pixels].",
     )
     least_radius_px: float = Field(
-        200.0,
+        150.0,
         ge=30.0,
         le=10000.0,
         description="Radius of curvature below which a ridge is a ring, not an arc "

@@ -22,7 +22,7 @@ _HALO_RADIUS_PX = 120.0
 _SPIKE_CORES = 15.0
 """A spike begins within this many radii of the star's saturated core."""
 
-_SINGLE_FACTOR = 1.4
+_SINGLE_FACTOR = 2.0
 """How much more significant an arc of one lobe must be: most artefacts have one."""
 
 Extent = Literal["", "line", "ring"]
@@ -57,8 +57,12 @@ def judge(evidence: Evidence) -> tuple[str, Extent]:
 
 
 def masked(evidence: Evidence) -> bool:
-    """Tell whether too little of it is on good pixels to judge."""
-    return evidence.masked > 0.4
+    """Tell whether too little of it is on good pixels to judge.
+
+    What is left beside a trail may still be plain enough.
+    """
+    plain = evidence.snr > 1.6 * evidence.settings.threshold
+    return evidence.masked > (0.7 if plain else 0.4)
 
 
 def trail(evidence: Evidence) -> bool:
@@ -75,8 +79,7 @@ def trail(evidence: Evidence) -> bool:
 
 def spike(evidence: Evidence) -> bool:
     """Tell whether a narrow line points at a star that could cast it."""
-    pair = evidence.fit.pair
-    close = abs(pair.positive - pair.negative) < 1.2 * evidence.fwhm_px
+    close = evidence.shift_px < 1.2 * evidence.fwhm_px
     if evidence.lobe_width_px > 1.6 * evidence.fwhm_px:
         return False
     if not (close or _alone(evidence)):
@@ -117,18 +120,14 @@ def residue(evidence: Evidence) -> bool:
 
 def dipole(evidence: Evidence) -> bool:
     """Tell whether it is a PSF-wide line a fraction of the PSF out of place."""
-    pair = evidence.fit.pair
-    shift = abs(pair.positive - pair.negative)
-    return (
-        evidence.lobe_width_px < 1.3 * evidence.fwhm_px
-        and shift < 0.7 * evidence.fwhm_px
-    )
+    narrow = evidence.lobe_width_px < 1.3 * evidence.fwhm_px
+    return narrow and evidence.shift_px < 0.7 * evidence.fwhm_px
 
 
 def curled(evidence: Evidence) -> bool:
     """Tell whether its curvature is surely stronger than any arc's."""
     fit = evidence.fit
-    surely = abs(fit.bend) - 2.0 * fit.bend_err * evidence.noise_ratio
+    surely = abs(fit.bend) - fit.bend_err * evidence.noise_ratio
     return surely > 1.0 / evidence.settings.least_radius_px
 
 
@@ -146,6 +145,14 @@ def single(evidence: Evidence) -> bool:
     """Tell whether it shows one lobe only and is not strong enough for that."""
     weak = evidence.snr < _SINGLE_FACTOR * evidence.settings.threshold
     return weak and not evidence.two_lobed
+
+
+def apart(evidence: Evidence) -> bool:
+    """Tell whether the second lobe lies at the very end of the search for it."""
+    return (
+        evidence.two_lobed
+        and evidence.shift_px > evidence.settings.largest_shift_px - 1.0
+    )
 
 
 def patches(evidence: Evidence) -> bool:
@@ -192,6 +199,7 @@ ARTEFACTS = (
     Artefact("stub: too short, or hardly longer than wide", stubby),
     Artefact("lump: most of the signal comes from a short piece", lump),
     Artefact("single: one lobe only, and faint", single),
+    Artefact("apart: lobes farther apart than any echo's", apart),
     Artefact("patches: most of its length does not shine", patches),
     Artefact("ring: the circle goes on, as a ghost or halo does", ring, "ring"),
 )
