@@ -13,34 +13,7 @@ __all__ = [
     "search_bends",
     "search_lobes",
     "update_rows",
-    "weigh_rows",
 ]
-
-
-@njit(nogil=True, cache=True)
-def weigh_rows(
-    signal: np.ndarray,
-    weight: np.ndarray,
-    pixels: np.ndarray,
-    variance: np.ndarray,
-    mask: np.ndarray,
-    size: int,
-    first: int,
-    last: int,
-) -> None:
-    """Sum D/V and 1/V of the unmasked pixels in blocks of ``size`` x ``size``."""
-    for row in range(first, last):
-        for col in range(signal.shape[1]):
-            total = 0.0
-            total_weight = 0.0
-            for y in range(row * size, min((row + 1) * size, pixels.shape[0])):
-                for x in range(col * size, min((col + 1) * size, pixels.shape[1])):
-                    if mask[y, x] == 0:
-                        inverse = 1.0 / variance[y, x]
-                        total += pixels[y, x] * inverse
-                        total_weight += inverse
-            signal[row, col] = total
-            weight[row, col] = total_weight
 
 
 @njit(nogil=True, cache=True)
@@ -68,8 +41,7 @@ def filter_rows(
         # Where the exponent stays below 10: a stretch of columns, if any.
         centre = -xy * v / xx
         least = (yy - xy * xy / xx) * v * v
-        begin = 0
-        end = 0
+        begin = end = 0
         if least < 10.0:
             reach = np.sqrt((10.0 - least) / xx)
             begin = min(max(int(np.ceil((centre - reach) / step)), 0), n_cols)
@@ -124,34 +96,29 @@ def update_rows(
     sets the flanks of the single ridge.  ``inverse`` are the calibrations 1 /
     sigma^2 of the single ridge (0) and the pairs (1...).
     """
-    n_steps = steps.shape[0]
+    n_steps, n_cols = steps.shape[0], best.shape[1]
     far = n_steps - 1
-    n_cols = best.shape[1]
-    flank = np.float32(overlap[n_steps])
-    least = np.float32(floor)
+    flank, least = np.float32(overlap[n_steps]), np.float32(floor)
     half = np.float32(0.5)
     value = np.empty(n_cols, np.float32)
     for row in range(first, last):
         y = row + margin
         here = power[y, margin : margin + n_cols]
         for j in range(n_steps):
-            dy = steps[j, 0]
-            dx = steps[j, 1] + margin
+            dy, dx = steps[j, 0], margin + steps[j, 1]
             ahead = response[y + dy, dx : dx + n_cols]
             ahead_power = power[y + dy, dx : dx + n_cols]
             dx = margin - steps[j, 1]
             behind = response[y - dy, dx : dx + n_cols]
             behind_power = power[y - dy, dx : dx + n_cols]
-            rho = np.float32(2.0 * overlap[j])
-            scale = np.float32(inverse[1 + j])
+            rho, scale = np.float32(2.0 * overlap[j]), np.float32(inverse[1 + j])
             for col in range(n_cols):
                 rise = ahead[col] - behind[col]
                 noise = ahead_power[col] + behind_power[col] - rho * here[col]
                 value[col] = rise * rise / max(noise, least) * scale
             keep_best(best[row], code[row], value, here, least, base + 1 + j)
             if j == far:
-                rho = np.float32(overlap[far])
-                scale = np.float32(inverse[0])
+                rho, scale = np.float32(overlap[far]), np.float32(inverse[0])
                 middle = response[y, margin : margin + n_cols]
                 for col in range(n_cols):
                     sides = ahead_power[col] + behind_power[col]
@@ -160,6 +127,35 @@ def update_rows(
                     noise += half * sides * (half - flank)
                     value[col] = rise * rise / max(noise, least) * scale
                 keep_best(best[row], code[row], value, here, least, base)
+
+
+@njit(nogil=True, cache=True)
+def row_span(
+    dy: float, cosine: float, sine: float, reach_u: float, reach_s: float
+) -> tuple[float, float]:
+    """Return where a row crosses the strips |u| <= reach_u and |s| <= reach_s."""
+    high = abs(cosine) * reach_u + abs(sine) * reach_s
+    low = -high
+    if abs(cosine) > 1e-6:
+        middle = -dy * sine / cosine
+        low = max(low, middle - reach_u / abs(cosine))
+        high = min(high, middle + reach_u / abs(cosine))
+    if abs(sine) > 1e-6:
+        middle = dy * cosine / sine
+        low = max(low, middle - reach_s / abs(sine))
+        high = min(high, middle + reach_s / abs(sine))
+    return low, high
+
+
+@njit(nogil=True, cache=True)
+def arc_length(s: float, ahead: float, turn: float, curvature: float) -> float:
+    """Return atan2(turn, ahead) / curvature, for turn = curvature s."""
+    if abs(turn) < 0.3 * ahead:  # the series is right to 1e-6
+        t2 = (turn / ahead) ** 2
+        return s / ahead * (1.0 - t2 * (1.0 / 3.0 - t2 * (0.2 - t2 / 7.0)))
+    if abs(curvature) > 1e-9:
+        return np.arctan2(turn, ahead) / curvature
+    return s
 
 
 @njit(nogil=True, cache=True)
@@ -194,23 +190,12 @@ def polar_sums(
         reach_u = min(reach_u, 2.0 / abs(curvature))
         reach_s = min(reach_s, half_height + 1.0 / abs(curvature))
     reach_u += half_height
-    reach_x = abs(cosine) * reach_u + abs(sine) * reach_s
     reach_y = abs(sine) * reach_u + abs(cosine) * reach_s
     for y in range(
         max(int(np.floor(y0 - reach_y)), 0), min(int(np.ceil(y0 + reach_y)) + 1, ny)
     ):
         dy = y - y0
-        # Where this row crosses the strips |u| <= reach_u and |s| <= reach_s.
-        low = -reach_x
-        high = reach_x
-        if abs(cosine) > 1e-6:
-            middle = -dy * sine / cosine
-            low = max(low, middle - reach_u / abs(cosine))
-            high = min(high, middle + reach_u / abs(cosine))
-        if abs(sine) > 1e-6:
-            middle = dy * cosine / sine
-            low = max(low, middle - reach_s / abs(sine))
-            high = min(high, middle + reach_s / abs(sine))
+        low, high = row_span(dy, cosine, sine, reach_u, reach_s)
         for x in range(
             max(int(np.floor(x0 + low)), 0), min(int(np.ceil(x0 + high)) + 1, nx)
         ):
@@ -226,14 +211,7 @@ def polar_sums(
             i_across = int(np.floor(across + half_height + 0.5))
             if i_across < 0 or i_across >= n_across:
                 continue
-            along = s
-            if abs(turn) < 0.3 * ahead:  # arctan by its series, right to 1e-6
-                t = turn / ahead
-                t2 = t * t
-                series = 1.0 - t2 * (1.0 / 3.0 - t2 * (0.2 - t2 / 7.0))
-                along = s / ahead * series
-            elif abs(curvature) > 1e-9:
-                along = np.arctan2(turn, ahead) / curvature
+            along = arc_length(s, ahead, turn, curvature)
             i_block = int(np.floor((along + half_length) / block))
             if i_block < 0 or i_block >= n_blocks:
                 continue
@@ -263,9 +241,7 @@ def lobe_sums(
     for k in range(shapes.shape[0]):
         half = half_widths[k]
         for centre in range(n_across):
-            a = 0.0
-            b = 0.0
-            c = 0.0
+            a = b = c = 0.0
             for i in range(max(-half, -centre), min(half + 1, n_across - centre)):
                 e = shapes[k, middle + i]
                 we = weight[centre + i] * e
@@ -309,12 +285,8 @@ def search_lobes(
             a1 = matched[k, first] - mass[k, first] * signal_sum / weight_sum
             gain = a1 * a1 / b1
             if gain > result[1, 0]:
-                result[1, 0] = gain
-                result[1, 1] = k
-                result[1, 2] = first
-                result[1, 3] = a1 / b1
-                result[1, 4] = first
-                result[1, 5] = 0.0
+                result[1, 0], result[1, 1] = gain, k
+                result[1, 2], result[1, 3] = first, a1 / b1
             for shift in range(-n_shifts + 1, n_shifts):
                 if abs(shift) < least[k]:
                     continue
@@ -338,18 +310,14 @@ def search_lobes(
                     continue
                 gain = p1 * a1 + p2 * a2
                 if gain > result[0, 0]:
-                    result[0, 0] = gain
-                    result[0, 1] = k
-                    if p1 > 0.0:
-                        result[0, 2] = first
-                        result[0, 3] = p1
-                        result[0, 4] = second
-                        result[0, 5] = p2
-                    else:
-                        result[0, 2] = second
-                        result[0, 3] = p2
-                        result[0, 4] = first
-                        result[0, 5] = p1
+                    # The positive lobe first.
+                    one = (p1 > 0.0) == (first < second)
+                    low, high = min(first, second), max(first, second)
+                    result[0, 0], result[0, 1] = gain, k
+                    result[0, 2] = low if one else high
+                    result[0, 3] = max(p1, p2)
+                    result[0, 4] = high if one else low
+                    result[0, 5] = min(p1, p2)
 
 
 @njit(nogil=True, cache=True)
@@ -371,8 +339,7 @@ def block_matches(
     half = matched.shape[1] // 2
     for i in range(n_blocks):
         for shift in range(-half, half + 1):
-            a = 0.0
-            b = 0.0
+            a = b = 0.0
             for n in range(max(first, -shift), min(last, n_across - shift)):
                 e = template[n]
                 a += signal[i, n + shift] * e
@@ -408,8 +375,7 @@ def search_bends(
             for i in range(n_blocks):
                 shift = slope * along[i] + 0.5 * bend * along[i] * along[i]
                 column = int(np.floor(shift + half + 0.5))
-                a = 0.0
-                b = 0.0
+                a = b = 0.0
                 if 0 <= column <= 2 * half:
                     a = matched[i, column]
                     b = power[i, column]

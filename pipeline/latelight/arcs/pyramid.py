@@ -6,9 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from latelight.arcs._kernels import weigh_rows
 from latelight.records import Difference, PixelArray
-from latelight.threads import over_rows
 
 __all__ = ["Level", "base_bin", "build_pyramid"]
 
@@ -52,33 +50,23 @@ def build_pyramid(difference: Difference, *, widest_px: float) -> tuple[Level, .
         Full width at half maximum of the widest ridge wanted, pixels.
     """
     size = base_bin(difference.fwhm_px)
-    ny, nx = difference.pixels.shape
-    shape = (-(-ny // size), -(-nx // size))
-    signal = np.empty(shape, np.float32)
-    weight = np.empty(shape, np.float32)
-
-    def weigh(first: int, last: int) -> None:
-        weigh_rows(
-            signal,
-            weight,
-            difference.pixels,
-            difference.variance,
-            difference.mask,
-            size,
-            first,
-            last,
-        )
-
-    over_rows(weigh, shape[0])
+    good = difference.mask == 0
+    weight = np.where(good, np.float32(1.0) / difference.variance, np.float32(0.0))
+    signal = _binned(difference.pixels * weight, size)
+    weight = _binned(weight, size)
     levels = [Level(size, signal, weight)]
     # A ridge of sigma one block serves widths up to sqrt(2) times its own.
     while 2.3548 * np.sqrt(2.0) * levels[-1].bin_px < widest_px:
         last = levels[-1]
-        levels.append(Level(2 * last.bin_px, _halve(last.signal), _halve(last.weight)))
+        levels.append(
+            Level(2 * last.bin_px, _binned(last.signal, 2), _binned(last.weight, 2))
+        )
     return tuple(levels)
 
 
-def _halve(image: PixelArray) -> PixelArray:
+def _binned(image: PixelArray, size: int) -> PixelArray:
+    """Sum blocks; those that overhang the frame hold what is there."""
     ny, nx = image.shape
-    even = np.pad(image, ((0, ny % 2), (0, nx % 2)))
-    return even.reshape(even.shape[0] // 2, 2, even.shape[1] // 2, 2).sum(axis=(1, 3))
+    full = np.pad(image, ((0, -ny % size), (0, -nx % size)))
+    rows, cols = full.shape[0] // size, full.shape[1] // size
+    return full.reshape(rows, size, cols, size).sum(axis=(1, 3))

@@ -175,9 +175,11 @@ def _update(
     ny, nx = best.shape
     inner = power[margin : margin + ny, margin : margin + nx]
     stride = max(1, round(np.sqrt(ny * nx / _CALIBRATION_POINTS)))
-    floor = 0.1 * float(np.median(inner[::stride, ::stride]))
-    if floor <= 0.0:
+    sample = inner[::stride, ::stride]
+    lit = sample[sample > 1e-3 * sample.max(initial=0.0)]
+    if lit.size == 0:
         return np.ones(1 + len(_STEPS))
+    floor = 0.1 * float(np.median(lit))
     widths = _widths(response, power, margin, best.shape, steps, overlap, floor, stride)
 
     def update(first: int, last: int) -> None:
