@@ -97,6 +97,9 @@ def test_exchanging_the_frames_exchanges_roles_and_inverts_the_scale(star_pair):
 
     assert (there.convolved, back.convolved) == ("template", "science")
     assert there.scale * back.scale == pytest.approx(1.0, abs=2e-3)
+    for matched in (there, back):
+        left = matched.science.pixels - matched.template.pixels
+        assert np.abs(left).max() < 0.005 * matched.model.max()
 
 
 def test_a_small_shift_is_taken_up_by_the_kernel(star_pair):

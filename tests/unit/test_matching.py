@@ -134,6 +134,15 @@ class TestStars:
         assert {0, 100, 101, 102} <= set(chosen[:4].tolist())
         assert len(chosen) == 20
 
+    def test_stars_that_are_not_clean_in_both_frames_are_not_used(self, star_pair, rng):
+        pair = star_pair(40, rng=rng)
+        pair.science_stars.clean[:6] = False
+        pair.template_stars.clean[4:10] = False
+
+        matched = match(pair)
+
+        assert matched.n_fit + matched.n_held_out <= 30
+
     def test_stars_held_out_are_not_fitted(self, star_pair, rng):
         matched = match(star_pair(50, rng=rng))
 

@@ -1,5 +1,7 @@
 """The subtraction stage: background, masks, refusals."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from pydantic import ValidationError
@@ -26,7 +28,7 @@ def matched(pair):
     )
 
 
-def proper(pair, *, scale=1.0):
+def proper(pair, *, scale=1.0, registration_error_px=0.005):
     science_psf, template_psf = (
         measure_psf(plane, x=pair.x, y=pair.y, settings=MatchingSettings())
         for plane in (pair.science, pair.template)
@@ -37,7 +39,7 @@ def proper(pair, *, scale=1.0):
         science_psf=science_psf,
         template_psf=template_psf,
         scale=scale,
-        registration_error_px=0.005,
+        registration_error_px=registration_error_px,
         stars=pair.science_stars,
         settings=SubtractionSettings(),
     )
@@ -113,6 +115,35 @@ def test_a_pair_of_equal_skies_leaves_noise(star_pair, rng, method):
     assert difference.compact == ()
     worst = np.abs(difference.pixels) / np.sqrt(difference.variance)
     assert worst[20:-20, 20:-20].max() < 6.0
+
+
+def test_the_variance_holds_the_star_noise(star_pair, rng):
+    """V = V_S + V_T + (a M)^2 + (b |grad M|)^2, with the a and b reported."""
+    pair = star_pair(60, noise=10.0, rng=rng)
+    pair.science.pixels[:] = np.roll(pair.science.pixels, 1, axis=0)
+    both = matched(star_pair(60, noise=10.0, rng=rng))
+    both = replace(both, science=pair.science)  # a pixel off: residuals at every star
+
+    difference = subtract(
+        both, stars=pair.science_stars, settings=SubtractionSettings()
+    )
+
+    slope_y, slope_x = np.gradient(both.model)
+    expected = (
+        both.science.variance
+        + both.template.variance
+        + (difference.star_scatter * both.model) ** 2
+        + difference.star_shift_px**2 * (slope_x**2 + slope_y**2)
+    )
+    inner = np.s_[1:-1, 1:-1]
+    assert difference.star_shift_px > 0.2
+    assert difference.variance[inner] == pytest.approx(expected[inner], rel=1e-4)
+
+
+def test_proper_knows_the_error_of_the_registration(star_pair, rng):
+    difference = proper(star_pair(30, noise=10.0, rng=rng), registration_error_px=0.4)
+
+    assert difference.star_shift_px >= 0.4
 
 
 def test_masked_pixels_are_zero_and_keep_their_bits(star_pair, rng):

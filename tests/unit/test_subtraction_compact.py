@@ -32,6 +32,17 @@ def find(signal, rng, *, model=None, mask=None):
     )
 
 
+@pytest.fixture
+def quiet():
+    """A generator of noise that is nought."""
+
+    class Quiet:
+        def normal(self, mean, sigma, shape):
+            return np.full(shape, mean)
+
+    return Quiet()
+
+
 @pytest.mark.parametrize("sign", [1, -1])
 def test_a_variable_is_found_on_its_star(rng, sign):
     """S/N 50: placed to 0.1 px."""
@@ -89,6 +100,12 @@ def test_the_knots_of_a_clumpy_arc_are_left_alone(rng):
 
 def test_a_wide_blob_is_left_alone(rng):
     assert find(point(150, 150, 60000.0, sigma=4 * SIGMA), rng) == ()
+
+
+def test_a_faint_source_twice_as_wide_as_the_psf_is_left_alone(quiet):
+    """S/N 9 in the PSF's filter, 1.25 times that in one of twice the width; it does
+    fall off all round, so without noise its width alone gives it away."""
+    assert find(point(150, 150, 1300.0, sigma=2 * SIGMA), quiet) == ()
 
 
 def test_the_streak_of_a_fast_mover_is_listed_and_covered(rng):
