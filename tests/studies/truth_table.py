@@ -62,22 +62,20 @@ class Result:
     repeated: int = 0
 
 
-def across_and_along(echo, x, y, normal):
-    """Return the distance of a place from an echo's ridge, across and along it."""
+def lies_on(echo, x, y, length, *, normal, scale):
+    """Tell whether a ridge lies on an echo, at the science epoch or the other.
+
+    The knotty ridge of the truth and the traced one need not have the same middle:
+    one must lie within the other's extent.
+    """
     angle = np.radians(normal)
     dx, dy = x - echo.x, y - echo.y
-    return (
-        abs(dx * np.cos(angle) + dy * np.sin(angle)),
-        abs(-dx * np.sin(angle) + dy * np.cos(angle)),
+    across = abs(dx * np.cos(angle) + dy * np.sin(angle))
+    along = abs(-dx * np.sin(angle) + dy * np.cos(angle))
+    reach = max(5.0, echo.width_arcsec / scale, 0.5 * echo.shift_px)
+    return across <= reach and along <= 10.0 + 0.5 * max(
+        length, echo.length_arcsec / scale
     )
-
-
-def lies_on(echo, x, y, *, normal, scale):
-    """Tell whether a place lies on an echo, at the science epoch or the other."""
-    across, along = across_and_along(echo, x, y, normal)
-    width = echo.width_arcsec / scale
-    reach = max(5.0, width, 0.5 * echo.shift_px)
-    return across <= reach and along <= 0.6 * echo.length_arcsec / scale + 10.0
 
 
 def map_error(science, template, pair, config):
@@ -117,7 +115,12 @@ def judge_candidates(pair, rows, arcs, index, scale):
     sources = {s.name for s in pair.truth.sources}
     for echo in pair.truth.echoes:
         normal = position_angle_to_pixel_angle(wcs, echo.x, echo.y, echo.normal_pa)
-        on = [r for r in rows if lies_on(echo, r.x, r.y, normal=normal, scale=scale)]
+
+        def on_it(row, echo=echo, normal=normal):
+            place = row.x, row.y, row.length_px
+            return lies_on(echo, *place, normal=normal, scale=scale)
+
+        on = [row for row in rows if on_it(row)]
         match = Match(
             index,
             echo.bound,
@@ -126,9 +129,7 @@ def judge_candidates(pair, rows, arcs, index, scale):
             echo.shift_arcsec >= echo.width_arcsec,
         )
         if not on:
-            near = [
-                a for a in arcs if lies_on(echo, a.x, a.y, normal=normal, scale=scale)
-            ]
+            near = [arc for arc in arcs if on_it(arc)]
             match.verdict = near[0].verdict if near else "no ridge"
         matches.append(match)
         used.update(id(r) for r in on)
