@@ -77,12 +77,14 @@ def measure(*command):
 
 def stage_seconds(output):
     """Return seconds a stage from the run's log, in order."""
-    seconds = {}
-    for line in (output / "log.jsonl").read_text().splitlines():
-        event = json.loads(line)
-        if event.get("stage") and event.get("seconds") is not None:
-            seconds[event["stage"]] = seconds.get(event["stage"], 0) + event["seconds"]
-    return seconds
+    events = [json.loads(line) for line in (output / "log.jsonl").open()]
+    return {
+        event["stage"] + (" written" if not event.get("pair") else ""): event["seconds"]
+        for event in events
+        if event["run"] == events[-1]["run"]
+        and event.get("stage")
+        and event.get("seconds") is not None
+    }
 
 
 def main():
