@@ -276,3 +276,72 @@ def star_pair(star_plane):
         )
 
     return make
+
+
+@pytest.fixture(scope="session")
+def make_arc_difference():
+    """Return a maker of differences with drawn arcs in white noise of sigma 10.
+
+    ``make(rng, arcs, shape=..., fwhm_px=...)``; an arc is a dict of x, y, angle
+    (radians), curvature, length, sigma, tail, shift (signed, from the negative to
+    the positive lobe along the normal), height, and ratio of the lobes.
+    """
+    from latelight.arcs.geometry import Circle
+    from latelight.arcs.profiles import lobe_profile
+    from latelight.records import Difference
+
+    def draw(shape, arc):
+        y, x = np.mgrid[0 : shape[0], 0 : shape[1]]
+        circle = Circle(arc["x"], arc["y"], arc["angle"], arc.get("curvature", 0.0))
+        s, u = circle.coordinates(x, y)
+        inside = np.abs(s) <= 0.5 * arc["length"]
+        sigma, tail = arc.get("sigma", 3.0), arc.get("tail", 0.0)
+        lobes = lobe_profile(u, sigma, tail)
+        if "shift" in arc:
+            lobes = lobes - arc.get("ratio", 1.0) * lobe_profile(
+                u + arc["shift"], sigma, tail
+            )
+        return np.where(inside, arc["height"] * lobes, 0.0)
+
+    def make(rng, arcs=(), *, shape=(512, 512), fwhm_px=3.5):
+        pixels = rng.normal(scale=10.0, size=shape) if rng is not None else 0.0
+        pixels = pixels + sum((draw(shape, arc) for arc in arcs), np.zeros(shape))
+        return Difference(
+            pixels=pixels.astype(np.float32),
+            variance=np.full(shape, 100.0, np.float32),
+            mask=np.zeros(shape, np.uint16),
+            fwhm_px=fwhm_px,
+            noise_ratio=1.0,
+            method="kernel",
+            compact=(),
+            star_scatter=0.0,
+            star_shift_px=0.0,
+        )
+
+    return make
+
+
+@pytest.fixture(scope="session")
+def make_star_list():
+    """Return a maker of star lists: ``make(x, y, flux, shape=...)``, unsaturated."""
+    from latelight.records import StarList
+
+    def make(x=(), y=(), flux=(), *, shape=(512, 512)):
+        x, y, flux = (np.asarray(v, dtype=float) for v in (x, y, flux))
+        full, no = np.ones(x.size), np.zeros(x.size, dtype=bool)
+        return StarList(
+            x=x,
+            y=y,
+            position_err=0.02 * full,
+            flux=flux,
+            flux_err=100.0 * full,
+            peak=flux / 14.0,
+            fwhm=3.5 * full,
+            elongation=full,
+            saturated=no,
+            clean=~no,
+            sky=np.zeros(shape, np.float32),
+            fwhm_px=3.5,
+        )
+
+    return make

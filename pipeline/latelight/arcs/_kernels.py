@@ -173,7 +173,7 @@ def polar_sums(
     weight: np.ndarray,
     total: np.ndarray,
 ) -> None:
-    """Sum D/V, 1/V and the pixels of each (block along, pixel across) of an arc.
+    """Sum D/V, 1/V and the good pixels of each (block along, pixel across).
 
     Every pixel falls into exactly one bin, so the sums keep the exact noise.
     Coordinates are those of the circle of the given curvature through (x0, y0)
@@ -183,9 +183,10 @@ def polar_sums(
     half_length = 0.5 * n_blocks * block
     half_height = n_across // 2
     ny, nx = pixels.shape
-    # The chord of the arc and its sagitta bound the box; so does a whole circle.
-    reach_u = 0.5 * abs(curvature) * half_length * half_length
-    reach_s = half_length
+    # Chord and sagitta of the outermost circle bound the box; so does all of it.
+    outer = 1.0 + abs(curvature) * half_height
+    reach_u = 0.5 * outer * abs(curvature) * half_length * half_length
+    reach_s = outer * half_length
     if abs(curvature) > 1e-9:
         reach_u = min(reach_u, 2.0 / abs(curvature))
         reach_s = min(reach_s, half_height + 1.0 / abs(curvature))
@@ -215,8 +216,8 @@ def polar_sums(
             i_block = int(np.floor((along + half_length) / block))
             if i_block < 0 or i_block >= n_blocks:
                 continue
-            total[i_block, i_across] += 1.0
             if mask[y, x] == 0:
+                total[i_block, i_across] += 1.0
                 inverse = 1.0 / variance[y, x]
                 signal[i_block, i_across] += pixels[y, x] * inverse
                 weight[i_block, i_across] += inverse

@@ -26,7 +26,8 @@ class BrightStars:
     x, y : float64 array, shape (n,)
         Pixels.
     flux : float64 array, shape (n,)
-        Counts; of a saturated star roughly, from the size of its core.
+        Counts; of a saturated star roughly, from the size of its core and the
+        highest peak below saturation, and infinite without one.
     core_px : float64 array, shape (n,)
         Radius of the saturated core, pixels; 0 for the others.
     residues : bool array, shape (ny, nx)
@@ -57,7 +58,8 @@ def bright_stars(
     snr = stars.flux / np.maximum(stars.flux_err, 1e-30)
     chosen = ~stars.saturated & (snr >= least_snr)
     x, y, flux = stars.x[chosen], stars.y[chosen], stars.flux[chosen]
-    full_well = float(stars.peak[~stars.saturated].max(initial=1.0))
+    peaks = stars.peak[~stars.saturated]
+    full_well = float(peaks.max()) if peaks.size else np.inf
 
     saturated = np.uint16(MaskBit.SATURATED | MaskBit.BLEED)
     label, n = ndimage.label(difference.mask & saturated)

@@ -44,8 +44,9 @@ class Evidence:
         pair of lobes of even brightness, and that of the best single lobe.
     noise_ratio : float
         Noise of such ridges over that stated by the variance.
-    fwhm_px, lobe_width_px : float
-        Full widths at half maximum of the PSF and of a lobe, pixels.
+    fwhm_px, lobe_width_px, single_width_px : float
+        Full widths at half maximum of the PSF, of a lobe of the pair and of the best
+        single lobe, pixels.
     block_snr : float64 array, shape (n,)
         Significance of each block along the ridge.
     trimmed_snr : float
@@ -70,6 +71,7 @@ class Evidence:
     noise_ratio: float
     fwhm_px: float
     lobe_width_px: float
+    single_width_px: float
     block_snr: FloatArray
     trimmed_snr: float
     filled: float
@@ -83,6 +85,11 @@ class Evidence:
         """The second lobe improves the fit by three sigma and is no mere trifle."""
         improved = self.pair_snr**2 - self.single_snr**2 > 9.0
         return improved and self.weaker_share > 0.2
+
+    @property
+    def narrowest(self) -> float:
+        """Width of the narrower description, one lobe or two, in PSF widths."""
+        return min(self.lobe_width_px, self.single_width_px) / self.fwhm_px
 
     @property
     def shift_px(self) -> float:
@@ -141,6 +148,7 @@ def gather(
         noise_ratio=noise_ratio,
         fwhm_px=difference.fwhm_px,
         lobe_width_px=lobe_width(fit.pair.sigma_px, fit.pair.tail_px),
+        single_width_px=lobe_width(fit.single.sigma_px, fit.single.tail_px),
         block_snr=block_snr[whole],
         trimmed_snr=_trimmed(matched[whole], power[whole]) / noise_ratio,
         filled=filled(matched[core], power[core]),
@@ -190,9 +198,6 @@ def _trimmed(matched: FloatArray, power: FloatArray) -> float:
 
 def _masked(sums: PolarSums, lobes: Lobes) -> float:
     """Return the fraction of the lobes' area without data."""
-    half_height = sums.signal.shape[1] // 2
-    weight = lobes.profile(half_height) ** 2
-    area = BLOCK_PX * sums.along.size
-    usual = np.median(sums.weight[sums.weight > 0.0]) if sums.weight.any() else 1.0
-    full = np.minimum(sums.weight / usual, 1.0).sum(axis=0) * BLOCK_PX / area
-    return float(1.0 - (full * weight).sum() / weight.sum())
+    weight = lobes.profile(sums.signal.shape[1] // 2) ** 2
+    good = sums.count.sum(axis=0) / (BLOCK_PX * sums.along.size)
+    return float(1.0 - (good * weight).sum() / weight.sum())

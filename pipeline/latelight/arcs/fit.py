@@ -69,7 +69,7 @@ class PolarSums:
     along : float64 array, shape (n,)
         Middles of the blocks, pixels.
     signal, weight, count : float64 array, shape (n, m)
-        Sum of D/V and of 1/V over unmasked pixels, and pixels, masked included.
+        Sum of D/V and of 1/V over unmasked pixels, and their number.
     """
 
     along: FloatArray

@@ -71,7 +71,7 @@ def trail(evidence: Evidence) -> bool:
     longest = evidence.settings.longest_px
     if line.length_px > 2.0 * longest and line.beyond_snr > 8.0 and line.filled > 0.8:
         return True
-    narrow = evidence.lobe_width_px < 1.5 * evidence.fwhm_px
+    narrow = evidence.narrowest < 1.5
     long = line.length_px > longest or line.to_edges
     lit = line.beyond_snr > 4.0 and line.filled > 0.6
     return (narrow or _alone(evidence)) and long and lit
@@ -80,7 +80,7 @@ def trail(evidence: Evidence) -> bool:
 def spike(evidence: Evidence) -> bool:
     """Tell whether a narrow line points at a star that could cast it."""
     close = evidence.shift_px < 1.2 * evidence.fwhm_px
-    if evidence.lobe_width_px > 1.6 * evidence.fwhm_px:
+    if evidence.narrowest > 1.6:
         return False
     if not (close or _alone(evidence)):
         return False
