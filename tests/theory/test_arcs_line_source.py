@@ -2,6 +2,7 @@
 
 import numpy as np
 import pytest
+from scipy.special import erf
 from scipy.stats import norm
 
 from latelight.arcs.fit import sum_along
@@ -118,15 +119,12 @@ def test_default_threshold_allows_for_the_trials():
     assert ArcSettings().threshold >= 7.034
 
 
-def test_line_source_with_rounded_ends(make_arc_difference):
+def test_line_source_with_rounded_ends():
     """A line of 100 px blurred by s = 1.5 px has sum T^2 = 18.488, S/N 2.14988.
 
-    Over its ends the profile fades as an error function; integrated in closed
-    form, sum T^2 = (L - s sqrt(2 / pi) ...) / (2 sqrt(pi) s) -> 18.488 for L = 100.
-    The sum over pixels of the drawn template is compared with it.
+    Along it the template fades as an error function at both ends, across it is a
+    Gaussian; its sum over pixels is the product of the two sums.
     """
-    from scipy.special import erf
-
     x = np.arange(-90.0, 91.0)
     along = 0.5 * (
         erf((x + 50.0) / (1.5 * np.sqrt(2.0))) - erf((x - 50.0) / (1.5 * np.sqrt(2.0)))

@@ -1,10 +1,12 @@
 """Each artefact is named, and genuine arcs survive every question."""
 
 from dataclasses import replace
+from types import SimpleNamespace
 
 import numpy as np
 import pytest
 
+from latelight.arcs import verdicts
 from latelight.arcs.bright import bright_stars
 from latelight.arcs.find import find_arcs
 from latelight.arcs.settings import ArcSettings
@@ -192,6 +194,44 @@ def test_genuine_arcs_survive_every_question(
         arcs = find_arcs(difference, stars=stars, settings=SETTINGS)
 
         assert [arc.verdict for arc in arcs][:1] == ["arc"], change
+
+
+@pytest.mark.parametrize(
+    ("question", "yes", "no"),
+    [
+        # The share of the significance that is left without the best piece.
+        (verdicts.lump, {"trimmed_snr": 4.0}, {"trimmed_snr": 5.0}),
+        (verdicts.lump, {"pair_snr": 40.0, "trimmed_snr": 9.0}, {"trimmed_snr": 9.0}),
+        (verdicts.patches, {"filled": 0.45}, {"filled": 0.55}),
+        (verdicts.wide, {"lobe_width_px": 31.0}, {"lobe_width_px": 29.0}),
+        (verdicts.residue, {"away_share": 0.45}, {"away_share": 0.55}),
+        (verdicts.apart, {"shift_px": 39.5}, {"shift_px": 38.5}),
+        (verdicts.single, {"two_lobed": False}, {"two_lobed": True}),
+        (verdicts.single, {"two_lobed": False}, {"two_lobed": False, "snr": 16.0}),
+        (verdicts.masked, {"masked": 0.45}, {"masked": 0.35}),
+        (verdicts.masked, {"masked": 0.75, "snr": 20.0}, {"masked": 0.65, "snr": 20.0}),
+        (verdicts.stubby, {"length_px": 40.0}, {"length_px": 50.0}),
+        # 2.2 x (10 + 20) = 66 px.
+        (verdicts.stubby, {"shift_px": 20.0, "length_px": 64.0}, {"shift_px": 10.0}),
+    ],
+)
+def test_questions_answer_by_their_limits(question, yes, no):
+    facts = {
+        "settings": SETTINGS,
+        "snr": 10.0,
+        "pair_snr": 10.0,
+        "trimmed_snr": 8.0,
+        "filled": 1.0,
+        "lobe_width_px": 10.0,
+        "away_share": 1.0,
+        "shift_px": 10.0,
+        "two_lobed": True,
+        "masked": 0.0,
+        "length_px": 100.0,
+    }
+
+    assert question(SimpleNamespace(**(facts | yes)))
+    assert not question(SimpleNamespace(**(facts | no)))
 
 
 def test_reasons_are_distinct_and_named():
