@@ -11,8 +11,6 @@ __all__ = ["add_gram", "fill_bad", "filter_stamp"]
 @nb.njit(nogil=True, cache=True)
 def filter_stamp(
     image: np.ndarray,
-    row: int,
-    col: int,
     taps: np.ndarray,
     pairs: np.ndarray,
     half: int,
@@ -23,10 +21,8 @@ def filter_stamp(
 
     Parameters
     ----------
-    image : float32 array, shape (ny, nx)
-        The cutout with the filters' reach as margin must lie inside.
-    row, col : int
-        Centre of the star.
+    image : float32 array, shape (n, n)
+        The cutout with the filters' reach as margin.
     taps : float32 array, shape (n_taps, k)
         One-dimensional filters, k odd.
     pairs : int64 array, shape (n_basis, 2)
@@ -44,8 +40,6 @@ def filter_stamp(
     height = width + 2 * reach
     along_x = np.empty((height, width), dtype=np.float32)
     both = np.empty((width, width), dtype=np.float32)
-    top = row - half - reach
-    left = col - half + reach
     done = -1
     for b in range(pairs.shape[0]):
         if pairs[b, 1] != done:
@@ -54,10 +48,10 @@ def filter_stamp(
             for tap in range(side):
                 weight = taps[done, tap]
                 if weight != 0.0:
-                    start = left - tap
+                    start = 2 * reach - tap
                     for y in range(height):
                         # Slices: the inner loops then run over whole vectors.
-                        source = image[top + y, start : start + width]
+                        source = image[y, start : start + width]
                         target = along_x[y]
                         for x in range(width):
                             target[x] += weight * source[x]
@@ -111,16 +105,11 @@ def add_gram(
 
 @nb.njit(nogil=True, cache=True)
 def fill_bad(
-    image: np.ndarray,
-    bad: np.ndarray,
-    radius: int,
-    out: np.ndarray,
-    first_row: int,
-    last_row: int,
+    image: np.ndarray, bad: np.ndarray, radius: int, first_row: int, last_row: int
 ) -> None:
     """Fill bad pixels with the mean of near good ones, weighted by 1/r^2.
 
-    ``out`` starts as a copy of ``image``; a bad pixel with no good one within
+    In place, as only good pixels are looked at; a bad one with no good one within
     ``radius`` becomes 0.
     """
     ny, nx = image.shape
@@ -136,4 +125,4 @@ def fill_bad(
                         w = 1.0 / ((yy - y) ** 2 + (xx - x) ** 2)
                         total += w * image[yy, xx]
                         weight += w
-            out[y, x] = total / weight if weight > 0.0 else 0.0
+            image[y, x] = total / weight if weight > 0.0 else 0.0

@@ -136,9 +136,11 @@ def fit_kernel(
     best = _choose(solver, sound, judges, levels=len(basis.levels), settings=settings)
     fitted = solver.clip(best, sound, settings)
     coefficients, sum_variance = solver.solve(best, fitted)
-    planes = np.einsum("bt,byx->tyx", coefficients, basis.images())
+    # Terms the model leaves out would cost a transform each and add nothing.
+    terms = np.flatnonzero(coefficients.any(axis=0))
+    planes = np.einsum("bt,byx->tyx", coefficients[:, terms], basis.images())
     return KernelFit(
-        kernel=SpatialKernel(planes, exponents, shape),
+        kernel=SpatialKernel(planes, tuple(exponents[t] for t in terms), shape),
         sum_err=max(np.sqrt(sum_variance), solver.jackknife(best, fitted)),
         fitted=fitted,
         held_out=held,

@@ -221,13 +221,8 @@ def _layer(plane: Plane) -> _Layer:
     ).back(dtype=np.float32)
     light = plane.pixels - sky
     lost = (plane.mask & ~np.uint16(_KEEP_VALUE)) != 0
-    filled = light.copy()
-
-    def fill(first: int, last: int) -> None:
-        fill_bad(light, lost, 2, filled, first, last)
-
-    over_rows(fill, height)
-    return _Layer(filled, sky, plane.variance, plane.mask, plane.noise_power)
+    over_rows(lambda first, last: fill_bad(light, lost, 2, first, last), height)
+    return _Layer(light, sky, plane.variance, plane.mask, plane.noise_power)
 
 
 def _convolved(layer: _Layer, kernel: SpatialKernel) -> _Layer:
@@ -279,15 +274,12 @@ def _fit(
     sigma = fwhm[0] / FWHM_PER_SIGMA, fwhm[1] / FWHM_PER_SIGMA
     basis = make_basis(sharp_sigma=sigma[0], broad_sigma=sigma[1])
     radius = _radius(fwhm[1])
-    images, pad = _fit_images(
-        sharp, broad, pad=radius + basis.taps.shape[1] // 2 + 1, spoil=1.5 * fwhm[1]
-    )
+    images = _fit_images(sharp, broad, spoil=1.5 * fwhm[1])
     chosen = choose_stars(
         rows,
         snr,
         stars=stars,
         bad=images.bad,
-        pad=pad,
         core=int(np.ceil(1.5 * fwhm[1])),
         radius=radius,
         settings=settings,
@@ -296,7 +288,7 @@ def _fit(
     centre = np.stack([np.rint(y), np.rint(x)], axis=1).astype(np.int64)
     systems = build_systems(
         images,
-        centre + pad,
+        centre,
         basis=basis,
         radius=radius,
         scale=ratio,
@@ -308,23 +300,19 @@ def _fit(
     return fit, centre
 
 
-def _fit_images(
-    sharp: _Layer, broad: _Layer, *, pad: int, spoil: float
-) -> tuple[FitImages, int]:
-    """Pad the two frames, and mark what a star's disc must leave out."""
+def _fit_images(sharp: _Layer, broad: _Layer, *, spoil: float) -> FitImages:
+    """Mark what a star's disc must leave out."""
     mask = sharp.mask | broad.mask
     # The light missing from a saturated core is missing around it once convolved.
     unknown = (mask & np.uint16(_KEEP_VALUE)).astype(np.uint16)
-    bad = (grow_mask(unknown, footprint=disc(spoil)) | mask) != 0
-    images = FitImages(
-        sharp=np.pad(sharp.light, pad),
-        target=np.pad(broad.light, pad),
-        sharp_variance=np.pad(sharp.variance, pad, mode="edge"),
-        target_variance=np.pad(broad.variance, pad, mode="edge"),
-        bad=np.pad(bad, pad, constant_values=True),
+    return FitImages(
+        sharp=sharp.light,
+        target=broad.light,
+        sharp_variance=sharp.variance,
+        target_variance=broad.variance,
+        bad=(grow_mask(unknown, footprint=disc(spoil)) | mask) != 0,
         noise_power=sharp.noise_power,
     )
-    return images, pad
 
 
 def _held_out_chi2(

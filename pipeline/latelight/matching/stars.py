@@ -52,7 +52,6 @@ def choose_stars(
     *,
     stars: StarList,
     bad: BoolArray,
-    pad: int,
     core: int,
     radius: int,
     settings: MatchingSettings,
@@ -65,10 +64,8 @@ def choose_stars(
         Candidates (rows of ``stars``), best first, and their S/N.
     stars : StarList
         Stars of the science frame.
-    bad : bool array, shape (ny + 2 pad, nx + 2 pad)
-        Pixels not to be used in either frame, the padding included.
-    pad : int
-        Padding on every side, at least ``radius``.
+    bad : bool array, shape (ny, nx)
+        Pixels not to be used in either frame; beyond the rim all are bad.
     core, radius : int
         A star's box of half-width ``core`` must be free of bad pixels, and most
         of its disc.
@@ -85,15 +82,14 @@ def choose_stars(
     StageError
         If fewer than ``min_stars`` are left.
     """
-    col = np.rint(stars.x[rows]).astype(int) + pad
-    row = np.rint(stars.y[rows]).astype(int) + pad
+    col = np.rint(stars.x[rows]).astype(int)
+    row = np.rint(stars.y[rows]).astype(int)
     usable = snr >= settings.min_snr
     for n in np.flatnonzero(usable):
-        inner, whole = (
-            bad[row[n] - r : row[n] + r + 1, col[n] - r : col[n] + r + 1]
-            for r in (core, radius)
+        usable[n] = (
+            _bad_share(bad, row[n], col[n], core) == 0.0
+            and _bad_share(bad, row[n], col[n], radius) < _MOST_MASKED
         )
-        usable[n] = not inner.any() and whole.mean() < _MOST_MASKED
     rows = rows[usable]
     if rows.size < settings.min_stars:
         msg = (
@@ -108,9 +104,15 @@ def choose_stars(
         rows,
         stars.x[rows],
         stars.y[rows],
-        shape=(bad.shape[0] - 2 * pad, bad.shape[1] - 2 * pad),
+        shape=(bad.shape[0], bad.shape[1]),
         most=min(settings.max_stars, affordable),
     )
+
+
+def _bad_share(bad: BoolArray, row: int, col: int, half: int) -> float:
+    """Return the share of a box that is bad or outside the frame."""
+    box = bad[max(row - half, 0) : row + half + 1, max(col - half, 0) : col + half + 1]
+    return 1.0 - (box.size - np.count_nonzero(box)) / (2 * half + 1) ** 2
 
 
 def spread_over_cells(

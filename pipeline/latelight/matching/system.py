@@ -56,7 +56,7 @@ class StarSystems:
 
 @dataclass(frozen=True, slots=True)
 class FitImages:
-    """What the kernel is fitted to, padded so that every disc lies inside.
+    """What the kernel is fitted to.
 
     Attributes
     ----------
@@ -124,7 +124,9 @@ def build_systems(
     """
     n_stars, n_raw = len(centre), len(basis.pairs)
     offsets = disc_offsets(radius)
+    at = tuple(offsets.T + radius)
     taps = basis.taps.astype(np.float32)
+    reach = taps.shape[1] // 2
     kernel_sigma = np.sqrt(max(broad_sigma**2 - sharp_sigma**2, 0.0))
     through = scale**2 * _gaussian_gain(float(kernel_sigma))
     gram = np.zeros((n_stars, n_raw, n_raw))
@@ -134,21 +136,20 @@ def build_systems(
     def do_stars(first: int, last: int) -> None:
         functions = np.empty((len(offsets), n_raw))
         for star in range(first, last):
-            row, col = centre[star]
-            filter_stamp(
-                images.sharp, row, col, taps, basis.pairs, radius, offsets, functions
-            )
-            at = (row + offsets[:, 0], col + offsets[:, 1])
+            box = _cutout(images.sharp, centre[star], radius + reach, beyond=0.0)
+            filter_stamp(box, taps, basis.pairs, radius, offsets, functions)
             smooth = [
-                _smooth_variance(v, row, col, radius, broad_sigma)
+                _smooth_variance(v, centre[star], radius, broad_sigma)
                 for v in (images.target_variance, images.sharp_variance)
             ]
-            target_v, sharp_v = (v[tuple(offsets.T + radius)] for v in smooth)
+            target_v, sharp_v = (v[at] for v in smooth)
             variance = target_v + through * sharp_v
-            weight = np.where(images.bad[at], 0.0, 1.0 / variance)
+            bad = _cutout(images.bad, centre[star], radius, beyond=True)[at]
+            weight = np.where(bad, 0.0, 1.0 / variance)
             share = weight / weight.sum()
             functions -= share @ functions
-            target = images.target[at].astype(float)
+            target = _cutout(images.target, centre[star], radius, beyond=0.0)[at]
+            target = target.astype(float)
             target -= share @ target
             add_gram(functions, target, weight, gram[star], cross[star])
             total[star] = np.sum(weight * target**2)
@@ -167,12 +168,27 @@ def build_systems(
     )
 
 
+def _cutout(
+    image: np.ndarray, centre: IntArray, half: int, *, beyond: float | None
+) -> np.ndarray:
+    """Cut out a box; beyond the frame it holds a value, or that of its rim."""
+    first, last = centre - half, centre + half + 1
+    y0, x0 = np.maximum(first, 0)
+    inside = image[y0 : last[0], x0 : last[1]]
+    outside = np.stack([-first, last - image.shape], axis=1).clip(0)
+    if not outside.any():
+        return np.ascontiguousarray(inside)
+    if beyond is None:
+        return np.pad(inside, outside, mode="edge")
+    return np.pad(inside, outside, constant_values=beyond)
+
+
 def _smooth_variance(
-    variance: PixelArray, row: int, col: int, radius: int, sigma: float
+    variance: PixelArray, centre: IntArray, radius: int, sigma: float
 ) -> FloatArray:
     """Smooth a cutout so that a pixel's own noise does not set its weight."""
-    box = np.s_[row - radius : row + radius + 1, col - radius : col + radius + 1]
-    return ndimage.gaussian_filter(variance[box].astype(float), sigma, truncate=2.0)
+    box = _cutout(variance, centre, radius, beyond=None).astype(float)
+    return ndimage.gaussian_filter(box, sigma, truncate=2.0)
 
 
 def _gaussian_gain(sigma: float) -> float:

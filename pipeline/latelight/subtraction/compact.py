@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy import ndimage
@@ -122,7 +122,7 @@ def find_compact(
     kept |= bright & (spread < _STREAK_SPREAD)
     kept &= ~_on_a_line(seen, row, col, sign, fwhm_px, width)
     row, col = row[kept], col[kept]
-    starlight = _filtered(model * weight, weight, psf_sigma)
+    starlight = replace(seen, top=_smooth(model * weight, _gaussian_taps(psf_sigma)))
     found = [
         _describe(r, c, snr, seen, starlight, psf_sigma, width)
         for r, c in zip(row.tolist(), col.tolist(), strict=True)
