@@ -62,18 +62,21 @@ class Result:
     repeated: int = 0
 
 
-def lies_on(echo, x, y, length, *, normal, scale):
+def lies_on(echo, x, y, length, *, normal, scale, other):
     """Tell whether a ridge lies on an echo, at the science epoch or the other.
 
     The knotty ridge of the truth and the traced one need not have the same middle:
-    one must lie within the other's extent.
+    one must lie within the other's extent.  ``other`` is the place of the template's
+    lobe along the motion, pixels: an arc may show in the template alone.
     """
     angle = np.radians(normal)
     dx, dy = x - echo.x, y - echo.y
-    across = abs(dx * np.cos(angle) + dy * np.sin(angle))
+    across = dx * np.cos(angle) + dy * np.sin(angle)
     along = abs(-dx * np.sin(angle) + dy * np.cos(angle))
-    reach = max(5.0, echo.width_arcsec / scale, 0.5 * echo.shift_px)
-    return across <= reach and along <= 10.0 + 0.5 * max(
+    reach = max(5.0, echo.width_arcsec / scale, 0.3 * echo.shift_px)
+    beside = min(abs(across), abs(across - other))
+    between = min(0.0, other) < across < max(0.0, other)
+    return (beside <= reach or between) and along <= 10.0 + 0.5 * max(
         length, echo.length_arcsec / scale
     )
 
@@ -116,9 +119,11 @@ def judge_candidates(pair, rows, arcs, index, scale):
     for echo in pair.truth.echoes:
         normal = position_angle_to_pixel_angle(wcs, echo.x, echo.y, echo.normal_pa)
 
-        def on_it(row, echo=echo, normal=normal):
+        behind = 1.0 if pair.truth.later == "template" else -1.0
+
+        def on_it(row, echo=echo, normal=normal, other=behind * echo.shift_px):
             place = row.x, row.y, row.length_px
-            return lies_on(echo, *place, normal=normal, scale=scale)
+            return lies_on(echo, *place, normal=normal, scale=scale, other=other)
 
         on = [row for row in rows if on_it(row)]
         match = Match(
