@@ -7,10 +7,15 @@ plain threads share them; results do not depend on how many there are.
 from __future__ import annotations
 
 import os
-from collections.abc import Callable
+import threading
+from collections.abc import Callable, Sequence
 from concurrent.futures import ThreadPoolExecutor
+from typing import TypeVar
 
-__all__ = ["n_threads", "over_rows", "quiet_libraries", "set_threads"]
+__all__ = ["n_threads", "on_each", "over_rows", "quiet_libraries", "set_threads"]
+
+Item = TypeVar("Item")
+Result = TypeVar("Result")
 
 _LIBRARY_VARIABLES = (
     "OMP_NUM_THREADS",
@@ -20,6 +25,8 @@ _LIBRARY_VARIABLES = (
 )
 
 _threads = max(1, os.cpu_count() or 1)
+# A thread that shares the process with others has a part of the threads only.
+_share = threading.local()
 
 
 def set_threads(count: int) -> None:
@@ -53,8 +60,37 @@ def quiet_libraries() -> None:
 
 
 def n_threads() -> int:
-    """Return how many threads this process may use."""
-    return _threads
+    """Return how many threads the caller may use."""
+    return getattr(_share, "count", _threads)
+
+
+def on_each(work: Callable[[Item], Result], items: Sequence[Item]) -> list[Result]:
+    """Call ``work`` on every item, side by side where there are threads for it.
+
+    Parameters
+    ----------
+    work : callable
+        Spends most of its time where the interpreter lock is not held; inside it,
+        ``n_threads`` is its fair share.
+    items : sequence
+        What it is called with.
+
+    Returns
+    -------
+    list
+        Results in the order of the items; the first error is raised.
+    """
+    available = n_threads()
+    count = min(available, len(items))
+    if count <= 1:
+        return [work(item) for item in items]
+
+    def in_share(item: Item) -> Result:
+        _share.count = available // count
+        return work(item)
+
+    with ThreadPoolExecutor(count) as pool:
+        return list(pool.map(in_share, items))
 
 
 def over_rows(kernel: Callable[[int, int], None], n_rows: int) -> None:
@@ -67,7 +103,7 @@ def over_rows(kernel: Callable[[int, int], None], n_rows: int) -> None:
     n_rows : int
         Rows in all.
     """
-    count = min(_threads, n_rows)
+    count = min(n_threads(), n_rows)
     if count <= 1:
         kernel(0, n_rows)
         return

@@ -255,11 +255,10 @@ def _flag_edge(mask: MaskArray, width: int) -> None:
 
 def _filled(counts: PixelArray, sky: PixelArray, mask: MaskArray) -> PixelArray:
     """Return the pixels with worthless ones filled from their rims, or the sky."""
-    todo = has_bit(mask, WORTHLESS).astype(np.uint8)
+    todo = has_bit(mask, WORTHLESS)
     ys, xs = np.nonzero(todo)
     filled = counts.copy()
     if ys.size:
         fill_layers(filled, todo, ys, xs, FILL_LAYERS)
-        deep = todo != 0
-        filled[deep] = sky[deep]
+        filled[todo] = sky[todo]
     return filled

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import threading
 import warnings
 from collections.abc import Iterator
 from contextlib import contextmanager
@@ -35,6 +36,8 @@ MIN_SIDE_PX = 32
 FITS_BLOCK = 2880  # bytes
 # Damaged sizes must not ask for all the memory there is.
 MAX_PIXELS = 2**30
+# Filters of warnings belong to the process: one thread at a time changes them.
+_ONE_AT_A_TIME = threading.Lock()
 
 
 @dataclass(frozen=True, slots=True)
@@ -68,7 +71,8 @@ def open_fits(path: Path) -> Iterator[Any]:
     """Open a FITS file; whatever goes wrong inside becomes a FrameError.
 
     The reading library raises a dozen kinds of exceptions on damaged files and
-    warns about most healthy ones, so both are dealt with in this one place.
+    warns about most healthy ones, so both are dealt with in this one place.  Threads
+    wait for one another here.
 
     Parameters
     ----------
@@ -84,7 +88,7 @@ def open_fits(path: Path) -> Iterator[Any]:
     FrameError
         With the reason in plain words.
     """
-    with warnings.catch_warnings():
+    with _ONE_AT_A_TIME, warnings.catch_warnings():
         warnings.simplefilter("ignore")
         try:
             # Opened here, as the library leaves a file open that it gives up on.

@@ -37,6 +37,7 @@ from latelight.registration.resampling import resample
 from latelight.registration.stars import detect_stars
 from latelight.subtraction.difference import subtract
 from latelight.subtraction.proper import subtract_proper
+from latelight.threads import on_each
 
 __all__ = ["Outcome", "PairTask", "load_frame", "process_pair"]
 
@@ -164,8 +165,10 @@ def _run(task: PairTask, journal: Journal) -> tuple[Findings, Difference, Any]:
 
 def _read(task: PairTask, journal: Journal) -> tuple[Frame, Frame]:
     with journal.stage("frames"):
-        science = load_frame(task.pair.science, task.config)
-        template = load_frame(task.pair.template, task.config)
+        science, template = on_each(
+            lambda header: load_frame(header, task.config),
+            (task.pair.science, task.pair.template),
+        )
     notes = [f"{f.name}: {note}" for f in (science, template) for note in f.notes]
     for note in notes:
         journal.say(note, stage="frames")

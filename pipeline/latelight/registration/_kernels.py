@@ -5,10 +5,10 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from latelight.records import FloatArray, IntArray, MaskArray, PixelArray
-from latelight.registration.interpolation import BEFORE, TAPS
+from latelight.records import BoolArray, FloatArray, IntArray, MaskArray, PixelArray
+from latelight.registration.interpolation import AFTER, BEFORE, TAPS
 
-__all__ = ["lag_covariance", "measure_stars", "resample_rows"]
+__all__ = ["lag_covariance", "mark_near_bad", "measure_stars", "resample_rows"]
 
 _NO_DATA = np.uint16(1)
 # A tap with a smaller share of the weight does not hand its mask bits on.
@@ -109,11 +109,22 @@ def _near_bad(
 
 
 @njit(nogil=True, cache=True)
+def mark_near_bad(mask: MaskArray, near: BoolArray) -> None:
+    """Mark the pixels about which the taps meet a masked one."""
+    ny, nx = mask.shape
+    for y in range(ny):
+        for x in range(nx):
+            if mask[y, x] != 0:
+                for row in range(max(y - AFTER, 0), min(y + BEFORE + 1, ny)):
+                    near[row, max(x - AFTER, 0) : min(x + BEFORE + 1, nx)] = True
+
+
+@njit(nogil=True, cache=True)
 def resample_rows(
     first_row: int,
     last_row: int,
     inputs: tuple[PixelArray, PixelArray, MaskArray],
-    near_bad: MaskArray,
+    near_bad: BoolArray,
     sky: tuple[PixelArray, PixelArray, int],
     tables: tuple[FloatArray, FloatArray, FloatArray],
     row_basis: FloatArray,

@@ -11,12 +11,15 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import ndimage
 from scipy.interpolate import BSpline, make_interp_spline
 
 from latelight.records import FloatArray, IntArray, PixelArray, PixelMap, Plane
-from latelight.registration._kernels import lag_covariance, resample_rows
-from latelight.registration.interpolation import TAPS, kernel_weights
+from latelight.registration._kernels import (
+    lag_covariance,
+    mark_near_bad,
+    resample_rows,
+)
+from latelight.registration.interpolation import kernel_weights
 from latelight.registration.pixel_map import evaluate, jacobian_determinant
 from latelight.registration.settings import RegistrationSettings
 from latelight.threads import over_rows
@@ -70,8 +73,8 @@ def resample(
     weights = kernel_weights(settings.interpolation)
     tables = _spline_tables(pixel_map, shape)
     sky = (*_block_sky(plane), _SKY_BLOCK_PX)
-    bad = (plane.mask != 0).view(np.uint8)
-    near_bad = ndimage.maximum_filter(bad, size=TAPS, origin=-1, mode="nearest")
+    near_bad = np.zeros(plane.mask.shape, dtype=np.bool_)
+    mark_near_bad(plane.mask, near_bad)
     out = (
         np.empty(shape, np.float32),
         np.empty(shape, np.float32),
@@ -163,11 +166,13 @@ class _SplineTables:
 
 def _spline_tables(pixel_map: PixelMap, shape: tuple[int, int]) -> _SplineTables:
     rows, columns = np.arange(shape[0], dtype=float), np.arange(shape[1], dtype=float)
+    # Of unit vectors: a product then does for all columns what a solver would do
+    # for each.
+    across = make_interp_spline(pixel_map.node_y, np.eye(pixel_map.node_y.size), k=3)
     tables = []
     for values in (pixel_map.map_x, pixel_map.map_y, jacobian_determinant(pixel_map)):
         along_x = make_interp_spline(pixel_map.node_x, values, k=3, axis=1)(columns)
-        across = make_interp_spline(pixel_map.node_y, along_x, k=3, axis=0)
-        tables.append(np.ascontiguousarray(across.c))
+        tables.append(across.c @ along_x)
     basis = BSpline.design_matrix(rows, across.t, 3)
     return _SplineTables(
         columns=(tables[0], tables[1], tables[2]),

@@ -159,7 +159,8 @@ def find_cosmic_rays(
         ),
         pixels.shape[0],
     )
-    ys, xs = np.nonzero(hits)
+    # Whole rows of bytes are searched many times faster as truth values.
+    ys, xs = np.nonzero(hits.view(np.bool_))
     cleaned = pixels.copy()
     for _ in range(GROW_PASSES):
         if ys.size == 0:

@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import warnings
-
 import numpy as np
 from scipy import ndimage
 
@@ -87,9 +85,9 @@ def flag_spikes(
 
 def _above_mean_ray(rays: FloatArray) -> FloatArray:
     """Take the median over all angles off each radius; NaN where masked."""
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", RuntimeWarning)
-        middle = np.nanmedian(rays, axis=0)
+    middle = np.full(rays.shape[1], np.nan)
+    seen = np.isfinite(rays).any(axis=0)
+    middle[seen] = np.nanmedian(rays[:, seen], axis=0)
     above: FloatArray = rays - middle[None, :]
     return above
 
