@@ -70,13 +70,14 @@ def smooth_rows(
     line = np.zeros(nx + 2 * reach, dtype=np.float32)
     for y in range(first_row, last_row):
         line[reach : reach + nx] = image[y]
-        target = out[y]
-        target[:] = 0.0
-        for tap in range(taps.size):
-            weight = taps[tap]
-            source = line[tap : tap + nx]
+        target, middle = out[y], line[reach : reach + nx]
+        for x in range(nx):
+            target[x] = taps[reach] * middle[x]
+        for away in range(1, reach + 1):
+            weight = taps[reach + away]
+            left, right = line[reach - away :], line[reach + away :]
             for x in range(nx):
-                target[x] += weight * source[x]
+                target[x] += weight * (left[x] + right[x])
 
 
 @nb.njit(nogil=True, cache=True)
@@ -86,13 +87,14 @@ def smooth_columns(
     """Filter along y with symmetric taps, zeros outside."""
     ny, nx = image.shape
     reach = taps.size // 2
+    outside = np.zeros(nx, dtype=np.float32)
     for y in range(first_row, last_row):
-        target = out[y]
-        target[:] = 0.0
-        for tap in range(taps.size):
-            row = y + tap - reach
-            if 0 <= row < ny:
-                weight = taps[tap]
-                source = image[row]
-                for x in range(nx):
-                    target[x] += weight * source[x]
+        target, middle = out[y], image[y]
+        for x in range(nx):
+            target[x] = taps[reach] * middle[x]
+        for away in range(1, reach + 1):
+            weight = taps[reach + away]
+            down = image[y - away] if y >= away else outside
+            up = image[y + away] if y + away < ny else outside
+            for x in range(nx):
+                target[x] += weight * (down[x] + up[x])

@@ -104,7 +104,8 @@ def find_compact(
     """
     psf_sigma = fwhm_px / FWHM_PER_SIGMA
     weight = np.where(mask == 0, np.float32(1.0) / variance, np.float32(0.0))
-    seen = _filtered(pixels * weight, weight, psf_sigma)
+    weighted = pixels * weight
+    seen = _filtered(weighted, weight, psf_sigma)
     snr = seen.snr()
     typical = (
         np.float32(np.median(seen.bottom[mask == 0][::53])) if seen.bottom.any() else 0
@@ -116,7 +117,7 @@ def find_compact(
     if row.size == 0:
         return ()
     sign = np.sign(snr[row, col])
-    spread = _spread(pixels * weight, weight, row, col, psf_sigma)
+    spread = _spread(weighted, weight, row, col, psf_sigma)
     kept = _is_point(snr, row, col, sign, psf_sigma) & (spread < _MOST_SPREAD)
     bright = np.abs(snr[row, col]) > _STREAK_SIGMA * width
     kept |= bright & (spread < _STREAK_SPREAD)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from typing import Literal
 
 import numpy as np
@@ -95,12 +96,13 @@ def finish_difference(
     marked = mask_compact(
         mask, compact, fwhm_px=fwhm_px, radius_fwhm=settings.compact_radius_fwhm
     )
-    blank = (
-        (marked == 0)
-        & (np.abs(model) < _STAR_FOR_SKY * sky_noise)
-        & (total - variance < _NEGLIGIBLE * variance)
-    )
-    ratio = _noise_ratio(pixels, total, blank)
+
+    def is_blank(box: tuple[slice, slice]) -> BoolArray:
+        dark = np.abs(model[box]) < _STAR_FOR_SKY * sky_noise
+        calm = total[box] - variance[box] < _NEGLIGIBLE * variance[box]
+        return (marked[box] == 0) & dark & calm
+
+    ratio = _noise_ratio(pixels, total, is_blank)
     pixels[marked != 0] = 0.0
     return Difference(
         pixels=pixels,
@@ -115,7 +117,11 @@ def finish_difference(
     )
 
 
-def _noise_ratio(pixels: PixelArray, variance: PixelArray, blank: BoolArray) -> float:
+def _noise_ratio(
+    pixels: PixelArray,
+    variance: PixelArray,
+    is_blank: Callable[[tuple[slice, slice]], BoolArray],
+) -> float:
     """Return measured over predicted noise in blank sky.
 
     The median over small blocks, each about its own level: a ghost, a halo or a
@@ -129,7 +135,7 @@ def _noise_ratio(pixels: PixelArray, variance: PixelArray, blank: BoolArray) -> 
     sigmas = []
     for y, x in corners[::stride]:
         box = np.s_[y : y + _NOISE_BLOCK, x : x + _NOISE_BLOCK]
-        sky = blank[box]
+        sky = is_blank(box)
         if sky.sum() >= _FEWEST_SKY:
             pull = pixels[box][sky] / np.sqrt(variance[box][sky])
             sigmas.append(robust_sigma(pull))
