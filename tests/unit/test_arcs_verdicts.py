@@ -8,6 +8,7 @@ import pytest
 
 from latelight.arcs import verdicts
 from latelight.arcs.bright import bright_stars
+from latelight.arcs.evidence import Flanks
 from latelight.arcs.find import find_arcs
 from latelight.arcs.settings import ArcSettings
 from latelight.arcs.verdicts import ARTEFACTS
@@ -171,6 +172,19 @@ def test_masked_ridge_is_not_judged(rng, make_arc_difference, search):
     assert arcs[0].verdict.startswith("masked")
 
 
+def test_background_left_at_a_dead_border_is_no_arc(rng, make_arc_difference, search):
+    """A glow towards dead rows, bent as glows are: data on one side only."""
+    rows, cols = np.mgrid[0:512, 0:512]
+    glow = 9.0 * np.exp(-(rows - 60.0) / 12.0) * (cols / 512.0)
+    difference = lit(make_arc_difference(rng), np.where(rows >= 60, glow, 0.0))
+    difference.mask[:60] = 1
+
+    arcs = search(difference)
+
+    assert arcs
+    assert all(arc.verdict != "arc" for arc in arcs)
+
+
 @pytest.mark.parametrize(
     "change",
     [
@@ -211,8 +225,28 @@ def test_genuine_arcs_survive_every_question(
         (verdicts.masked, {"masked": 0.45}, {"masked": 0.35}),
         (verdicts.masked, {"masked": 0.75, "snr": 20.0}, {"masked": 0.65, "snr": 20.0}),
         (verdicts.stubby, {"length_px": 40.0}, {"length_px": 50.0}),
-        # 2.2 x (10 + 20) = 66 px.
-        (verdicts.stubby, {"shift_px": 20.0, "length_px": 64.0}, {"shift_px": 10.0}),
+        # 1.3 x (10 + 35) = 58 px; 4.4 x 20 = 88 px.
+        (verdicts.stubby, {"shift_px": 35.0, "length_px": 56.0}, {"shift_px": 35.0}),
+        (
+            verdicts.stubby,
+            {"lobe_width_px": 20.0, "length_px": 86.0},
+            {"lobe_width_px": 20.0, "length_px": 90.0},
+        ),
+        (
+            verdicts.ledge,
+            {"two_lobed": False, "flanks": Flanks(0.35, 0.1)},
+            {"two_lobed": False, "flanks": Flanks(0.45, 0.1)},
+        ),
+        (
+            verdicts.ledge,
+            {"two_lobed": False, "flanks": Flanks(1.0, 0.75)},
+            {"two_lobed": False, "flanks": Flanks(1.0, 0.65)},
+        ),
+        (
+            verdicts.ledge,
+            {"two_lobed": False, "flanks": Flanks(0.1, 2.0)},
+            {"flanks": Flanks(0.1, 2.0)},
+        ),
     ],
 )
 def test_questions_answer_by_their_limits(question, yes, no):
@@ -228,6 +262,7 @@ def test_questions_answer_by_their_limits(question, yes, no):
         "two_lobed": True,
         "masked": 0.0,
         "length_px": 100.0,
+        "flanks": Flanks(1.0, 0.0),
     }
 
     assert question(SimpleNamespace(**(facts | yes)))

@@ -22,11 +22,27 @@ from latelight.arcs.surroundings import (
 from latelight.arcs.tracing import block_significance
 from latelight.records import Difference, FloatArray
 
-__all__ = ["Evidence", "gather"]
+__all__ = ["Evidence", "Flanks", "gather"]
 
 
 _PIECE_BLOCKS = 3
 """Blocks that share one brightness: filaments are longer than 24 pixels."""
+
+
+@dataclass(frozen=True, slots=True)
+class Flanks:
+    """The ground beside a ridge, one to two and a half widths off its lobes.
+
+    Attributes
+    ----------
+    data : float
+        Fraction of unmasked pixels on the side that has fewer of them.
+    step : float
+        Difference of the two levels, in heights of the brighter lobe.
+    """
+
+    data: float
+    step: float
 
 
 @dataclass(frozen=True, slots=True)
@@ -57,6 +73,8 @@ class Evidence:
         Height of the ridge away from bright stars over its height everywhere.
     masked : float
         Fraction of the lobes' pixels that are masked or outside the frame.
+    flanks : Flanks
+        The ground on both sides of the lobes.
     settings : ArcSettings
         Limits of what an arc may be.
     stars : BrightStars
@@ -77,6 +95,7 @@ class Evidence:
     filled: float
     away_share: float
     masked: float
+    flanks: Flanks
     settings: ArcSettings
     stars: BrightStars
 
@@ -154,6 +173,7 @@ def gather(
         filled=filled(matched[core], power[core]),
         away_share=_away(difference, fit, half_height, stars),
         masked=_masked(sums, fit.pair),
+        flanks=_flanks(sums, fit.pair),
         settings=settings,
         stars=stars,
     )
@@ -201,3 +221,21 @@ def _masked(sums: PolarSums, lobes: Lobes) -> float:
     weight = lobes.profile(sums.signal.shape[1] // 2) ** 2
     good = sums.count.sum(axis=0) / (BLOCK_PX * sums.along.size)
     return float(1.0 - (good * weight).sum() / weight.sum())
+
+
+def _flanks(sums: PolarSums, lobes: Lobes) -> Flanks:
+    """Compare the ground on the two sides of the lobes."""
+    half = sums.signal.shape[1] // 2
+    offset = np.arange(-half, half + 1)
+    width = lobe_width(lobes.sigma_px, lobes.tail_px)
+    low, high = lobes.reach
+    levels, data = [], []
+    for beyond in (low - offset, offset - high):
+        side = (beyond > width) & (beyond < 2.5 * width)
+        weight = float(sums.weight[:, side].sum())
+        area = BLOCK_PX * sums.along.size * max(int(side.sum()), 1)
+        data.append(float(sums.count[:, side].sum()) / area)
+        levels.append(float(sums.signal[:, side].sum()) / max(weight, 1e-30))
+    height = max(lobes.positive_height, -lobes.negative_height)
+    step = abs(levels[1] - levels[0]) / max(height, 1e-30)
+    return Flanks(min(data), step)

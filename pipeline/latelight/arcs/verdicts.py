@@ -25,9 +25,16 @@ _SPIKE_CORES = 15.0
 _SINGLE_FACTOR = 2.0
 """How much more significant an arc of one lobe must be: most artefacts have one."""
 
-_LEAST_ASPECT = 2.2
-"""Length of an arc over its extent across, both lobes; of one lobe twice that.
-Half a per cent of simulated echoes fall short (measured), most ghosts do."""
+_LEAST_ASPECT = 1.3
+"""Length of an arc over its extent across, both lobes: fast echoes are as far apart
+as they are long, rims of ghosts hardly longer than they shifted."""
+_LEAST_SLENDERNESS = 4.4
+"""Length of an arc over the width of one lobe."""
+
+_GROUND = 0.4
+"""Fraction of good pixels needed on either side of a single lobe."""
+_LEDGE = 0.7
+"""Step of the ground across a single lobe, in its heights, that makes it an edge."""
 
 Extent = Literal["", "line", "ring"]
 
@@ -145,6 +152,12 @@ def lump(evidence: Evidence) -> bool:
     return share < (0.25 if enough else 0.45)
 
 
+def ledge(evidence: Evidence) -> bool:
+    """Tell whether its one lobe may be the edge of something wider."""
+    flanks = evidence.flanks
+    return not evidence.two_lobed and (flanks.data < _GROUND or flanks.step > _LEDGE)
+
+
 def single(evidence: Evidence) -> bool:
     """Tell whether it shows one lobe only and is not strong enough for that."""
     weak = evidence.snr < _SINGLE_FACTOR * evidence.settings.threshold
@@ -172,7 +185,7 @@ def stubby(evidence: Evidence) -> bool:
     least = max(
         evidence.settings.shortest_px,
         _LEAST_ASPECT * across,
-        2.0 * _LEAST_ASPECT * evidence.lobe_width_px,
+        _LEAST_SLENDERNESS * evidence.lobe_width_px,
     )
     return evidence.length_px < least
 
@@ -209,6 +222,7 @@ ARTEFACTS = (
     Artefact("wide: wider than any echo", wide),
     Artefact("stub: too short, or hardly longer than across", stubby),
     Artefact("lump: most of the signal comes from a short piece", lump),
+    Artefact("ledge: no lower ground on both sides of its one lobe", ledge),
     Artefact("single: one lobe only, and faint", single),
     Artefact("apart: lobes farther apart than any echo's", apart),
     Artefact("patches: most of its length does not shine", patches),
