@@ -28,6 +28,20 @@ def test_every_row_once(count, n_rows, keep_threads):
     assert (hits == 1).all()
 
 
+@pytest.mark.parametrize("count", [1, 2, 5])
+def test_items_keep_their_order_and_share_the_threads(count, keep_threads):
+    threads.set_threads(count)
+    results = threads.on_each(lambda item: (item, threads.n_threads()), ["b", "a"])
+    assert results == [("b", max(1, count // 2)), ("a", max(1, count // 2))]
+    assert threads.n_threads() == count
+
+
+def test_a_failing_item_is_not_swallowed(keep_threads):
+    threads.set_threads(2)
+    with pytest.raises(ZeroDivisionError):
+        threads.on_each(lambda item: 1 / item, [1, 0])
+
+
 def test_a_failing_block_is_not_swallowed(keep_threads):
     threads.set_threads(2)
 

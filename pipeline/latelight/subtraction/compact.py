@@ -184,7 +184,8 @@ def _peaks(
 ) -> tuple[IntArray, IntArray]:
     """Return local extremes of the S/N above a limit, away from the frame's rim."""
     rim = reach + 2
-    height = np.where(solid, np.abs(snr), np.float32(0.0))
+    height = np.abs(snr)
+    height *= solid
     row, col = np.nonzero(height[rim:-rim, rim:-rim] > limit)
     row, col = row + rim, col + rim
     top = np.ones(row.size, dtype=bool)
