@@ -26,6 +26,7 @@ ARC = {
     "height": 8.0,
 }
 SATURATED = np.uint16(MaskBit.SATURATED)
+SPIKE = np.uint16(MaskBit.SPIKE)
 
 
 def distance_from(x, y):
@@ -172,6 +173,29 @@ def test_masked_ridge_is_not_judged(rng, make_arc_difference, search):
     assert arcs[0].verdict.startswith("masked")
 
 
+def test_the_end_of_a_masked_spike_is_a_streak(rng, make_arc_difference, search):
+    """What a turned spike leaves beyond its mask: two narrow lines of either sign."""
+    along = distance_line(150.0, 250.0, 0.3 + np.pi / 2)
+    across = distance_line(150.0, 250.0, 0.3)
+    fading = np.where(along > 0.0, np.exp(-along / 60.0), 0.0)
+    lines = np.exp(-0.5 * ((across - 2.5) / 1.6) ** 2)
+    lines -= np.exp(-0.5 * ((across + 2.5) / 1.6) ** 2)
+    difference = lit(make_arc_difference(rng), 60.0 * fading * lines)
+    difference.mask[(along > 0.0) & (along < 80.0) & (np.abs(across) < 9.0)] = SPIKE
+
+    arcs = search(difference)
+
+    assert_only(arcs, "streak")
+
+
+def test_arc_crossed_by_a_masked_trail_survives(rng, make_arc_difference, search):
+    difference = make_arc_difference(rng, [ARC])
+    crossing = distance_line(ARC["x"], ARC["y"], ARC["angle"] + 1.0)
+    difference.mask[np.abs(crossing) < 10.0] = np.uint16(MaskBit.TRAIL)
+
+    assert [arc.verdict for arc in search(difference)][:1] == ["arc"]
+
+
 def test_background_left_at_a_dead_border_is_no_arc(rng, make_arc_difference, search):
     """A glow towards dead rows, bent as glows are: data on one side only."""
     rows, cols = np.mgrid[0:512, 0:512]
@@ -193,6 +217,7 @@ def test_background_left_at_a_dead_border_is_no_arc(rng, make_arc_difference, se
         {"sigma": 6.0, "tail": 8.0, "shift": 30.0},
         {"length": 56.0, "height": 14.0},
         {"length": 180.0, "curvature": 0.0, "height": 6.0},
+        {"length": 300.0, "curvature": 0.0, "sigma": 1.7, "height": 9.0},
         {"ratio": 0.4, "height": 12.0},
         {"curvature": -1 / 200, "height": 12.0},
     ],
@@ -232,6 +257,12 @@ def test_genuine_arcs_survive_every_question(
             {"lobe_width_px": 20.0, "length_px": 86.0},
             {"lobe_width_px": 20.0, "length_px": 90.0},
         ),
+        (verdicts.streak, {"streak_px": 45.0}, {"streak_px": 35.0}),
+        (
+            verdicts.streak,
+            {"streak_px": 55.0, "length_px": 200.0},
+            {"streak_px": 45.0, "length_px": 200.0},
+        ),
         (
             verdicts.ledge,
             {"two_lobed": False, "flanks": Flanks(0.35, 0.1)},
@@ -262,6 +293,7 @@ def test_questions_answer_by_their_limits(question, yes, no):
         "two_lobed": True,
         "masked": 0.0,
         "length_px": 100.0,
+        "streak_px": 0.0,
         "flanks": Flanks(1.0, 0.0),
     }
 

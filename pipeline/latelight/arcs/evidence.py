@@ -20,10 +20,14 @@ from latelight.arcs.surroundings import (
     ring_about,
 )
 from latelight.arcs.tracing import block_significance
+from latelight.masks import MaskBit
 from latelight.records import Difference, FloatArray
 
 __all__ = ["Evidence", "Flanks", "gather"]
 
+
+_CARRIED_ON_PX = 60.0
+_STREAKS = np.uint16(MaskBit.TRAIL | MaskBit.SPIKE | MaskBit.BLEED)
 
 _PIECE_BLOCKS = 3
 """Blocks that share one brightness: filaments are longer than 24 pixels."""
@@ -73,6 +77,9 @@ class Evidence:
         Height of the ridge away from bright stars over its height everywhere.
     masked : float
         Fraction of the lobes' pixels that are masked or outside the frame.
+    streak_px : float
+        Longest run of the ridge, carried on a little, under a masked trail, spike or
+        bleed, pixels.
     flanks : Flanks
         The ground on both sides of the lobes.
     settings : ArcSettings
@@ -95,6 +102,7 @@ class Evidence:
     filled: float
     away_share: float
     masked: float
+    streak_px: float
     flanks: Flanks
     settings: ArcSettings
     stars: BrightStars
@@ -173,6 +181,7 @@ def gather(
         filled=filled(matched[core], power[core]),
         away_share=_away(difference, fit, half_height, stars),
         masked=_masked(sums, fit.pair),
+        streak_px=_streak(difference, fit),
         flanks=_flanks(sums, fit.pair),
         settings=settings,
         stars=stars,
@@ -221,6 +230,18 @@ def _masked(sums: PolarSums, lobes: Lobes) -> float:
     weight = lobes.profile(sums.signal.shape[1] // 2) ** 2
     good = sums.count.sum(axis=0) / (BLOCK_PX * sums.along.size)
     return float(1.0 - (good * weight).sum() / weight.sum())
+
+
+def _streak(difference: Difference, fit: Fit) -> float:
+    """Return the longest run of the ridge under masked streaks, pixels."""
+    trace = fit.circle.trace(fit.first - _CARRIED_ON_PX, fit.last + _CARRIED_ON_PX)
+    ny, nx = difference.mask.shape
+    rows = np.clip(np.round(trace.y).astype(int), 0, ny - 1)
+    cols = np.clip(np.round(trace.x).astype(int), 0, nx - 1)
+    under = np.concatenate([[0], (difference.mask[rows, cols] & _STREAKS) != 0, [0]])
+    turns = np.flatnonzero(np.diff(under.astype(int)))
+    step = (fit.last - fit.first + 2.0 * _CARRIED_ON_PX) / max(trace.x.size - 1, 1)
+    return float(np.max(turns[1::2] - turns[::2], initial=0) * step)
 
 
 def _flanks(sums: PolarSums, lobes: Lobes) -> Flanks:

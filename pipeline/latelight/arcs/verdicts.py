@@ -22,6 +22,11 @@ _HALO_RADIUS_PX = 120.0
 _SPIKE_CORES = 15.0
 """A spike begins within this many radii of the star's saturated core."""
 
+_STREAK_PX = 40.0
+_STREAK_SHARE = 0.25
+"""A ridge is part of a streak that covers so many pixels and so much of it: trails
+that cross an arc cover less."""
+
 _SINGLE_FACTOR = 2.0
 """How much more significant an arc of one lobe must be: most artefacts have one."""
 
@@ -82,10 +87,15 @@ def trail(evidence: Evidence) -> bool:
     longest = evidence.settings.longest_px
     if line.length_px > 2.0 * longest and line.beyond_snr > 8.0 and line.filled > 0.8:
         return True
-    narrow = evidence.narrowest < 1.5
+    narrow = evidence.narrowest < 1.5 and not _paired(evidence)
     long = line.length_px > longest or line.to_edges
     lit = line.beyond_snr > 4.0 and line.filled > 0.6
     return (narrow or _alone(evidence)) and long and lit
+
+
+def streak(evidence: Evidence) -> bool:
+    """Tell whether it runs along a masked trail, spike or bleed, as their ends do."""
+    return evidence.streak_px > max(_STREAK_PX, _STREAK_SHARE * evidence.length_px)
 
 
 def spike(evidence: Evidence) -> bool:
@@ -205,6 +215,15 @@ def _alone(evidence: Evidence) -> bool:
     return evidence.single_snr**2 > 0.8 * evidence.pair_snr**2
 
 
+def _paired(evidence: Evidence) -> bool:
+    """Tell whether two lobes of like height lie clear of each other.
+
+    The side lobes of a brilliant trail are faint and touch it.
+    """
+    apart = evidence.shift_px > 2.0 * evidence.fwhm_px
+    return evidence.two_lobed and apart and evidence.weaker_share > 0.4
+
+
 def _height(evidence: Evidence) -> float:
     """Return the height of the brighter lobe, counts per pixel."""
     pair = evidence.fit.pair
@@ -214,6 +233,7 @@ def _height(evidence: Evidence) -> float:
 ARTEFACTS = (
     Artefact("trail: a straight line longer than any arc", trail, "line"),
     Artefact("masked: too much of it lies on bad pixels", masked),
+    Artefact("streak: runs along a masked trail or spike", streak),
     Artefact("spike: points at a bright star", spike),
     Artefact("halo: concentric with a bright star", halo),
     Artefact("residue: its light lies close to bright stars", residue),
