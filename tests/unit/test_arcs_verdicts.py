@@ -260,6 +260,11 @@ def test_genuine_arcs_survive_every_question(
         (verdicts.streak, {"streak_px": 45.0}, {"streak_px": 35.0}),
         (
             verdicts.streak,
+            {"streak_px": 60.0, "weaker_share": 0.3},
+            {"streak_px": 60.0, "weaker_share": 0.5},
+        ),
+        (
+            verdicts.streak,
             {"streak_px": 55.0, "length_px": 200.0},
             {"streak_px": 45.0, "length_px": 200.0},
         ),
@@ -294,6 +299,8 @@ def test_questions_answer_by_their_limits(question, yes, no):
         "masked": 0.0,
         "length_px": 100.0,
         "streak_px": 0.0,
+        "fwhm_px": 3.0,
+        "weaker_share": 0.3,
         "flanks": Flanks(1.0, 0.0),
     }
 

@@ -95,7 +95,8 @@ def trail(evidence: Evidence) -> bool:
 
 def streak(evidence: Evidence) -> bool:
     """Tell whether it runs along a masked trail, spike or bleed, as their ends do."""
-    return evidence.streak_px > max(_STREAK_PX, _STREAK_SHARE * evidence.length_px)
+    least = max(_STREAK_PX, _STREAK_SHARE * evidence.length_px)
+    return evidence.streak_px > least and not _paired(evidence)
 
 
 def spike(evidence: Evidence) -> bool:
