@@ -51,7 +51,19 @@ class SettingsError(LatelightError):
         return (type(self), (self.path, self.faults))
 
 
-class FrameError(LatelightError):
+class _PathError(LatelightError):
+    """Something is wrong with one file or folder."""
+
+    def __init__(self, path: Path, reason: str) -> None:
+        self.path = path
+        self.reason = reason
+        super().__init__(f"{path}: {reason}")
+
+    def __reduce__(self) -> tuple[object, ...]:
+        return (type(self), (self.path, self.reason))
+
+
+class FrameError(_PathError):
     """One frame cannot be used.
 
     Parameters
@@ -61,14 +73,6 @@ class FrameError(LatelightError):
     reason : str
         What is wrong with it, with the value received and the cure.
     """
-
-    def __init__(self, path: Path, reason: str) -> None:
-        self.path = path
-        self.reason = reason
-        super().__init__(f"{path}: {reason}")
-
-    def __reduce__(self) -> tuple[object, ...]:
-        return (type(self), (self.path, self.reason))
 
 
 class StageError(LatelightError):
@@ -91,7 +95,7 @@ class StageError(LatelightError):
         return (type(self), (self.stage, self.reason))
 
 
-class ProductError(LatelightError):
+class ProductError(_PathError):
     """A product cannot be written.
 
     Parameters
@@ -101,11 +105,3 @@ class ProductError(LatelightError):
     reason : str
         What the system said, and the cure.
     """
-
-    def __init__(self, path: Path, reason: str) -> None:
-        self.path = path
-        self.reason = reason
-        super().__init__(f"{path}: {reason}")
-
-    def __reduce__(self) -> tuple[object, ...]:
-        return (type(self), (self.path, self.reason))
