@@ -1,5 +1,7 @@
 """Designations, UCD words and checksums against the standards' own examples."""
 
+import io
+
 import numpy as np
 import pytest
 from astropy.io import fits
@@ -73,3 +75,41 @@ def test_checksums_sum_to_all_ones(tmp_path):
             unit = stored[info["hdrLoc"] : info["datLoc"]] + body
             assert ones_complement_sum(unit) == 0xFFFFFFFF, hdu.name
             assert hdu.header["DATASUM"] == str(ones_complement_sum(body)), hdu.name
+
+
+def encode(value):
+    """Encode a 32-bit sum as 16 letters: the rules of the FITS standard, app. J."""
+    columns = []
+    for byte in value.to_bytes(4, "big"):
+        quarter, rest = divmod(byte, 4)
+        letters = [quarter + 0x30] * 4
+        letters[0] += rest
+        while any(0x3A <= c <= 0x40 or 0x5B <= c <= 0x60 for c in letters):
+            for i in (0, 2):
+                if any(
+                    0x3A <= c <= 0x40 or 0x5B <= c <= 0x60 for c in letters[i : i + 2]
+                ):
+                    letters[i] += 1
+                    letters[i + 1] -= 1
+        columns.append(letters)
+    text = "".join(chr(columns[j][i]) for i in range(4) for j in range(4))
+    return text[-1] + text[:-1]
+
+
+def test_the_published_checksum_example():
+    """Sum 868229149 gives hcHjjc9ghcEghc9g (HEASARC checksum document, node 14)."""
+    assert 0xFFFFFFFF - 868229149 == 3426738146 == 0xCC3FDFE2
+    assert encode(0xFFFFFFFF - 868229149) == "hcHjjc9ghcEghc9g"
+    assert encode(0) == "0" * 16
+
+
+def test_written_checksums_are_the_recommended_spelling():
+    """The complement of the sum with CHECKSUM at 16 zeros, encoded."""
+    data = fits_bytes([fits.PrimaryHDU(), fits.ImageHDU(np.arange(99, dtype="i4"))])
+    with fits.open(io.BytesIO(data)) as hdus:
+        places = [(hdu.fileinfo(), hdu.header["CHECKSUM"]) for hdu in hdus]
+    for place, spelling in places:
+        unit = data[place["hdrLoc"] : place["datLoc"] + place["datSpan"]]
+        assert unit.count(spelling.encode()) == 1
+        zeroed = unit.replace(spelling.encode(), b"0" * 16)
+        assert encode(0xFFFFFFFF - ones_complement_sum(zeroed)) == spelling
