@@ -58,23 +58,6 @@ def filter_rows(
 
 
 @njit(nogil=True, cache=True)
-def keep_best(
-    best: np.ndarray,
-    code: np.ndarray,
-    value: np.ndarray,
-    here: np.ndarray,
-    least: np.float32,
-    number: int,
-) -> None:
-    """Keep the greater of two rows where there is data, and which it was."""
-    name = np.int16(number)
-    for col in range(best.size):
-        better = here[col] > least and value[col] > best[col]
-        best[col] = value[col] if better else best[col]
-        code[col] = name if better else code[col]
-
-
-@njit(nogil=True, cache=True)
 def update_rows(
     best: np.ndarray,
     code: np.ndarray,
@@ -85,11 +68,11 @@ def update_rows(
     overlap: np.ndarray,
     inverse: np.ndarray,
     floor: float,
-    base: int,
+    number: int,
     first: int,
     last: int,
 ) -> None:
-    """Keep the strongest of one ridge and its pairs at every pixel.
+    """Keep the strongest of one ridge and its pairs at every pixel, and its number.
 
     ``steps[j] = (dy, dx)`` leads from the middle of pair j to its positive lobe;
     ``overlap[j]`` is the correlation of the two lobes, and the last step also
@@ -97,13 +80,14 @@ def update_rows(
     sigma^2 of the single ridge (0) and the pairs (1...).
     """
     n_steps, n_cols = steps.shape[0], best.shape[1]
-    far = n_steps - 1
     flank, least = np.float32(overlap[n_steps]), np.float32(floor)
-    half = np.float32(0.5)
+    half, name = np.float32(0.5), np.int16(number)
     value = np.empty(n_cols, np.float32)
     for row in range(first, last):
         y = row + margin
         here = power[y, margin : margin + n_cols]
+        middle = response[y, margin : margin + n_cols]
+        value[:] = np.float32(0.0)
         for j in range(n_steps):
             dy, dx = steps[j, 0], margin + steps[j, 1]
             ahead = response[y + dy, dx : dx + n_cols]
@@ -115,18 +99,19 @@ def update_rows(
             for col in range(n_cols):
                 rise = ahead[col] - behind[col]
                 noise = ahead_power[col] + behind_power[col] - rho * here[col]
-                value[col] = rise * rise / max(noise, least) * scale
-            keep_best(best[row], code[row], value, here, least, base + 1 + j)
-            if j == far:
-                rho, scale = np.float32(overlap[far]), np.float32(inverse[0])
-                middle = response[y, margin : margin + n_cols]
-                for col in range(n_cols):
-                    sides = ahead_power[col] + behind_power[col]
-                    rise = middle[col] - half * (ahead[col] + behind[col])
-                    noise = here[col] * (1 + half * rho - flank)
-                    noise += half * sides * (half - flank)
-                    value[col] = rise * rise / max(noise, least) * scale
-                keep_best(best[row], code[row], value, here, least, base)
+                gain = rise * rise / max(noise, least) * scale
+                value[col] = max(value[col], gain)
+        # The farthest pair's places are the single ridge's flanks.
+        share, scale = np.float32(1.0 + 0.25 * rho - flank), np.float32(inverse[0])
+        sides = half * (half - flank)
+        for col in range(n_cols):
+            rise = middle[col] - half * (ahead[col] + behind[col])
+            noise = here[col] * share
+            noise += sides * (ahead_power[col] + behind_power[col])
+            gain = max(rise * rise / max(noise, least) * scale, value[col])
+            better = here[col] > least and gain > best[row, col]
+            best[row, col] = gain if better else best[row, col]
+            code[row, col] = name if better else code[row, col]
 
 
 @njit(nogil=True, cache=True)

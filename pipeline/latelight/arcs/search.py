@@ -11,18 +11,21 @@ robust width.
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import fft, ndimage
+from numpy.typing import NDArray
+from scipy import fft
 
-from latelight.arcs._kernels import filter_rows, update_rows
+from latelight.arcs._kernels import update_rows
+from latelight.arcs.filtering import Ridge, Spectrum, spread, transform
 from latelight.arcs.pyramid import Level
 from latelight.records import FloatArray, PixelArray
-from latelight.threads import n_threads, over_rows
+from latelight.threads import n_threads, on_each
 
 __all__ = ["Seed", "search_level"]
+
+CodeArray = NDArray[np.int16]
 
 _LENGTHS = (8.0, 18.0)
 """Sigma along the ridge in units of sigma across; longer arcs lose little."""
@@ -30,8 +33,10 @@ _STEPS = (0.75, 1.5, 2.75)
 """Half the distance between the lobes of a pair, units of sigma across."""
 _CALIBRATION_POINTS = 5_000
 """Places whose responses calibrate a filter: their median is good to 1.7 %."""
-_ROWS_WORTH_THREADS = 700
-"""Fewer rows take less time than starting the threads (0.3 ms, measured)."""
+_MARGIN = int(np.ceil(max(_STEPS))) + 1
+"""Blocks around a level that a lobe may lie in."""
+_MOST_SHARES = 4
+"""Shares of the bank searched side by side; each holds its own maps."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -59,12 +64,19 @@ class Seed:
 
 
 @dataclass(frozen=True, slots=True)
-class _Ridge:
-    angle: float
-    length: float
+class _Found:
+    """Strongest response of a share of the bank at every place.
+
+    ``best`` is its square, ``code`` the ridge's number in the bank, ``widths``
+    the robust sigma of each single ridge.
+    """
+
+    best: PixelArray
+    code: CodeArray
+    widths: list[float]
 
 
-def _bank() -> list[_Ridge]:
+def _bank() -> list[Ridge]:
     """Return the ridges of one level, sigma across = 1 block.
 
     Angles are 2/length apart: half a step off, the overlap of two such Gaussians
@@ -73,7 +85,7 @@ def _bank() -> list[_Ridge]:
     bank = []
     for length in _LENGTHS:
         n_angles = int(np.ceil(np.pi * (length - 1.0 / length) / 2.0))
-        bank += [_Ridge(np.pi * i / n_angles, length) for i in range(n_angles)]
+        bank += [Ridge(np.pi * i / n_angles, length) for i in range(n_angles)]
     return bank
 
 
@@ -97,72 +109,59 @@ def search_level(
         Sigma across of the filters, pixels, and the median of their empirical
         widths (1 for white noise of the stated variance).
     """
-    margin = int(np.ceil(max(_STEPS))) + 1
     ny, nx = level.signal.shape
     # The pad keeps one edge's wrap-around off the other.
-    pad = 2 * margin + int(2.5 * max(_LENGTHS))
+    pad = 2 * _MARGIN + int(2.5 * max(_LENGTHS))
     shape = (fft.next_fast_len(ny + pad, True), fft.next_fast_len(nx + pad, True))
-    signal = _transform(level.signal, margin, shape)
-    weight = _transform(level.weight, margin, shape)
-    best = np.zeros((ny, nx), np.float32)
-    code = np.zeros((ny, nx), np.int16)
+    signal = transform(level.signal, margin=_MARGIN, shape=shape)
+    weight = transform(level.weight, margin=_MARGIN, shape=shape)
     bank = _bank()
-    widths = []
-    for index, ridge in enumerate(bank):
-        response = _filtered(signal, shape, ridge, squared=False)
-        power = _filtered(weight, shape, ridge, squared=True)
-        widths.append(_update(best, code, response, power, margin, ridge, index))
-    calibration = float(np.median([w[0] for w in widths]))
+    n_shares = min(n_threads(), _MOST_SHARES)
+    edges = [len(bank) * i // n_shares for i in range(n_shares + 1)]
+
+    def search(share: range) -> _Found:
+        return _strongest(signal, weight, bank, share, (ny, nx))
+
+    best, code, widths = _joined(on_each(search, list(map(range, edges, edges[1:]))))
     seeds = _peaks(best, code, bank, level.bin_px, threshold)
-    return seeds, (float(level.bin_px), calibration)
+    return seeds, (float(level.bin_px), float(np.median(widths)))
 
 
-def _transform(image: PixelArray, margin: int, shape: tuple[int, int]) -> PixelArray:
-    padded = np.zeros(shape, np.float32)
-    padded[margin : margin + image.shape[0], margin : margin + image.shape[1]] = image
-    return fft.rfft2(padded, workers=n_threads(), overwrite_x=True)
+def _strongest(
+    signal: Spectrum,
+    weight: Spectrum,
+    bank: list[Ridge],
+    share: range,
+    shape: tuple[int, int],
+) -> _Found:
+    """Search for a share of the bank."""
+    best, code = np.zeros(shape, np.float32), np.zeros(shape, np.int16)
+    widths = []
+    for number in share:
+        ridge = bank[number]
+        response, power = signal.response(ridge), weight.power(ridge)
+        widths.append(float(_update(best, code, response, power, ridge, number)[0]))
+    return _Found(best, code, widths)
 
 
-def _spread(kernel: Callable[[int, int], None], n_rows: int) -> None:
-    """Run a kernel over rows, in threads where starting them pays."""
-    if n_rows < _ROWS_WORTH_THREADS:
-        kernel(0, n_rows)
-    else:
-        over_rows(kernel, n_rows)
-
-
-def _filtered(
-    spectrum: PixelArray, shape: tuple[int, int], ridge: _Ridge, *, squared: bool
-) -> PixelArray:
-    """Convolve with the unit-sum Gaussian ridge, or with its square."""
-    half = 0.5 * (0.5 if squared else 1.0)
-    across, along = half, half * ridge.length**2
-    cosine, sine = np.cos(ridge.angle), np.sin(ridge.angle)
-    xx = across * cosine**2 + along * sine**2
-    yy = across * sine**2 + along * cosine**2
-    xy = (across - along) * sine * cosine
-    ky = 2.0 * np.pi * fft.fftfreq(shape[0])
-    kx = 2.0 * np.pi * fft.rfftfreq(shape[1])
-    product = np.empty_like(spectrum)
-
-    def multiply(first: int, last: int) -> None:
-        filter_rows(product, spectrum, ky, kx, xx, xy, yy, first, last)
-
-    _spread(multiply, shape[0])
-    image = fft.irfft2(product, s=shape, workers=n_threads(), overwrite_x=True)
-    if squared:  # the square of the unit-sum Gaussian sums to 1 / (4 pi s l)
-        image *= np.float32(1.0 / (4.0 * np.pi * ridge.length))
-    return image
+def _joined(shares: list[_Found]) -> tuple[PixelArray, CodeArray, list[float]]:
+    """Join shares; of equals the earlier counts, however many shares there are."""
+    best, code, widths = shares[0].best, shares[0].code, list(shares[0].widths)
+    for other in shares[1:]:
+        better = other.best > best
+        np.copyto(code, other.code, where=better)
+        np.maximum(best, other.best, out=best)
+        widths += other.widths
+    return best, code, widths
 
 
 def _update(
     best: PixelArray,
-    code: np.ndarray,
+    code: CodeArray,
     response: PixelArray,
     power: PixelArray,
-    margin: int,
-    ridge: _Ridge,
-    index: int,
+    ridge: Ridge,
+    number: int,
 ) -> FloatArray:
     direction = np.array([np.sin(ridge.angle), np.cos(ridge.angle)])
     steps = np.round(np.outer(_STEPS, direction)).astype(np.int64)
@@ -173,14 +172,14 @@ def _update(
     slip = np.concatenate([2.0 * along, along[-1:]]) / ridge.length
     overlap = np.exp(-0.25 * (reach**2 + slip**2))
     ny, nx = best.shape
-    inner = power[margin : margin + ny, margin : margin + nx]
+    inner = power[_MARGIN : _MARGIN + ny, _MARGIN : _MARGIN + nx]
     stride = max(1, round(np.sqrt(ny * nx / _CALIBRATION_POINTS)))
     sample = inner[::stride, ::stride]
     lit = sample[sample > 1e-3 * sample.max(initial=0.0)]
     if lit.size == 0:
         return np.ones(1 + len(_STEPS))
     floor = 0.1 * float(np.median(lit))
-    widths = _widths(response, power, margin, best.shape, steps, overlap, floor, stride)
+    widths = _widths(response, power, best.shape, steps, overlap, floor, stride)
 
     def update(first: int, last: int) -> None:
         update_rows(
@@ -188,24 +187,23 @@ def _update(
             code,
             response,
             power,
-            margin,
+            _MARGIN,
             steps,
             overlap,
             1.0 / widths**2,
             floor,
-            index * (1 + len(_STEPS)),
+            number,
             first,
             last,
         )
 
-    _spread(update, ny)
+    spread(update, ny)
     return widths
 
 
 def _widths(
     response: PixelArray,
     power: PixelArray,
-    margin: int,
     shape: tuple[int, int],
     steps: np.ndarray,
     overlap: FloatArray,
@@ -215,8 +213,8 @@ def _widths(
     """Return the robust sigma of each kind of response, on a sparse lattice."""
 
     def at(image: PixelArray, dy: int = 0, dx: int = 0) -> FloatArray:
-        rows = slice(margin + dy, margin + dy + shape[0], stride)
-        cols = slice(margin + dx, margin + dx + shape[1], stride)
+        rows = slice(_MARGIN + dy, _MARGIN + dy + shape[0], stride)
+        cols = slice(_MARGIN + dx, _MARGIN + dx + shape[1], stride)
         return image[rows, cols].astype(float)
 
     here, middle = at(power), at(response)
@@ -238,17 +236,23 @@ def _widths(
 
 def _peaks(
     best: PixelArray,
-    code: np.ndarray,
-    bank: list[_Ridge],
+    code: CodeArray,
+    bank: list[Ridge],
     bin_px: int,
     threshold: float,
 ) -> list[Seed]:
-    high = ndimage.maximum_filter(best, size=5, mode="constant")
-    rows, cols = np.nonzero((best == high) & (best > threshold**2))
+    # Highest of the 5 x 5 around, asked only where it is high enough.
+    rows, cols = np.nonzero(best > threshold**2)
+    around = np.pad(best, 2)
+    high = best[rows, cols]
+    peak = np.ones(rows.size, dtype=bool)
+    for dy, dx in np.ndindex(5, 5):
+        peak &= around[rows + dy, cols + dx] <= high
+    rows, cols = rows[peak], cols[peak]
     centre = 0.5 * (bin_px - 1)
     seeds = []
     for row, col in zip(rows.tolist(), cols.tolist(), strict=True):
-        ridge = bank[int(code[row, col]) // (1 + len(_STEPS))]
+        ridge = bank[int(code[row, col])]
         seeds.append(
             Seed(
                 float(np.sqrt(best[row, col])),
