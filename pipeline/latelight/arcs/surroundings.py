@@ -127,14 +127,17 @@ def follow_line(difference: Difference, fit: Fit, noise_ratio: float) -> Line:
     usable &= (rows >= first) & (rows <= last)
     usable &= np.abs(sums.along) > fit.half_length + BLOCK_PX
     beyond, beyond_power = (m[rows[usable], shifts[usable]] for m in (matched, power))
-    inside = np.nonzero(sums.count.sum(axis=1) > 0)[0]
+    inside = np.flatnonzero(sums.count.sum(axis=1) > 0)
+    to_edges = inside.size > 0 and bool(
+        first <= inside[0] + 2 and last >= inside[-1] - 2
+    )
     centre = 0.5 * (sums.along[int(first)] + sums.along[int(last)])
     return Line(
         length_px=(last - first + 1.0) * BLOCK_PX,
         snr=float(np.sqrt(gain)) / noise_ratio,
         beyond_snr=_snr(beyond, beyond_power) / noise_ratio,
         filled=filled(beyond, beyond_power),
-        to_edges=first <= inside[0] + 2 and last >= inside[-1] - 2,
+        to_edges=to_edges,
         circle=line.bent(slope, 0.0).moved(float(centre), 0.0),
     )
 
