@@ -280,8 +280,8 @@ def test_genuine_arcs_survive_every_question(
         ),
         (
             verdicts.ledge,
-            {"two_lobed": False, "flanks": Flanks(0.1, 2.0)},
-            {"flanks": Flanks(0.1, 2.0)},
+            {"single_snr": 9.2, "flanks": Flanks(0.1, 2.0)},
+            {"single_snr": 8.6, "flanks": Flanks(0.1, 2.0)},
         ),
     ],
 )
@@ -290,6 +290,7 @@ def test_questions_answer_by_their_limits(question, yes, no):
         "settings": SETTINGS,
         "snr": 10.0,
         "pair_snr": 10.0,
+        "single_snr": 7.5,
         "trimmed_snr": 8.0,
         "filled": 1.0,
         "lobe_width_px": 10.0,

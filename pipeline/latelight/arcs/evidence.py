@@ -35,7 +35,7 @@ _PIECE_BLOCKS = 3
 
 @dataclass(frozen=True, slots=True)
 class Flanks:
-    """The ground beside a ridge, one to two and a half widths off its lobes.
+    """The ground beside the brighter lobe, one to two and a half widths off.
 
     Attributes
     ----------
@@ -81,7 +81,7 @@ class Evidence:
         Longest run of the ridge, carried on a little, under a masked trail, spike or
         bleed, pixels.
     flanks : Flanks
-        The ground on both sides of the lobes.
+        The ground on both sides of the brighter lobe.
     settings : ArcSettings
         Limits of what an arc may be.
     stars : BrightStars
@@ -245,13 +245,12 @@ def _streak(difference: Difference, fit: Fit) -> float:
 
 
 def _flanks(sums: PolarSums, lobes: Lobes) -> Flanks:
-    """Compare the ground on the two sides of the lobes."""
+    """Compare the ground on the two sides of the brighter lobe."""
     half = sums.signal.shape[1] // 2
     offset = np.arange(-half, half + 1)
     width = lobe_width(lobes.sigma_px, lobes.tail_px)
-    low, high = lobes.reach
     levels, data = [], []
-    for beyond in (low - offset, offset - high):
+    for beyond in (lobes.brighter - offset, offset - lobes.brighter):
         side = (beyond > width) & (beyond < 2.5 * width)
         weight = float(sums.weight[:, side].sum())
         area = BLOCK_PX * sums.along.size * max(int(side.sum()), 1)

@@ -166,7 +166,8 @@ def lump(evidence: Evidence) -> bool:
 def ledge(evidence: Evidence) -> bool:
     """Tell whether its one lobe may be the edge of something wider."""
     flanks = evidence.flanks
-    return not evidence.two_lobed and (flanks.data < _GROUND or flanks.step > _LEDGE)
+    edge = flanks.data < _GROUND or flanks.step > _LEDGE
+    return edge and (_alone(evidence) or not evidence.two_lobed)
 
 
 def single(evidence: Evidence) -> bool:
