@@ -8,6 +8,7 @@ import numpy as np
 
 from latelight.arcs.bright import BrightStars
 from latelight.arcs.fit import BLOCK_PX, Fit, PolarSums, sum_along
+from latelight.arcs.footprint import box_around
 from latelight.arcs.lobes import Lobes
 from latelight.arcs.profiles import lobe_width
 from latelight.arcs.settings import ArcSettings
@@ -205,8 +206,10 @@ def _away(
     difference: Difference, fit: Fit, half_height: int, stars: BrightStars
 ) -> float:
     """Compare the ridge's height away from bright stars with that everywhere."""
+    trace = fit.circle.trace(-fit.half_length - BLOCK_PX, fit.half_length + BLOCK_PX)
+    box = box_around(difference.mask.shape, trace.x, trace.y, half_height + 2.0)
     mask = difference.mask.copy()
-    mask[stars.residues] |= np.uint16(1)
+    mask[box][stars.residues[box]] |= np.uint16(1)
     heights = []
     for where in (difference, replace(difference, mask=mask)):
         _, matched, power = block_significance(where, fit, half_height, fit.half_length)

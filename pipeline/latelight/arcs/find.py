@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from itertools import islice
 
 import numpy as np
 
@@ -18,6 +19,7 @@ from latelight.arcs.settings import ArcSettings
 from latelight.arcs.tracing import extend
 from latelight.arcs.verdicts import judge
 from latelight.records import Arc, Difference, FloatArray, StarList
+from latelight.threads import on_each
 
 __all__ = ["find_arcs"]
 
@@ -131,13 +133,14 @@ def _next_fit(
 
     A second start often finds the better optimum.
     """
-    best = fit_seed(difference, seeds[0], shapes, reach)
+    first = fit_seed(difference, seeds[0], shapes, reach)
     rest = seeds[1:]
-    if best is None:
+    if first is None:
         return None, rest
-    more = [seed for seed in rest if explains(best, seed)][: _FITS_A_PLACE - 1]
-    for seed in more:
-        fit = fit_seed(difference, seed, shapes, reach)
+    same = (seed for seed in rest if explains(first, seed))
+    more = list(islice(same, _FITS_A_PLACE - 1))
+    best = first
+    for fit in on_each(lambda seed: fit_seed(difference, seed, shapes, reach), more):
         if fit is not None and noise.snr(fit.pair) > noise.snr(best.pair):
             best = fit
     return best, [seed for seed in rest if seed not in more]

@@ -9,7 +9,7 @@ from latelight.arcs.geometry import Circle
 from latelight.masks import MaskBit
 from latelight.records import BoolArray, FloatArray, MaskArray
 
-__all__ = ["mask_disc", "mask_line", "mask_ridge", "on_ridge"]
+__all__ = ["box_around", "mask_disc", "mask_line", "mask_ridge", "on_ridge"]
 
 _MARGIN_PX = 6.0
 _EXPLAINED = np.uint16(MaskBit.COMPACT)
@@ -34,7 +34,7 @@ def mask_ridge(mask: MaskArray, fit: Fit) -> None:
     s = np.linspace(fit.first - _MARGIN_PX, fit.last + _MARGIN_PX, 23)
     x, y = fit.circle.point(s, np.zeros(s.size))
     low, high = fit.pair.reach
-    box = _box(mask.shape, x, y, max(-low, high) + flank_px(fit))
+    box = box_around(mask.shape, x, y, max(-low, high) + flank_px(fit))
     yy, xx = np.mgrid[box]
     s, u = fit.circle.coordinates(xx, yy)
     mask[box][on_ridge(fit, s, u)] |= _EXPLAINED
@@ -50,14 +50,15 @@ def mask_line(mask: MaskArray, line: Circle, half_width: float) -> None:
 
 def mask_disc(mask: MaskArray, x: float, y: float, radius: float) -> None:
     """Mask a disc, in place."""
-    box = _box(mask.shape, np.array([x]), np.array([y]), radius)
+    box = box_around(mask.shape, np.array([x]), np.array([y]), radius)
     yy, xx = np.mgrid[box]
     mask[box][np.hypot(xx - x, yy - y) <= radius] |= _EXPLAINED
 
 
-def _box(
+def box_around(
     shape: tuple[int, ...], x: FloatArray, y: FloatArray, pad: float
 ) -> tuple[slice, slice]:
+    """Return rows and columns within ``pad`` pixels of any of some places."""
     ny, nx = shape
     return (
         slice(max(int(y.min() - pad), 0), min(max(int(y.max() + pad) + 1, 0), ny)),

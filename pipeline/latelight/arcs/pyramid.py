@@ -6,7 +6,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from latelight.arcs._binning_kernels import block_sums, weighted_block_sums
 from latelight.records import Difference, PixelArray
+from latelight.threads import over_rows
 
 __all__ = ["Level", "base_bin", "build_pyramid"]
 
@@ -50,11 +52,7 @@ def build_pyramid(difference: Difference, *, widest_px: float) -> tuple[Level, .
         Full width at half maximum of the widest ridge wanted, pixels.
     """
     size = base_bin(difference.fwhm_px)
-    good = difference.mask == 0
-    weight = np.where(good, np.float32(1.0) / difference.variance, np.float32(0.0))
-    signal = _binned(difference.pixels * weight, size)
-    weight = _binned(weight, size)
-    levels = [Level(size, signal, weight)]
+    levels = [_finest(difference, size)]
     # A ridge of sigma one block serves widths up to sqrt(2) times its own.
     while 2.3548 * np.sqrt(2.0) * levels[-1].bin_px < widest_px:
         last = levels[-1]
@@ -64,9 +62,24 @@ def build_pyramid(difference: Difference, *, widest_px: float) -> tuple[Level, .
     return tuple(levels)
 
 
+def _finest(difference: Difference, size: int) -> Level:
+    shape = _blocks(difference.pixels.shape, size)
+    signal, weight = np.empty(shape, np.float32), np.empty(shape, np.float32)
+    pixels, variance, mask = difference.pixels, difference.variance, difference.mask
+
+    def add(first: int, last: int) -> None:
+        weighted_block_sums(pixels, variance, mask, size, signal, weight, first, last)
+
+    over_rows(add, shape[0])
+    return Level(size, signal, weight)
+
+
 def _binned(image: PixelArray, size: int) -> PixelArray:
     """Sum blocks; those that overhang the frame hold what is there."""
-    ny, nx = image.shape
-    full = np.pad(image, ((0, -ny % size), (0, -nx % size)))
-    rows, cols = full.shape[0] // size, full.shape[1] // size
-    return full.reshape(rows, size, cols, size).sum(axis=(1, 3))
+    total = np.empty(_blocks(image.shape, size), np.float32)
+    block_sums(image, size, total)
+    return total
+
+
+def _blocks(shape: tuple[int, ...], size: int) -> tuple[int, int]:
+    return -(-shape[0] // size), -(-shape[1] // size)

@@ -12,6 +12,7 @@ from latelight.arcs.footprint import mask_ridge
 from latelight.arcs.geometry import Circle
 from latelight.arcs.profiles import lobe_profile
 from latelight.records import Difference, FloatArray
+from latelight.threads import on_each
 
 __all__ = ["Line", "Ring", "filled", "follow_line", "follow_ring", "ring_about"]
 
@@ -145,13 +146,14 @@ def follow_line(difference: Difference, fit: Fit, noise_ratio: float) -> Line:
 def follow_ring(difference: Difference, fit: Fit, noise_ratio: float) -> Ring:
     """Look for the arc's own profile on the rest of every circle through it."""
     beyond = _without(difference, fit)
-    best = Ring(fit.circle.x, fit.circle.y, np.inf, 0.0, 0.0, 0, 0)
-    for radius in _RADII_PX:
-        for side in (1.0, -1.0):
-            ring = _ring(difference, beyond, fit, side * float(radius), noise_ratio)
-            if (ring.lit, ring.snr) > (best.lit, best.snr):
-                best = ring
-    return best
+
+    def follow(radius: float) -> Ring:
+        return _ring(difference, beyond, fit, radius, noise_ratio)
+
+    radii = [side * radius for radius in _RADII_PX.tolist() for side in (1.0, -1.0)]
+    nothing = Ring(fit.circle.x, fit.circle.y, np.inf, 0.0, 0.0, 0, 0)
+    # The first of equals wins.
+    return max([nothing, *on_each(follow, radii)], key=lambda r: (r.lit, r.snr))
 
 
 def ring_about(
