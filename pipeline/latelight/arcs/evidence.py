@@ -206,15 +206,22 @@ def _away(
     difference: Difference, fit: Fit, half_height: int, stars: BrightStars
 ) -> float:
     """Compare the ridge's height away from bright stars with that everywhere."""
+
+    def height(where: Difference) -> float:
+        _, matched, power = block_significance(where, fit, half_height, fit.half_length)
+        return float(matched.sum()) / max(float(power.sum()), 1e-30)
+
+    everywhere = height(difference)
+    if everywhere <= 0.0:
+        return 0.0
     trace = fit.circle.trace(-fit.half_length - BLOCK_PX, fit.half_length + BLOCK_PX)
     box = box_around(difference.mask.shape, trace.x, trace.y, half_height + 2.0)
+    near = stars.residues[box]
+    if not near.any():
+        return 1.0
     mask = difference.mask.copy()
-    mask[box][stars.residues[box]] |= np.uint16(1)
-    heights = []
-    for where in (difference, replace(difference, mask=mask)):
-        _, matched, power = block_significance(where, fit, half_height, fit.half_length)
-        heights.append(float(matched.sum()) / max(float(power.sum()), 1e-30))
-    return heights[1] / heights[0] if heights[0] > 0.0 else 0.0
+    mask[box][near] |= np.uint16(1)
+    return height(replace(difference, mask=mask)) / everywhere
 
 
 def _trimmed(matched: FloatArray, power: FloatArray) -> float:

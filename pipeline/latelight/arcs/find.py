@@ -2,8 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
-from itertools import islice
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -11,7 +10,7 @@ from latelight.arcs.bright import BrightStars, bright_stars
 from latelight.arcs.evidence import Evidence, gather
 from latelight.arcs.fit import Fit, Reach, fit_seed, refine_fit
 from latelight.arcs.lobes import Lobes
-from latelight.arcs.merging import explains, mask_explained
+from latelight.arcs.merging import explained, mask_explained
 from latelight.arcs.profiles import LobeShapes, coarse_shapes, lobe_width
 from latelight.arcs.pyramid import build_pyramid
 from latelight.arcs.search import Seed, search_level
@@ -19,7 +18,7 @@ from latelight.arcs.settings import ArcSettings
 from latelight.arcs.tracing import extend
 from latelight.arcs.verdicts import judge
 from latelight.records import Arc, Difference, FloatArray, StarList
-from latelight.threads import on_each
+from latelight.threads import n_threads, on_each
 
 __all__ = ["find_arcs"]
 
@@ -42,6 +41,35 @@ class _Noise:
     def at(self, sigma_px: float) -> float:
         """Return the ratio for one sigma."""
         return float(np.interp(sigma_px, self.sigma_px, self.ratio))
+
+
+@dataclass(frozen=True, slots=True)
+class _Fits:
+    """Fits at seeds as long as the mask stays, each made once."""
+
+    difference: Difference
+    shapes: LobeShapes
+    reach: Reach
+    made: dict[Seed, Fit | None] = field(default_factory=dict)
+
+    def at(self, seeds: list[Seed]) -> list[Fit | None]:
+        """Return the fits at some seeds, made side by side."""
+
+        def make(seed: Seed) -> Fit | None:
+            return fit_seed(self.difference, seed, self.shapes, self.reach)
+
+        new = [seed for seed in seeds if seed not in self.made]
+        self.made.update(zip(new, on_each(make, new), strict=True))
+        return [self.made[seed] for seed in seeds]
+
+    def first(self, seeds: list[Seed]) -> Fit | None:
+        """Return the fit at the first seed.
+
+        Most seeds come to nothing, so the next ones are fitted meanwhile.
+        """
+        if seeds[0] not in self.made:
+            self.at(seeds[: n_threads()])
+        return self.made[seeds[0]]
 
 
 def find_arcs(
@@ -78,12 +106,13 @@ def find_arcs(
     bright = bright_stars(difference, stars, least_snr=settings.bright_star_snr)
     # What one ridge explains is masked before the next is fitted.
     left = replace(difference, mask=difference.mask.copy())
+    fits = _Fits(left, shapes, reach)
     arcs: list[Arc] = []
     spoiled = True
     while seeds and spoiled:
         spoiled = False
         while seeds:
-            fit, seeds = _next_fit(left, seeds, shapes, reach, noise)
+            fit, seeds = _next_fit(fits, seeds, noise)
             if fit is None or noise.snr(fit.pair) < settings.threshold:
                 continue
             evidence = _evidence(left, fit, shapes, reach, noise, bright, settings)
@@ -92,6 +121,7 @@ def find_arcs(
             verdict, extent = judge(evidence)
             arcs.append(_arc(evidence, verdict))
             mask_explained(left.mask, evidence, extent=extent)
+            fits.made.clear()
             seeds = [seed for seed in seeds if not _masked(left, seed)]
             spoiled = spoiled or extent != ""
         # A trail or ghost outshines what lies beside it: look once more without.
@@ -123,24 +153,18 @@ def _evidence(
 
 
 def _next_fit(
-    difference: Difference,
-    seeds: list[Seed],
-    shapes: LobeShapes,
-    reach: Reach,
-    noise: _Noise,
+    fits: _Fits, seeds: list[Seed], noise: _Noise
 ) -> tuple[Fit | None, list[Seed]]:
     """Fit the first seed and a few more on the same ridge; return the best fit.
 
     A second start often finds the better optimum.
     """
-    first = fit_seed(difference, seeds[0], shapes, reach)
+    best = fits.first(seeds)
     rest = seeds[1:]
-    if first is None:
+    if best is None:
         return None, rest
-    same = (seed for seed in rest if explains(first, seed))
-    more = list(islice(same, _FITS_A_PLACE - 1))
-    best = first
-    for fit in on_each(lambda seed: fit_seed(difference, seed, shapes, reach), more):
+    more = explained(best, rest)[: _FITS_A_PLACE - 1]
+    for fit in fits.at(more):
         if fit is not None and noise.snr(fit.pair) > noise.snr(best.pair):
             best = fit
     return best, [seed for seed in rest if seed not in more]

@@ -16,18 +16,20 @@ from latelight.arcs.footprint import (
 from latelight.arcs.search import Seed
 from latelight.records import MaskArray
 
-__all__ = ["explains", "mask_explained"]
+__all__ = ["explained", "mask_explained"]
 
 _SAME_ANGLE = np.radians(25.0)
 """Ridges that cross at more than this are two; seeds are right to 15 degrees."""
 
 
-def explains(fit: Fit, seed: Seed) -> bool:
-    """Tell whether a seed is a piece of a fitted ridge: on it, and along it."""
-    s, u = fit.circle.coordinates(seed.x, seed.y)
-    turn = seed.angle - (fit.circle.angle - fit.circle.curvature * float(s))
-    along = abs(np.sin(turn)) < np.sin(_SAME_ANGLE)
-    return bool(on_ridge(fit, s, u)) and bool(along)
+def explained(fit: Fit, seeds: list[Seed]) -> list[Seed]:
+    """Return the seeds that are pieces of a fitted ridge: on it, and along it."""
+    places = np.array([(seed.x, seed.y, seed.angle) for seed in seeds])
+    x, y, angle = places.reshape(-1, 3).T
+    s, u = fit.circle.coordinates(x, y)
+    turn = angle - (fit.circle.angle - fit.circle.curvature * s)
+    along = np.abs(np.sin(turn)) < np.sin(_SAME_ANGLE)
+    return [seeds[i] for i in np.flatnonzero(on_ridge(fit, s, u) & along).tolist()]
 
 
 def mask_explained(mask: MaskArray, evidence: Evidence, *, extent: str) -> None:
