@@ -58,6 +58,24 @@ def filter_rows(
 
 
 @njit(nogil=True, cache=True)
+def keep_best(
+    best: np.ndarray,
+    code: np.ndarray,
+    value: np.ndarray,
+    here: np.ndarray,
+    least: np.float32,
+    number: int,
+) -> None:
+    """Keep the greater of two rows where there is data, and which it was."""
+    name = np.int16(number)
+    for col in range(best.size):
+        better = here[col] > least and value[col] > best[col]
+        best[col] = value[col] if better else best[col]
+        code[col] = name if better else code[col]
+
+
+# The check for division by zero would keep the loops from being vectorised.
+@njit(nogil=True, cache=True, error_model="numpy")
 def update_rows(
     best: np.ndarray,
     code: np.ndarray,
@@ -81,7 +99,7 @@ def update_rows(
     """
     n_steps, n_cols = steps.shape[0], best.shape[1]
     flank, least = np.float32(overlap[n_steps]), np.float32(floor)
-    half, name = np.float32(0.5), np.int16(number)
+    half = np.float32(0.5)
     value = np.empty(n_cols, np.float32)
     for row in range(first, last):
         y = row + margin
@@ -108,10 +126,9 @@ def update_rows(
             rise = middle[col] - half * (ahead[col] + behind[col])
             noise = here[col] * share
             noise += sides * (ahead_power[col] + behind_power[col])
-            gain = max(rise * rise / max(noise, least) * scale, value[col])
-            better = here[col] > least and gain > best[row, col]
-            best[row, col] = gain if better else best[row, col]
-            code[row, col] = name if better else code[row, col]
+            gain = rise * rise / max(noise, least) * scale
+            value[col] = max(value[col], gain)
+        keep_best(best[row], code[row], value, here, least, number)
 
 
 @njit(nogil=True, cache=True)
