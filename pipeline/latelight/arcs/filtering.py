@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 from scipy import fft
 
-from latelight.arcs._kernels import filter_rows
+from latelight.arcs._search_kernels import filter_rows
 from latelight.records import PixelArray
 from latelight.threads import n_threads, over_rows
 

@@ -17,7 +17,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import fft
 
-from latelight.arcs._kernels import update_rows
+from latelight.arcs._search_kernels import update_rows
 from latelight.arcs.filtering import Ridge, Spectrum, spread, transform
 from latelight.arcs.pyramid import Level
 from latelight.records import FloatArray, PixelArray
