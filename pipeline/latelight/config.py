@@ -99,7 +99,7 @@ def _with_absolute_paths(config: NightConfig, folder: Path) -> NightConfig:
                 os.path.join(glob.escape(str(folder)), pattern)  # noqa: PTH118
                 for pattern in config.night.frames
             ),
-            "output": str(folder / config.night.output),
+            "output": os.path.normpath(folder / config.night.output),
         }
     )
     pairs, origin = config.pairs, config.origin

@@ -202,3 +202,11 @@ def test_every_key_has_a_description_and_stands_in_the_file():
 @pytest.mark.parametrize("path", sorted(CONFIGS.glob("*.toml")), ids=lambda p: p.name)
 def test_the_settings_of_the_repository_load(path):
     load_config(path)
+
+
+def test_the_output_is_named_without_detours(tmp_path):
+    path = tmp_path / "configs" / "night.toml"
+    path.parent.mkdir()
+    path.write_text('[night]\nframes = ["a.fits"]\noutput = "../night"\n')
+
+    assert load_config(path).night.output == str(tmp_path.resolve() / "night")
