@@ -30,9 +30,12 @@ that cross an arc cover less."""
 _SINGLE_FACTOR = 2.0
 """How much more significant an arc of one lobe must be: most artefacts have one."""
 
-_LEAST_ASPECT = 1.3
-"""Length of an arc over its extent across, both lobes: fast echoes are as far apart
-as they are long, rims of ghosts hardly longer than they shifted."""
+_LEAST_ASPECT = 2.2
+_LEAST_ASPECT_PLAIN = 1.3
+"""Length of an arc over its extent across, both lobes.  Fast echoes may lie as far
+apart as they are long, but so do the rims of ghosts: short ones must be plain."""
+_PLAIN_FACTOR = 2.0
+"""How many times the threshold is plain."""
 _LEAST_SLENDERNESS = 4.4
 """Length of an arc over the width of one lobe."""
 
@@ -194,9 +197,10 @@ def stubby(evidence: Evidence) -> bool:
     across = evidence.lobe_width_px
     if evidence.two_lobed:
         across += evidence.shift_px
+    plain = evidence.snr > _PLAIN_FACTOR * evidence.settings.threshold
     least = max(
         evidence.settings.shortest_px,
-        _LEAST_ASPECT * across,
+        (_LEAST_ASPECT_PLAIN if plain else _LEAST_ASPECT) * across,
         _LEAST_SLENDERNESS * evidence.lobe_width_px,
     )
     return evidence.length_px < least
