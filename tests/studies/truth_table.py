@@ -284,6 +284,13 @@ def summarise(results):
         name = f"registration error, {low}+ stars: worst"
         table.at_most(name, errors, limit, "px", statistic=np.max)
     table.at_most(
+        "photometric scale error: rms",
+        [100 * abs(r.scale_error) for r in done],
+        0.5,
+        "%",
+        statistic=lambda v: np.sqrt(np.mean(np.square(v))),
+    )
+    table.at_most(
         "photometric scale error: worst",
         [100 * abs(r.scale_error) for r in done],
         0.5,

@@ -250,8 +250,8 @@ def test_genuine_arcs_survive_every_question(
         (verdicts.masked, {"masked": 0.45}, {"masked": 0.35}),
         (verdicts.masked, {"masked": 0.75, "snr": 20.0}, {"masked": 0.65, "snr": 20.0}),
         (verdicts.stubby, {"length_px": 40.0}, {"length_px": 50.0}),
-        # 2.2 x (10 + 20) = 66 px; 1.3 x (10 + 35) = 58 px when plain; 4.4 x 20 = 88.
-        (verdicts.stubby, {"shift_px": 20.0, "length_px": 64.0}, {"shift_px": 20.0}),
+        # 1.7 x (10 + 25) = 60 px; 1.3 x (10 + 35) = 58 px when plain; 4.4 x 20 = 88.
+        (verdicts.stubby, {"shift_px": 25.0, "length_px": 58.0}, {"shift_px": 25.0}),
         (
             verdicts.stubby,
             {"shift_px": 35.0, "length_px": 57.0, "snr": 16.0},

@@ -30,7 +30,7 @@ that cross an arc cover less."""
 _SINGLE_FACTOR = 2.0
 """How much more significant an arc of one lobe must be: most artefacts have one."""
 
-_LEAST_ASPECT = 2.2
+_LEAST_ASPECT = 1.7
 _LEAST_ASPECT_PLAIN = 1.3
 """Length of an arc over its extent across, both lobes.  Fast echoes may lie as far
 apart as they are long, but so do the rims of ghosts: short ones must be plain."""
