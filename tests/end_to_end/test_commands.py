@@ -179,11 +179,11 @@ def test_the_proper_method_runs_too(small_night, tmp_path):
     assert stem.with_name(stem.name + ".png").exists()
 
 
-def test_an_interrupt_keeps_what_was_finished(small_night, tmp_path):
-    """The first pair is finished, the second one is stopped."""
+def interrupted_run(settings, output):
+    """Stop a run of two pairs after its first; return its exit code and talk."""
     command = [
-        sys.executable, "-m", "latelight", "run", str(small_night / "night.toml"),
-        "--output", str(tmp_path / "out"),
+        sys.executable, "-m", "latelight", "run", str(settings),
+        "--output", str(output),
     ]  # fmt: skip
     with subprocess.Popen(
         command, stderr=subprocess.PIPE, stdout=subprocess.PIPE, text=True
@@ -193,11 +193,20 @@ def test_an_interrupt_keeps_what_was_finished(small_night, tmp_path):
         start = time.monotonic()
         _, stderr = run.communicate(timeout=60)
     assert time.monotonic() - start < 30
-    if "[2/2]" in stderr:
-        pytest.skip("the second pair was finished before the signal came")
-    assert run.returncode == 130
+    return run.returncode, stderr
+
+
+def test_an_interrupt_keeps_what_was_finished(small_night, tmp_path):
+    """The first pair is finished, the second one is stopped."""
+    for attempt in range(5):
+        output = tmp_path / f"out{attempt}"
+        code, stderr = interrupted_run(small_night / "night.toml", output)
+        # The signal may come too late, but not five times.
+        if "[2/2]" not in stderr:
+            break
+    assert code == 130
     assert "Traceback" not in stderr
-    pairs = Table.read(tmp_path / "out" / "pairs.ecsv")
+    pairs = Table.read(output / "pairs.ecsv")
     assert sorted(pairs["status"]) == ["done", "failed"]
     assert any("interrupted" in reason for reason in pairs["reason"])
 

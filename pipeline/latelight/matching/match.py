@@ -135,13 +135,7 @@ def match_pair(
         ratio=ratio if roles.convolve_template else 1.0 / ratio,
         settings=settings,
     )
-    total = kernel_sum(fit.kernel)
-    if not total.min() > 0:
-        msg = (
-            f"the kernel's sum falls to {total.min():.3g}, it must be positive; lower "
-            "scale_degree in [matching], or leave the pair out"
-        )
-        raise StageError(_STAGE, msg)
+    total = _positive_sum(fit.kernel)
     matched = _convolved(sharp, fit.kernel)
     middle = float(fit.kernel.planes[0].sum())
     if roles.convolve_template:
@@ -173,6 +167,18 @@ def match_pair(
             radius=int(np.ceil(_JUDGED_IN_FWHM * fwhm[1])),
         ),
     )
+
+
+def _positive_sum(kernel: SpatialKernel) -> PixelArray:
+    """Return the kernel's sum at every pixel; refuse one that is not positive."""
+    total = kernel_sum(kernel)
+    if not total.min() > 0:
+        msg = (
+            f"the kernel's sum falls to {total.min():.3g}, it must be positive; lower "
+            "scale_degree in [matching], or leave the pair out"
+        )
+        raise StageError(_STAGE, msg)
+    return total
 
 
 def _roles(
