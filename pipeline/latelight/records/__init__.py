@@ -26,7 +26,9 @@ from latelight.records.arrays import (
 from latelight.records.difference import CompactResidual, Difference
 from latelight.records.frame import Frame, Plane
 from latelight.records.matching import MatchedPair, SpatialKernel, SpatialPsf
+from latelight.records.series import EpochSeries
 from latelight.records.source import OriginScore, Source
+from latelight.records.track import Track, TrackPoint, TrackSeed
 
 __all__ = [
     "Alignment",
@@ -35,6 +37,7 @@ __all__ = [
     "BoolArray",
     "CompactResidual",
     "Difference",
+    "EpochSeries",
     "FloatArray",
     "Frame",
     "IntArray",
@@ -49,4 +52,7 @@ __all__ = [
     "SpatialKernel",
     "SpatialPsf",
     "StarList",
+    "Track",
+    "TrackPoint",
+    "TrackSeed",
 ]

@@ -1,0 +1,1 @@
+"""What is made from finished nights, or before one: tables, maps and pictures."""
