@@ -7,6 +7,7 @@ import math
 import traceback
 import warnings
 from dataclasses import dataclass, field
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -22,6 +23,7 @@ from latelight.night.findings import Findings, find_all
 from latelight.night.journal import Journal
 from latelight.night.pairing import Pair
 from latelight.night.record import Event
+from latelight.night.series import Grid, SeriesPart, seed_on_grid, to_grid, write_part
 from latelight.products.rows import PairRow
 from latelight.records import (
     Alignment,
@@ -44,11 +46,24 @@ __all__ = ["Outcome", "PairTask", "load_frame", "process_pair"]
 
 @dataclass(frozen=True, slots=True)
 class PairTask:
-    """What a worker needs to work on one pair."""
+    """What a worker needs to work on one pair.
+
+    Attributes
+    ----------
+    pair : Pair
+        The two frames.
+    config : NightConfig
+        All settings.
+    sources : tuple of Source
+        Candidate origins.
+    scratch : Path or None
+        Where its difference goes, when it is an epoch of a series.
+    """
 
     pair: Pair
     config: NightConfig
     sources: tuple[Source, ...]
+    scratch: Path | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -67,6 +82,8 @@ class Outcome:
         Kept when the settings ask for it.
     wcs : astropy.wcs.WCS or None
         Of the difference.
+    part : SeriesPart or None
+        What it gives to the series of its field.
     """
 
     row: PairRow
@@ -74,6 +91,7 @@ class Outcome:
     events: tuple[Event, ...] = ()
     difference: Difference | None = None
     wcs: Any = None
+    part: SeriesPart | None = None
 
 
 def process_pair(task: PairTask) -> Outcome:
@@ -83,11 +101,11 @@ def process_pair(task: PairTask) -> Outcome:
     reason, anything else with its kind, and its traceback in the log.
     """
     journal = Journal(task.pair)
-    findings, difference, wcs = Findings(), None, None
+    findings, difference, wcs, part = Findings(), None, None, None
     with warnings.catch_warnings(record=True) as caught:
         warnings.simplefilter("always")
         try:
-            findings, difference, wcs = _run(task, journal)
+            findings, difference, wcs, part = _run(task, journal)
         except LatelightError as error:
             journal.close_failed(str(error))
         except Exception as error:
@@ -103,6 +121,7 @@ def process_pair(task: PairTask) -> Outcome:
         events=tuple(journal.events),
         difference=difference if keep else None,
         wcs=wcs if keep else None,
+        part=part,
     )
 
 
@@ -118,7 +137,9 @@ def load_frame(header: FrameHeader, config: NightConfig) -> Frame:
     return frame
 
 
-def _run(task: PairTask, journal: Journal) -> tuple[Findings, Difference, Any]:
+def _run(
+    task: PairTask, journal: Journal
+) -> tuple[Findings, Difference, Any, SeriesPart | None]:
     """Call the stages in their order."""
     config = task.config
     science, template = _read(task, journal)
@@ -126,6 +147,7 @@ def _run(task: PairTask, journal: Journal) -> tuple[Findings, Difference, Any]:
     alignment, resampled = _register(
         science, template, stars, template_stars, config, journal
     )
+    grid = _grid(template, template_stars, task.pair)
     del template  # a third of the memory, and no longer needed
     with journal.stage("matching"):
         matched = match_pair(
@@ -157,10 +179,74 @@ def _run(task: PairTask, journal: Journal) -> tuple[Findings, Difference, Any]:
         config=config,
         journal=journal,
     )
+    part = _leave_part(task, findings, difference, matched, alignment, grid, journal)
     journal.close_done(
         f"{len(findings.arcs)} ridges, {len(findings.candidates)} candidates"
     )
-    return findings, difference, science.wcs
+    return findings, difference, science.wcs, part
+
+
+def _grid(template: Frame, stars: StarList, pair: Pair) -> Grid:
+    """Return the pixels of the template, which all epochs of a series share."""
+    return Grid(
+        name=template.name,
+        field=template.field,
+        filter=template.filter,
+        chip=template.chip,
+        mjd=pair.template.mjd,
+        fwhm_px=stars.fwhm_px,
+        shape=template.plane.pixels.shape,
+        calibration=Calibration(template.wcs, template.zero_point),
+    )
+
+
+def _leave_part(
+    task: PairTask,
+    findings: Findings,
+    difference: Difference,
+    matched: MatchedPair,
+    alignment: Alignment,
+    grid: Grid,
+    journal: Journal,
+) -> SeriesPart | None:
+    """Leave the difference behind for the series of its field, where it has one."""
+    if task.scratch is None:
+        return None
+    pair, file = task.pair, task.scratch / f"{task.pair.name}.npy"
+    with journal.stage("series"):
+        science, template = matched.science.variance, matched.template.variance
+        share = float(np.median(template) / np.median(science + template))
+        epoch = to_grid(
+            difference,
+            alignment.pixel_map,
+            scale=matched.scale,
+            template_share=share,
+            shape=grid.shape,
+            settings=task.config.registration,
+        )
+        write_part(file, epoch)
+        seeds = tuple(
+            seed_on_grid(
+                moving.arc,
+                moving.motion,
+                index=moving.index,
+                pair=pair.name,
+                pixel_map=alignment.pixel_map,
+                epochs=(pair.science.mjd, pair.template.mjd),
+                fwhm_px=difference.fwhm_px,
+            )
+            for moving in findings.moving
+        )
+    return SeriesPart(
+        file=file,
+        grid=grid,
+        pair=pair.name,
+        name=pair.science.name,
+        mjd=pair.science.mjd,
+        fwhm_px=difference.fwhm_px,
+        template_variance=epoch.template_variance,
+        seeds=seeds,
+    )
 
 
 def _read(task: PairTask, journal: Journal) -> tuple[Frame, Frame]:

@@ -27,7 +27,7 @@ from latelight.records import (
     StarList,
 )
 
-__all__ = ["Finding", "Findings", "find_all"]
+__all__ = ["Finding", "Findings", "MovingArc", "find_all"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -47,6 +47,23 @@ class Finding:
 
 
 @dataclass(frozen=True, slots=True)
+class MovingArc:
+    """An arc worth a look, with its motion.
+
+    Attributes
+    ----------
+    index : int
+        Its ridge, an index of ``Findings.arcs``.
+    arc, motion : Arc, Motion
+        What was measured, in pixels.
+    """
+
+    index: int
+    arc: Arc
+    motion: Motion
+
+
+@dataclass(frozen=True, slots=True)
 class Findings:
     """All that a difference showed.
 
@@ -58,11 +75,14 @@ class Findings:
         Compact residuals.
     candidates : tuple of Finding
         The ridges worth a look.
+    moving : tuple of MovingArc
+        The same, in pixels.
     """
 
     arcs: tuple[ArcRow, ...] = ()
     residuals: tuple[ResidualRow, ...] = ()
     candidates: tuple[Finding, ...] = ()
+    moving: tuple[MovingArc, ...] = ()
 
 
 def find_all(
@@ -128,6 +148,7 @@ def find_all(
             for r in difference.compact
         ),
         tuple(candidates),
+        tuple(MovingArc(i, arcs[i], motion) for i, motion in moving.items()),
     )
 
 

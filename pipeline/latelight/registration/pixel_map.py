@@ -14,9 +14,11 @@ from scipy.interpolate import RectBivariateSpline
 
 from latelight.records import FloatArray, PixelMap
 
-__all__ = ["evaluate", "identity_map", "jacobian_determinant", "wcs_map"]
+__all__ = ["evaluate", "identity_map", "invert", "jacobian_determinant", "wcs_map"]
 
 _SPACING_PX = 32.0
+_INVERSE_DEGREE = 5
+_NEWTON_STEPS = 4
 
 
 def evaluate(
@@ -59,6 +61,81 @@ def identity_map(shape: tuple[int, int]) -> PixelMap:
     node_y, node_x = _nodes(shape[0]), _nodes(shape[1])
     map_y, map_x = np.meshgrid(node_y, node_x, indexing="ij")
     return PixelMap(node_y, node_x, map_y, map_x, error_px=0.0)
+
+
+def invert(pixel_map: PixelMap, *, shape: tuple[int, int]) -> PixelMap:
+    """Return the map from template pixels back to science pixels.
+
+    Parameters
+    ----------
+    pixel_map : PixelMap
+        Science pixels to template pixels.
+    shape : (int, int)
+        Shape (ny, nx) of the template frame.
+
+    Returns
+    -------
+    PixelMap
+        Exact to the splines where the science frame reaches, continued smoothly
+        beyond it.
+
+    Notes
+    -----
+    A polynomial of degree 5 of the inverse, fitted to the nodes, then Newton steps
+    on the splines at the template's own nodes.
+    """
+    grid = identity_map(shape)
+    wanted = np.array([grid.map_x.ravel(), grid.map_y.ravel()])
+    place = _rough_inverse(pixel_map, wanted)
+    along_x, along_y = _splines(pixel_map)
+    lowest = np.array([[pixel_map.node_x[0]], [pixel_map.node_y[0]]])
+    highest = np.array([[pixel_map.node_x[-1]], [pixel_map.node_y[-1]]])
+    for _ in range(_NEWTON_STEPS):
+        x, y = place
+        gap = wanted - np.array([along_x.ev(y, x), along_y.ev(y, x)])
+        slope = np.array(
+            [
+                [along_x.ev(y, x, dy=1), along_x.ev(y, x, dx=1)],
+                [along_y.ev(y, x, dy=1), along_y.ev(y, x, dx=1)],
+            ]
+        )
+        step = np.linalg.solve(slope.transpose(2, 0, 1), gap.T[..., None])[..., 0].T
+        # Beyond its nodes a spline stands still and knows nothing.
+        inside = ((place >= lowest) & (place <= highest)).all(axis=0)
+        place = np.where(inside, place + step, place)
+    size = grid.map_x.shape
+    return PixelMap(
+        grid.node_y,
+        grid.node_x,
+        place[1].reshape(size),
+        place[0].reshape(size),
+        error_px=pixel_map.error_px,
+    )
+
+
+def _rough_inverse(pixel_map: PixelMap, wanted: FloatArray) -> FloatArray:
+    """Return science pixels of template pixels, shape (2, n), by a polynomial."""
+    there = np.array([pixel_map.map_x.ravel(), pixel_map.map_y.ravel()])
+    middle = there.mean(axis=1, keepdims=True)
+    size = np.abs(there - middle).max()
+    node_y, node_x = np.meshgrid(pixel_map.node_y, pixel_map.node_x, indexing="ij")
+    here = np.array([node_x.ravel(), node_y.ravel()])
+    terms = _power_terms((there - middle) / size)
+    coefficients, *_ = np.linalg.lstsq(terms, here.T, rcond=None)
+    return (_power_terms((wanted - middle) / size) @ coefficients).T
+
+
+def _power_terms(point: FloatArray) -> FloatArray:
+    """Return u**i v**j for i + j up to the degree, shape (n, n_terms)."""
+    u, v = point
+    return np.stack(
+        [
+            u**i * v**j
+            for i in range(_INVERSE_DEGREE + 1)
+            for j in range(_INVERSE_DEGREE + 1 - i)
+        ],
+        axis=1,
+    )
 
 
 def wcs_map(
