@@ -5,48 +5,7 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-__all__ = ["filter_rows", "update_rows"]
-
-
-@njit(nogil=True, cache=True)
-def filter_rows(
-    out: np.ndarray,
-    spectrum: np.ndarray,
-    ky: np.ndarray,
-    kx: np.ndarray,
-    xx: float,
-    xy: float,
-    yy: float,
-    first: int,
-    last: int,
-) -> None:
-    """Multiply a spectrum by the Gaussian exp(-(xx kx^2 + 2 xy kx ky + yy ky^2)).
-
-    Columns are evenly spaced: along a row the Gaussian follows from two products a
-    column.  Below exp(-10) it is taken as zero.
-    """
-    n_cols = spectrum.shape[1]
-    step = kx[1] - kx[0]
-    decay = np.exp(-2.0 * xx * step * step)
-    for row in range(first, last):
-        v = ky[row]
-        # Where the exponent stays below 10: a stretch of columns, if any.
-        centre = -xy * v / xx
-        least = (yy - xy * xy / xx) * v * v
-        begin = end = 0
-        if least < 10.0:
-            reach = np.sqrt((10.0 - least) / xx)
-            begin = min(max(int(np.ceil((centre - reach) / step)), 0), n_cols)
-            end = min(max(int(np.floor((centre + reach) / step)) + 1, begin), n_cols)
-        out[row, :begin] = 0.0
-        out[row, end:] = 0.0
-        u = begin * step
-        value = np.exp(-(xx * u * u + 2.0 * xy * u * v + yy * v * v))
-        ratio = np.exp(-(xx * step * (2.0 * u + step) + 2.0 * xy * step * v))
-        for col in range(begin, end):
-            out[row, col] = spectrum[row, col] * np.float32(value)
-            value *= ratio
-            ratio *= decay
+__all__ = ["update_rows"]
 
 
 @njit(nogil=True, cache=True)

@@ -18,9 +18,9 @@ from numpy.typing import NDArray
 from scipy import fft
 
 from latelight.arcs._search_kernels import update_rows
-from latelight.arcs.filtering import Ridge, Spectrum, spread, transform
 from latelight.arcs.pyramid import Level
 from latelight.records import FloatArray, PixelArray
+from latelight.ridge_filter import Ridge, Spectrum, spread, transform
 from latelight.threads import n_threads, on_each
 
 __all__ = ["Seed", "search_level"]

@@ -1,4 +1,4 @@
-"""Convolution of one level with elongated Gaussians, by way of its spectrum."""
+"""Convolution of an image with elongated Gaussians, by way of its spectrum."""
 
 from __future__ import annotations
 
@@ -6,9 +6,9 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
+from numba import njit
 from scipy import fft
 
-from latelight.arcs._search_kernels import filter_rows
 from latelight.records import PixelArray
 from latelight.threads import n_threads, over_rows
 
@@ -72,7 +72,7 @@ class Spectrum:
         product = np.empty_like(self.values)
 
         def multiply(first: int, last: int) -> None:
-            filter_rows(product, self.values, ky, kx, xx, xy, yy, first, last)
+            _filter_rows(product, self.values, ky, kx, xx, xy, yy, first, last)
 
         spread(multiply, self.shape[0])
         # Columns where the exponent is above 10 at every ky hold zeros only.
@@ -105,3 +105,44 @@ def spread(kernel: Callable[[int, int], None], n_rows: int) -> None:
         kernel(0, n_rows)
     else:
         over_rows(kernel, n_rows)
+
+
+@njit(nogil=True, cache=True)
+def _filter_rows(
+    out: np.ndarray,
+    spectrum: np.ndarray,
+    ky: np.ndarray,
+    kx: np.ndarray,
+    xx: float,
+    xy: float,
+    yy: float,
+    first: int,
+    last: int,
+) -> None:
+    """Multiply a spectrum by the Gaussian exp(-(xx kx^2 + 2 xy kx ky + yy ky^2)).
+
+    Columns are evenly spaced: along a row the Gaussian follows from two products a
+    column.  Below exp(-10) it is taken as zero.
+    """
+    n_cols = spectrum.shape[1]
+    step = kx[1] - kx[0]
+    decay = np.exp(-2.0 * xx * step * step)
+    for row in range(first, last):
+        v = ky[row]
+        # Where the exponent stays below 10: a stretch of columns, if any.
+        centre = -xy * v / xx
+        least = (yy - xy * xy / xx) * v * v
+        begin = end = 0
+        if least < 10.0:
+            reach = np.sqrt((10.0 - least) / xx)
+            begin = min(max(int(np.ceil((centre - reach) / step)), 0), n_cols)
+            end = min(max(int(np.floor((centre + reach) / step)) + 1, begin), n_cols)
+        out[row, :begin] = 0.0
+        out[row, end:] = 0.0
+        u = begin * step
+        value = np.exp(-(xx * u * u + 2.0 * xy * u * v + yy * v * v))
+        ratio = np.exp(-(xx * step * (2.0 * u + step) + 2.0 * xy * step * v))
+        for col in range(begin, end):
+            out[row, col] = spectrum[row, col] * np.float32(value)
+            value *= ratio
+            ratio *= decay
