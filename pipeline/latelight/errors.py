@@ -6,7 +6,7 @@
     ├── SettingsError         the settings file: every fault at once      (exit 2)
     ├── FrameError            one input file cannot be used               (a failed row)
     ├── StageError            one pair cannot go on                       (a failed row)
-    └── ProductError          a product cannot be written                 (exit 2)
+    └── ProductError          a product cannot be written or read back    (exit 2)
 
 Wrong *arguments* of a function (shapes, ranges) are a plain ``ValueError``.
 A message names the file, key or argument, the rule, the value received, and
@@ -96,7 +96,7 @@ class StageError(LatelightError):
 
 
 class ProductError(_PathError):
-    """A product cannot be written.
+    """A product cannot be written, or read back.
 
     Parameters
     ----------

@@ -14,12 +14,21 @@ from latelight.products.columns import (
 )
 from latelight.products.cutouts import CARDS
 from latelight.products.rows import ArcRow, CandidateRow, PairRow, ResidualRow
+from latelight.products.track_columns import (
+    INTERPRETATION_COLUMNS,
+    TRACK_COLUMNS,
+    TRACK_POINT_COLUMNS,
+)
+from latelight.products.track_rows import InterpretationRow, TrackPointRow, TrackRow
 
 TABLES = [
     (CandidateRow, CANDIDATE_COLUMNS),
     (ArcRow, ARC_COLUMNS),
     (PairRow, PAIR_COLUMNS),
     (ResidualRow, RESIDUAL_COLUMNS),
+    (TrackRow, TRACK_COLUMNS),
+    (TrackPointRow, TRACK_POINT_COLUMNS),
+    (InterpretationRow, INTERPRETATION_COLUMNS),
 ]
 KINDS = {"str": "text", "int": "integer", "float": "real"}
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from latelight.products.column import DEC, EPOCHS, PAIR, RA, X, Y, integer, real, text
+from latelight.products.meaning_columns import MEANING_COLUMNS
 
 __all__ = ["CANDIDATE_COLUMNS"]
 
@@ -233,4 +234,6 @@ CANDIDATE_COLUMNS = (
         "pos.angDistance",
         "Angle on the sky between the arc and its source.",
     ),
+    *MEANING_COLUMNS,
+    text("track", "meta.id.assoc", "Id of the track on which it lies, or empty."),
 )

@@ -1,7 +1,9 @@
-"""What each column of the four tables means: one registry for files and papers.
+"""What each column of a table means: one registry for files and papers.
 
 The name, unit, description and UCD1+ word of a column are written here (and in
-:mod:`latelight.products.candidate_columns`) and nowhere else; the table writers
+:mod:`~latelight.products.candidate_columns`,
+:mod:`~latelight.products.track_columns` and
+:mod:`~latelight.products.meaning_columns`) and nowhere else; the table writers
 and the documentation read them.  UCD words are those of the IVOA list 1.5
 (2022-07-15); units are in a spelling that FITS and VOUnits share.
 """

@@ -69,6 +69,20 @@ CARDS = {
     "profile_chi2": ("PROFCHI2", "reduced chi-square of profile"),
     "curvature_radius": ("CURVRAD", "radius of the arc"),
     "source_separation": ("SRCSEP", "arc to source"),
+    "dust_distance": ("DUSTDIST", "dust to source"),
+    "dust_distance_err": ("DUSTDERR", "1 sigma"),
+    "scattering_angle": ("SCATANG", "0 is forward"),
+    "scattering_angle_err": ("SCATAERR", "1 sigma"),
+    "viewing_pa": ("VIEWPA", "source to dust, on the sky"),
+    "viewing_inclination": ("VIEWINC", "source to dust, from line to us"),
+    "viewing_inclination_err": ("VIEWIERR", "1 sigma"),
+    "flat_speed": ("FLATSPD", "of a sheet across the view"),
+    "flat_speed_err": ("FLATSERR", "1 sigma"),
+    "sheet_slope": ("SLOPE", "of the sheet, dz/drho"),
+    "sheet_slope_err": ("SLOPEERR", "1 sigma"),
+    "implied_age": ("IMPAGE", "for a sheet across the view"),
+    "implied_age_err": ("IMPAGERR", "1 sigma"),
+    "track": ("TRACK", "track on which it lies"),
 }
 
 

@@ -14,7 +14,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-__all__ = ["ArcRow", "CandidateRow", "PairRow", "ResidualRow", "Row"]
+__all__ = ["ArcRow", "CandidateRow", "PairRow", "ResidualRow"]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -79,6 +79,18 @@ class CandidateRow:
         Radius of the circle through the arc, arcsec; None for a straight one.
     source_separation : float or None
         Angle between arc and source, degrees.
+    dust_distance, dust_distance_err : float or None
+        What the arc means if it is lit by ``source``: this and the fields down to
+        ``implied_age_err`` are those of
+        :class:`latelight.products.track_rows.InterpretationRow`.
+    scattering_angle, scattering_angle_err : float or None
+    viewing_pa : float or None
+    viewing_inclination, viewing_inclination_err : float or None
+    flat_speed, flat_speed_err : float or None
+    sheet_slope, sheet_slope_err : float or None
+    implied_age, implied_age_err : float or None
+    track : str
+        Id of the track on which it lies, or empty.
     """
 
     id: str
@@ -123,6 +135,20 @@ class CandidateRow:
     profile_chi2: float | None
     curvature_radius: float | None
     source_separation: float | None
+    dust_distance: float | None = None
+    dust_distance_err: float | None = None
+    scattering_angle: float | None = None
+    scattering_angle_err: float | None = None
+    viewing_pa: float | None = None
+    viewing_inclination: float | None = None
+    viewing_inclination_err: float | None = None
+    flat_speed: float | None = None
+    flat_speed_err: float | None = None
+    sheet_slope: float | None = None
+    sheet_slope_err: float | None = None
+    implied_age: float | None = None
+    implied_age_err: float | None = None
+    track: str = ""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -300,6 +326,3 @@ class ResidualRow:
     magnitude: float | None
     snr: float
     fwhm_px: float
-
-
-Row = CandidateRow | ArcRow | PairRow | ResidualRow

@@ -1,4 +1,4 @@
-"""Write the four tables: ECSV for all, FITS and VOTable for candidates.
+"""Write the tables of pairs and arcs: ECSV for all, FITS and VOTable for candidates.
 
 The bytes depend on the rows and the package version alone: no dates, no host
 names, no order of arrival.  Text columns are never masked, since neither ECSV
@@ -28,11 +28,12 @@ from latelight.products.columns import (
     RESIDUAL_COLUMNS,
 )
 from latelight.products.fits_file import ascii_text, fits_bytes
-from latelight.products.rows import ArcRow, CandidateRow, PairRow, ResidualRow, Row
+from latelight.products.rows import ArcRow, CandidateRow, PairRow, ResidualRow
 
 __all__ = [
     "arc_table",
     "candidate_table",
+    "make_table",
     "pair_table",
     "residual_table",
     "to_ecsv",
@@ -52,24 +53,24 @@ _CONVENTIONS = (
 def candidate_table(rows: Sequence[CandidateRow]) -> astropy_table.Table:
     """Return the candidates as a table, most significant first."""
     ordered = sorted(rows, key=lambda row: (-row.snr, row.id))
-    return _table("candidates", ordered, CANDIDATE_COLUMNS)
+    return make_table("candidates", ordered, CANDIDATE_COLUMNS)
 
 
 def arc_table(rows: Sequence[ArcRow]) -> astropy_table.Table:
     """Return the ridges as a table, by pair, most significant first."""
     ordered = sorted(rows, key=lambda row: (row.pair, -row.snr, row.x, row.y))
-    return _table("arcs", ordered, ARC_COLUMNS)
+    return make_table("arcs", ordered, ARC_COLUMNS)
 
 
 def pair_table(rows: Sequence[PairRow]) -> astropy_table.Table:
     """Return the pairs as a table, by name."""
-    return _table("pairs", sorted(rows, key=lambda row: row.pair), PAIR_COLUMNS)
+    return make_table("pairs", sorted(rows, key=lambda row: row.pair), PAIR_COLUMNS)
 
 
 def residual_table(rows: Sequence[ResidualRow]) -> astropy_table.Table:
     """Return the compact residuals as a table, by pair, most significant first."""
     ordered = sorted(rows, key=lambda row: (row.pair, -abs(row.snr), row.x, row.y))
-    return _table("residuals", ordered, RESIDUAL_COLUMNS)
+    return make_table("residuals", ordered, RESIDUAL_COLUMNS)
 
 
 def to_ecsv(table: astropy_table.Table) -> bytes:
@@ -158,9 +159,25 @@ def write_tables(
     return tuple(folder / name for name, _, _ in files)
 
 
-def _table(
-    name: str, rows: Sequence[Row], columns: tuple[Column, ...]
+def make_table(
+    name: str, rows: Sequence[Any], columns: tuple[Column, ...]
 ) -> astropy_table.Table:
+    """Return rows as a table, in the order given.
+
+    Parameters
+    ----------
+    name : str
+        What the table is called inside its files.
+    rows : sequence of frozen records
+        All of one kind; their fields are the columns, in order.
+    columns : tuple of Column
+        What the columns mean.
+
+    Raises
+    ------
+    ValueError
+        If a value is NaN or infinite.
+    """
     by_field = list(zip(*map(astuple, rows), strict=True)) or [()] * len(columns)
     table = astropy_table.Table()
     for column, values in zip(columns, by_field, strict=True):

@@ -73,6 +73,17 @@ class TrackRow:
         Reduced chi-square of the joint fit.
     seeing : float or None
         Median FWHM of the epochs, arcsec.
+    source_separation : float or None
+        Angle between track and source, degrees.
+    dust_distance, dust_distance_err : float or None
+        What the track means if it is lit by ``source``: this and the fields below
+        are those of :class:`InterpretationRow`.
+    scattering_angle, scattering_angle_err : float or None
+    viewing_pa : float or None
+    viewing_inclination, viewing_inclination_err : float or None
+    flat_speed, flat_speed_err : float or None
+    sheet_slope, sheet_slope_err : float or None
+    implied_age, implied_age_err : float or None
     """
 
     id: str
@@ -118,6 +129,20 @@ class TrackRow:
     sense_odds: float | None
     chi2: float | None
     seeing: float | None
+    source_separation: float | None = None
+    dust_distance: float | None = None
+    dust_distance_err: float | None = None
+    scattering_angle: float | None = None
+    scattering_angle_err: float | None = None
+    viewing_pa: float | None = None
+    viewing_inclination: float | None = None
+    viewing_inclination_err: float | None = None
+    flat_speed: float | None = None
+    flat_speed_err: float | None = None
+    sheet_slope: float | None = None
+    sheet_slope_err: float | None = None
+    implied_age: float | None = None
+    implied_age_err: float | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
