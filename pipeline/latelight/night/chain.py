@@ -179,7 +179,10 @@ def _run(
         config=config,
         journal=journal,
     )
-    part = _leave_part(task, findings, difference, matched, alignment, grid, journal)
+    sky_noise = float(np.median(science.plane.variance))
+    part = _leave_part(
+        task, findings, difference, alignment, grid, matched.scale, sky_noise, journal
+    )
     journal.close_done(
         f"{len(findings.arcs)} ridges, {len(findings.candidates)} candidates"
     )
@@ -195,6 +198,7 @@ def _grid(template: Frame, stars: StarList, pair: Pair) -> Grid:
         chip=template.chip,
         mjd=pair.template.mjd,
         fwhm_px=stars.fwhm_px,
+        variance=float(np.median(template.plane.variance)),
         shape=template.plane.pixels.shape,
         calibration=Calibration(template.wcs, template.zero_point),
     )
@@ -204,9 +208,10 @@ def _leave_part(
     task: PairTask,
     findings: Findings,
     difference: Difference,
-    matched: MatchedPair,
     alignment: Alignment,
     grid: Grid,
+    scale: float,
+    sky_noise: float,
     journal: Journal,
 ) -> SeriesPart | None:
     """Leave the difference behind for the series of its field, where it has one."""
@@ -214,13 +219,13 @@ def _leave_part(
         return None
     pair, file = task.pair, task.scratch / f"{task.pair.name}.npy"
     with journal.stage("series"):
-        science, template = matched.science.variance, matched.template.variance
-        share = float(np.median(template) / np.median(science + template))
+        # Of the frames as read: convolving one only spreads its noise over pixels.
+        from_template = grid.variance * scale**2
         epoch = to_grid(
             difference,
             alignment.pixel_map,
-            scale=matched.scale,
-            template_share=share,
+            scale=scale,
+            template_share=from_template / (from_template + sky_noise),
             shape=grid.shape,
             settings=task.config.registration,
         )

@@ -64,6 +64,8 @@ class Grid:
         Its epoch, MJD.
     fwhm_px : float
         Its PSF width, pixels.
+    variance : float
+        Typical variance of one of its pixels, counts squared.
     shape : (int, int)
         Rows and columns.
     calibration : Calibration
@@ -76,6 +78,7 @@ class Grid:
     chip: str
     mjd: float
     fwhm_px: float
+    variance: float
     shape: tuple[int, int]
     calibration: Calibration
 
