@@ -12,7 +12,14 @@ from latelight.simulation.exposures import Exposure, Patch
 from latelight.simulation.truth import EchoTruth
 from latelight.sky import pixel_scale_arcsec
 
-__all__ = ["delay_gradient", "measure_echo", "ridge_size"]
+__all__ = [
+    "Ridge",
+    "delay_gradient",
+    "front_paths",
+    "measure_echo",
+    "resampled_variance",
+    "ridge_size",
+]
 
 # Bins along and across the ridge when an image is unrolled, arcsec.
 ALONG_BIN = 1.0
@@ -32,7 +39,7 @@ def delay_gradient(echo: Echo, east: FloatArray, north: FloatArray) -> FloatArra
 
 def ridge_size(echo: Echo, view: Viewpoint) -> tuple[float, float]:
     """Return peak (counts per pixel) and length (arcsec) of an echo's ridge."""
-    ridge = _Ridge(echo, view, render_echo(echo, view))
+    ridge = Ridge(echo, view, render_echo(echo, view))
     return ridge.peak, ridge.length
 
 
@@ -57,7 +64,7 @@ def measure_echo(
     """
     view = Viewpoint.of(echo, science)
     image = render_echo(echo, view)
-    ridge = _Ridge(echo, view, image)
+    ridge = Ridge(echo, view, image)
     years = age_yr(echo.source, template.mjd) - age_yr(echo.source, science.mjd)
     gradient = ridge.mean_gradient(echo, 0.5 * years)
     speed = 1.0 / float(np.hypot(*gradient))
@@ -94,8 +101,32 @@ def measure_echo(
     )
 
 
-class _Ridge:
-    """An echo's noise-free image unrolled along and across its front."""
+class Ridge:
+    """An echo's noise-free image unrolled along and across its front.
+
+    Parameters
+    ----------
+    echo : Echo
+        The echo.
+    view : Viewpoint
+        What it was rendered onto.
+    image : Patch
+        How it looks there.
+
+    Attributes
+    ----------
+    peak : float
+        Highest crest, smoothed over 5 arcsec along the ridge, counts per pixel.
+    length, width : float
+        Extent along the ridge above half of its peak, and full width at half
+        maximum across, arcsec.
+    line : float64 array, shape (2, m)
+        Points of the crest east and north of the cloud's centre, arcsec.
+    weight : float64 array, shape (m,)
+        Brightness of the crest there, sum 1.
+    middle : float64 array, shape (2,)
+        The point that halves the light along the line, to one bin.
+    """
 
     def __init__(self, echo: Echo, view: Viewpoint, image: Patch) -> None:
         rows, cols = np.nonzero(image.pixels > 1e-3 * image.pixels.max())
@@ -121,18 +152,18 @@ class _Ridge:
 
         # The ridge as a line: points along it, moved on to the crest across it.
         place = first + ALONG_BIN * (np.arange(bright[0], bright[-1] + 1) + 0.5)
-        self._weight = crest[bright[0] : bright[-1] + 1]
-        self._weight = self._weight / self._weight.sum()
+        self.weight = crest[bright[0] : bright[-1] + 1]
+        self.weight = self.weight / self.weight.sum()
         line = centre[:, None] + place * np.array([normal[1], -normal[0]])[:, None]
-        self._line = _follow(echo, line, age + lead / speed)
-        middle = place - self._weight @ place
-        self.middle = self._line[:, int(np.argmin(np.abs(middle)))]
+        self.line = line + front_paths(echo, line, age + lead / speed)
+        middle = place - self.weight @ place
+        self.middle = self.line[:, int(np.argmin(np.abs(middle)))]
 
     def mean_gradient(self, echo: Echo, years: float) -> FloatArray:
         """Return the delay's mean gradient along the ridge ``years`` from now."""
-        now = echo.delay(*self._line)
-        then = _follow(echo, self._line, now + years)
-        return delay_gradient(echo, *then) @ self._weight
+        now = echo.delay(*self.line)
+        then = self.line + front_paths(echo, self.line, now + years)
+        return delay_gradient(echo, *then) @ self.weight
 
 
 def _crest(along: FloatArray, flux: FloatArray) -> tuple[float, FloatArray]:
@@ -163,8 +194,25 @@ def _profile(ahead: FloatArray, flux: FloatArray) -> tuple[float, float]:
     return float(middle[top]), float(fine[right] - fine[left])
 
 
-def _follow(echo: Echo, points: FloatArray, delay: FloatArray | float) -> FloatArray:
-    """Move points, shape (2, n), along the front's normals to a given delay."""
+def front_paths(
+    echo: Echo, points: FloatArray, delay: FloatArray | float
+) -> FloatArray:
+    """Return how far points move along the front's normals to reach a delay.
+
+    Parameters
+    ----------
+    echo : Echo
+        The echo.
+    points : float64 array, shape (2, m)
+        Points east and north of the cloud's centre, arcsec.
+    delay : float64 array, shape (m,), or float
+        Delay to be reached by each, years.
+
+    Returns
+    -------
+    float64 array, shape (2, m)
+        Paths east and north, straight along the normal at the start, arcsec.
+    """
     direction = delay_gradient(echo, *points)
     direction /= np.hypot(*direction)
     path = np.zeros(points.shape[1])
@@ -173,7 +221,32 @@ def _follow(echo: Echo, points: FloatArray, delay: FloatArray | float) -> FloatA
         here = points + path * direction
         rate = (delay_gradient(echo, *here) * direction).sum(axis=0)
         path += (delay - echo.delay(*here)) / rate
-    return points + path * direction
+    return path * direction
+
+
+def resampled_variance(
+    own: PixelArray,
+    exposure: Exposure,
+    grid: Exposure,
+    where: tuple[slice, slice],
+) -> PixelArray:
+    """Return one exposure's pixel variance on a part of another's grid.
+
+    Parameters
+    ----------
+    own : float32 array, shape (ny, nx)
+        Variance of one pixel of ``exposure``, its counts squared.
+    exposure, grid : Exposure
+        Whose variance, and whose pixels and counts it shall be given in.
+    where : (slice, slice)
+        The part of the grid.
+    """
+    rows, cols = np.mgrid[where]
+    x, y = pixel_to_pixel(
+        grid.wcs, exposure.wcs, cols.astype(float), rows.astype(float)
+    )
+    scale = 10.0 ** (0.4 * (grid.zero_point - exposure.zero_point))
+    return scale**2 * ndimage.map_coordinates(own, [y, x], order=1, mode="nearest")
 
 
 def _bounds(
@@ -197,13 +270,8 @@ def _bounds(
     before = render_echo(echo, moved)
     signal = Patch(image.row, image.col, image.pixels - before.pixels)
     where, inside = signal.overlap(science.camera.shape)
-    rows, cols = np.mgrid[where]
-    x, y = pixel_to_pixel(
-        science.wcs, template.wcs, cols.astype(float), rows.astype(float)
-    )
-    scale = 10.0 ** (0.4 * (science.zero_point - template.zero_point))
-    variance = science_variance[where] + scale**2 * ndimage.map_coordinates(
-        template_variance, [y, x], order=1, mode="nearest"
+    variance = science_variance[where] + resampled_variance(
+        template_variance, template, science, where
     )
     energy = inside.astype(float) ** 2 / variance
     lobes = float(energy[inside > 0].sum()), float(energy[inside < 0].sum())

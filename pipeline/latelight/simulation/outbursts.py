@@ -24,10 +24,9 @@ from latelight.sky import offset_position, pixel_scale_arcsec, position_angle
 __all__ = ["EchoPlan", "Outburst", "flat_speed", "place_echoes", "random_outburst"]
 
 SPEEDS = (1.5, 30.0)
-SHIFTS_ARCSEC = (1.5, 15.0)
 LENGTHS_ARCSEC = (18.0, 75.0)
 STEEPEST_SLOPE = 2.5
-# The fainter lobe of a difference over the brighter one.
+# The fainter of two epochs over the brighter one.
 LEAST_LOBE_RATIO = 0.3
 
 
@@ -53,12 +52,22 @@ class EchoPlan:
         Range of the clouds' lengths along the front, arcsec.
     turn_deg : float
         1 sigma of the angle by which sheets turn the motion, degrees.
+    shifts : (float, float)
+        Range of the way from the first epoch to the last, arcsec.
+    depth : (float, float)
+        Range of the clouds' extent along the motion, in units of that way and the
+        widths of the light at its ends.
+    one_each : bool
+        Whether every echo has an outburst of its own, in order.
     """
 
     count: int
     brightness: tuple[float, float] = (21.5, 24.5)
     lengths: tuple[float, float] = (30.0, 85.0)
     turn_deg: float = 6.0
+    shifts: tuple[float, float] = (1.5, 15.0)
+    depth: tuple[float, float] = (1.0, 1.6)
+    one_each: bool = False
 
 
 def random_outburst(
@@ -131,8 +140,7 @@ def place_echoes(
     outbursts: tuple[Outburst, ...],
     *,
     plan: EchoPlan,
-    science: Exposure,
-    template: Exposure,
+    exposures: tuple[Exposure, ...],
 ) -> tuple[Echo, ...]:
     """Draw echoes well inside a frame that do not overlap.
 
@@ -141,11 +149,13 @@ def place_echoes(
     rng : numpy.random.Generator
         Source of the randomness.
     outbursts : tuple of Outburst
-        What lights them; the first lights most.
+        What lights them: one, or two of which the first lights most; as many as
+        echoes when each has its own.
     plan : EchoPlan
         Their number, brightness and length.
-    science, template : Exposure
-        The epochs between which they must move.
+    exposures : tuple of Exposure
+        The epochs at which they shine, in any order; the brightness asked for is
+        that of the first one given.
 
     Raises
     ------
@@ -157,22 +167,37 @@ def place_echoes(
     for _ in range(400 * plan.count):
         if len(echoes) == plan.count:
             break
-        first = len(outbursts) == 1 or rng.random() < 0.65
-        outburst = outbursts[0] if first else outbursts[1]
-        drawn = _draw(rng, outburst, plan, science, template)
+        outburst = _choose(rng, outbursts, None if not plan.one_each else len(echoes))
+        drawn = _draw(rng, outburst, plan, exposures)
         if drawn is None or any(drawn.overlaps(box) for box in boxes):
             continue
-        echo = _build(rng, outburst, drawn, plan, science, template)
+        echo = _build(rng, outburst, drawn, plan, exposures)
         if echo is not None:
             echoes.append(echo)
             boxes.append(drawn)
     if len(echoes) < plan.count:
         msg = (
-            f"count must fit into a frame of {science.camera.shape} pixels, got "
+            f"count must fit into a frame of {exposures[0].camera.shape} pixels, got "
             f"{plan.count}; ask for fewer echoes or a larger frame"
         )
         raise ValueError(msg)
     return tuple(echoes)
+
+
+def _choose(
+    rng: np.random.Generator, outbursts: tuple[Outburst, ...], turn: int | None
+) -> Outburst:
+    """Return the outburst whose turn it is, or one of two at random."""
+    if turn is not None:
+        return outbursts[turn]
+    first = len(outbursts) == 1 or rng.random() < 0.65
+    return outbursts[0] if first else outbursts[1]
+
+
+def _middle_and_years(exposures: tuple[Exposure, ...]) -> tuple[float, float]:
+    """Return the middle (MJD) and the length (Julian years) of a span of epochs."""
+    mjds = [exposure.mjd for exposure in exposures]
+    return 0.5 * (min(mjds) + max(mjds)), (max(mjds) - min(mjds)) / 365.25
 
 
 @dataclass(frozen=True, slots=True)
@@ -214,22 +239,21 @@ def _draw(
     rng: np.random.Generator,
     outburst: Outburst,
     plan: EchoPlan,
-    science: Exposure,
-    template: Exposure,
+    exposures: tuple[Exposure, ...],
 ) -> _Footprint | None:
     """Draw place and motion; None when the shift would be out of range."""
-    ny, nx = science.camera.shape
+    ny, nx = exposures[0].camera.shape
     margin = min(130.0, 0.2 * min(ny, nx))
     x, y = rng.uniform(margin, nx - margin), rng.uniform(margin, ny - margin)
-    ra, dec = (float(v) for v in science.wcs.all_pix2world(x, y, 0))
+    ra, dec = (float(v) for v in exposures[0].wcs.all_pix2world(x, y, 0))
     source = outburst.source
-    middle = 0.5 * (science.mjd + template.mjd)
+    middle, years = _middle_and_years(exposures)
     speed = flat_speed(source, ra, dec, middle) * 10.0 ** rng.uniform(-0.2, 0.2)
     turn = rng.normal(0.0, plan.turn_deg)
     length = rng.uniform(*plan.lengths)
-    shift = speed * abs(science.mjd - template.mjd) / 365.25
+    shift = speed * years
     inside = SPEEDS[0] < speed < SPEEDS[1]
-    if not inside or not SHIFTS_ARCSEC[0] < shift < SHIFTS_ARCSEC[1]:
+    if not inside or not plan.shifts[0] < shift < plan.shifts[1]:
         return None
     # Away from the source at the echo: the way to it, turned round.
     away = float(position_angle(ra, dec, source.ra, source.dec)) + 180.0
@@ -243,7 +267,7 @@ def _draw(
         speed=speed,
         length=length,
         reach=shift + 2.0 * width + 6.0,
-        scale=science.camera.scale_arcsec,
+        scale=exposures[0].camera.scale_arcsec,
     )
 
 
@@ -252,13 +276,12 @@ def _build(
     outburst: Outburst,
     place: _Footprint,
     plan: EchoPlan,
-    science: Exposure,
-    template: Exposure,
+    exposures: tuple[Exposure, ...],
 ) -> Echo | None:
     """Make the dust for one echo; None when it will not do."""
     source = outburst.source
     distance = float(source.distance_pc or 0.0)
-    age = age_yr(source, 0.5 * (science.mjd + template.mjd))
+    age = age_yr(source, _middle_and_years(exposures)[0])
     theta = PlateCoordinates(place.ra, place.dec).angle_from(
         source.ra, source.dec, np.zeros(1), np.zeros(1)
     )
@@ -288,27 +311,33 @@ def _build(
         texture=filamentary_texture(
             rng,
             along_arcsec=place.length,
-            across_arcsec=place.reach * float(rng.uniform(1.0, 1.6)),
+            across_arcsec=place.reach * float(rng.uniform(*plan.depth)),
             along_pa=place.pa + 90.0 + float(rng.normal(0.0, 8.0)),
         ),
         # Hills that push the front to and fro by 0.35 arcsec, 1 sigma.
         relief=random_relief(rng, height_pc=0.35 * pc_per_arcsec),
     )
     echo = Echo(source, outburst.light_curve, sheet, amplitude=1.0)
-    return _brighten(echo, float(rng.uniform(*plan.brightness)), science, template)
+    return _brighten(echo, float(rng.uniform(*plan.brightness)), exposures)
 
 
 def _brighten(
-    echo: Echo, brightness: float, science: Exposure, template: Exposure
+    echo: Echo, brightness: float, exposures: tuple[Exposure, ...]
 ) -> Echo | None:
-    """Set the dust column so that the ridge peaks as asked at the science epoch."""
-    view = Viewpoint.of(echo, science)
+    """Set the dust column so that the ridge peaks as asked at the first exposure.
+
+    None when the ridge is too short or too long there, or when the patchy cloud
+    makes it much fainter or brighter at another epoch.
+    """
+    first = exposures[0]
+    view = Viewpoint.of(echo, first)
     now, length = ridge_size(echo, view)
-    then, _ = ridge_size(echo, replace(view, mjd=template.mjd))
     if not LENGTHS_ARCSEC[0] < length < LENGTHS_ARCSEC[1]:
         return None
-    if not LEAST_LOBE_RATIO < then / now < 1.0 / LEAST_LOBE_RATIO:
-        return None
-    scale = pixel_scale_arcsec(science.wcs, view.psf_x, view.psf_y)
-    wanted = 10.0 ** (0.4 * (science.zero_point - brightness)) * scale**2
+    for other in exposures[1:]:
+        then, _ = ridge_size(echo, replace(view, mjd=other.mjd))
+        if not LEAST_LOBE_RATIO < then / now < 1.0 / LEAST_LOBE_RATIO:
+            return None
+    scale = pixel_scale_arcsec(first.wcs, view.psf_x, view.psf_y)
+    wanted = 10.0 ** (0.4 * (first.zero_point - brightness)) * scale**2
     return replace(echo, amplitude=wanted / now)

@@ -13,13 +13,16 @@ import numpy as np
 from astropy.io import fits
 
 from latelight.records import Source
+from latelight.simulation.backdrop import (
+    STARS_PER_ARCMIN2,
+    standard_header,
+)
 from latelight.simulation.conditions import random_camera, random_exposure
 from latelight.simulation.exposures import Camera, Exposure
 from latelight.simulation.objects import random_galaxies, random_stars
 from latelight.simulation.observing import Clutter, Scene, observe, pair_truth
 from latelight.simulation.outburst import LightCurve
 from latelight.simulation.outbursts import EchoPlan, Outburst, place_echoes
-from latelight.simulation.scenes import OBSERVATORY, STARS_PER_ARCMIN2
 from latelight.simulation.tables import (
     Row,
     echo_rows,
@@ -30,7 +33,6 @@ from latelight.simulation.tables import (
 )
 from latelight.simulation.truth import FrameTruth
 from latelight.simulation.writing import (
-    STANDARD_WORDS,
     ImageExtension,
     chip_words,
     exposure_words,
@@ -270,8 +272,7 @@ def _observe_chip(
             rng,
             (field.outburst,),
             plan=field.plan,
-            science=exposures[-1],
-            template=exposures[0],
+            exposures=(exposures[-1], exposures[0]),
         )
         scene = replace(scene, echoes=echoes)
     taken = [
@@ -293,9 +294,8 @@ def _write_plain(
     (chip,) = _observe_field(field)
     paths = []
     for epoch, exposure in enumerate(chip.exposures):
-        header = exposure_words(exposure, words=STANDARD_WORDS, observatory=OBSERVATORY)
-        header.update(chip_words(exposure, words=STANDARD_WORDS))
         path = folder / f"{_stem(field, epoch)}.fits.fz"
+        header = standard_header(exposure)
         paths.append(write_image(path, chip.pixels[epoch], header))
     _note(tables, field, chip, label="")
     return paths

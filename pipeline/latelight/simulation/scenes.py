@@ -7,18 +7,19 @@ from pathlib import Path
 from typing import Literal
 
 import numpy as np
-from astropy.io import fits
 
+from latelight.simulation.backdrop import (
+    Kind,
+    SimulatedFrame,
+    check_order,
+    random_backdrop,
+    random_clutter,
+    standard_header,
+)
 from latelight.simulation.conditions import random_camera, random_exposure
 from latelight.simulation.echoes import Echo
 from latelight.simulation.exposures import Exposure
-from latelight.simulation.objects import random_galaxies, random_stars
-from latelight.simulation.observing import (
-    Clutter,
-    Scene,
-    observe,
-    pair_truth,
-)
+from latelight.simulation.observing import observe, pair_truth
 from latelight.simulation.outbursts import (
     EchoPlan,
     Outburst,
@@ -27,38 +28,11 @@ from latelight.simulation.outbursts import (
     random_outburst,
 )
 from latelight.simulation.truth import PairTruth
-from latelight.simulation.writing import (
-    STANDARD_WORDS,
-    chip_words,
-    exposure_words,
-    write_image,
-)
+from latelight.simulation.writing import write_image
 
-__all__ = ["SimulatedFrame", "SimulatedPair", "random_pair"]
+__all__ = ["SimulatedPair", "random_outbursts", "random_pair"]
 
-Kind = Literal["echoes", "nuisances"]
 Epoch = Literal["science", "template"]
-
-# Stars of 13-23 mag per square arcminute at the default density.
-STARS_PER_ARCMIN2 = 36.0
-MARGIN_ARCSEC = 30.0
-OBSERVATORY = "Larkspur Hill 1.5-m"
-
-
-@dataclass(frozen=True, slots=True)
-class SimulatedFrame:
-    """One frame as a telescope delivers it.
-
-    Attributes
-    ----------
-    pixels : uint16 array, shape (ny, nx)
-        Counts, sky included.
-    header : astropy.io.fits.Header
-        Its header; the world coordinates there may be slightly wrong.
-    """
-
-    pixels: np.ndarray
-    header: fits.Header
 
 
 @dataclass(frozen=True, slots=True)
@@ -125,12 +99,7 @@ def random_pair(
     ValueError
         If ``kind`` is unknown or ``size`` too small.
     """
-    if kind not in ("echoes", "nuisances"):
-        msg = f'kind must be "echoes" or "nuisances", got {kind!r}'
-        raise ValueError(msg)
-    if size < 256:
-        msg = f"size must be at least 256 pixels, got {size}"
-        raise ValueError(msg)
+    check_order(kind, size)
     streams = [np.random.default_rng(s) for s in np.random.SeedSequence(seed).spawn(5)]
     conditions, sky, dust, first, second = streams
     outbursts, science, template = _random_epochs(
@@ -145,16 +114,16 @@ def random_pair(
     if kind == "echoes":
         room = min(1.0, (size / 1024) ** 2)
         plan = EchoPlan(count=max(1, round(int(dust.integers(6, 9)) * room)))
-        echoes = place_echoes(
-            dust, outbursts, plan=plan, science=science, template=template
-        )
-    scene = _random_sky(sky, science, n_stars, kind, echoes)
+        echoes = place_echoes(dust, outbursts, plan=plan, exposures=(science, template))
+    scene = random_backdrop(
+        sky, science, n_stars=n_stars, kind=kind, echoes=echoes, n_epochs=2
+    )
     taken = [
         observe(
             scene,
             exposure,
             epoch=epoch,
-            clutter=_random_clutter(rng, size, kind),
+            clutter=random_clutter(rng, size, kind),
             rng=rng,
         )
         for epoch, (exposure, rng) in enumerate(((template, first), (science, second)))
@@ -166,7 +135,7 @@ def random_pair(
         sources=tuple(o.source for o in outbursts),
     )
     template_frame, science_frame = (
-        SimulatedFrame(pixels=pixels, header=_standard_header(exposure))
+        SimulatedFrame(pixels=pixels, header=standard_header(exposure))
         for exposure, (pixels, _) in zip((template, science), taken, strict=True)
     )
     return SimulatedPair(template=template_frame, science=science_frame, truth=truth)
@@ -186,7 +155,7 @@ def _random_epochs(
     ra, dec = rng.uniform(0.0, 360.0), rng.uniform(-65.0, 65.0)
     mjd = rng.uniform(60_000.0, 61_500.0)
     diagonal = size * camera.scale_arcsec / 3600.0 * np.sqrt(0.5)
-    outbursts = _random_outbursts(rng, ra, dec, mjd, 1.2 * diagonal)
+    outbursts = random_outbursts(rng, ra, dec, mjd, 1.2 * diagonal)
     days = _random_interval(rng, outbursts, ra, dec, mjd)
     sharp = rng.uniform(1.0, 1.4) / camera.scale_arcsec
     broad = sharp * rng.uniform(1.06, 1.4)
@@ -201,15 +170,10 @@ def _random_epochs(
     return outbursts, science, template
 
 
-def _standard_header(exposure: Exposure) -> fits.Header:
-    header = exposure_words(exposure, words=STANDARD_WORDS, observatory=OBSERVATORY)
-    header.update(chip_words(exposure, words=STANDARD_WORDS))
-    return header
-
-
-def _random_outbursts(
+def random_outbursts(
     rng: np.random.Generator, ra: float, dec: float, mjd: float, clear_deg: float
 ) -> tuple[Outburst, ...]:
+    """Draw the one or two outbursts that light a field."""
     far = rng.random() < 0.5
     count = 2 if rng.random() < 0.15 else 1
     return tuple(
@@ -231,54 +195,3 @@ def _random_interval(
     speeds = [flat_speed(o.source, ra, dec, mjd) for o in outbursts]
     shift = 2.2 * 6.0 ** rng.random()
     return float(np.clip(shift / np.mean(speeds), 20 / 365.25, 4.0) * 365.25)
-
-
-def _random_sky(
-    rng: np.random.Generator,
-    exposure: Exposure,
-    n_stars: int | None,
-    kind: Kind,
-    echoes: tuple[Echo, ...],
-) -> Scene:
-    size, scale = exposure.camera.shape[0], exposure.camera.scale_arcsec
-    ra, dec = (float(v) for v in exposure.wcs.wcs.crval)
-    half = 0.5 * size * scale + MARGIN_ARCSEC
-    arcmin2 = (size * scale / 60.0) ** 2
-    wanted = STARS_PER_ARCMIN2 * arcmin2 if n_stars is None else n_stars
-    count = round(wanted * (2.0 * half / (size * scale)) ** 2)
-    many = kind == "nuisances"
-    return Scene(
-        stars=random_stars(
-            rng,
-            ra=ra,
-            dec=dec,
-            half_size_arcsec=half,
-            count=count,
-            n_epochs=2,
-            variable_share=0.04 if many else 0.015,
-            very_bright=int(rng.integers(1, 4)) if many else int(rng.random() < 0.3),
-        ),
-        galaxies=random_galaxies(
-            rng,
-            ra=ra,
-            dec=dec,
-            half_size_arcsec=half,
-            count=round(arcmin2 * (2.0 if many else 0.8)),
-        ),
-        echoes=echoes,
-    )
-
-
-def _random_clutter(rng: np.random.Generator, size: int, kind: Kind) -> Clutter:
-    area = (size / 1024) ** 2
-    if kind == "nuisances":
-        return Clutter(
-            trails=int(rng.integers(0, 3)),
-            cosmic_rays=int(rng.poisson(140 * area)),
-            movers=int(rng.poisson(4 * area)),
-        )
-    return Clutter(
-        trails=int(rng.random() < 0.25),
-        cosmic_rays=int(rng.poisson(70 * area)),
-        movers=int(rng.poisson(1 * area)),
-    )

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
@@ -12,7 +12,16 @@ from latelight.records import BoolArray, FloatArray, PixelArray, Source
 from latelight.simulation.astrometry import pixel_to_pixel
 from latelight.sky import offset_position, position_angle, wrap_180
 
-__all__ = ["EchoTruth", "FrameTruth", "PairTruth", "StarTruth", "TrailTruth", "decoys"]
+__all__ = [
+    "EchoTruth",
+    "FieldTruth",
+    "FrameTruth",
+    "PairTruth",
+    "StarTruth",
+    "TrackTruth",
+    "TrailTruth",
+    "decoys",
+]
 
 
 @dataclass(frozen=True, slots=True)
@@ -62,6 +71,85 @@ class EchoTruth:
     bound: float
     bound_positive: float
     bound_negative: float
+
+
+@dataclass(frozen=True, slots=True)
+class TrackTruth:
+    """One echo as all epochs of a field show it, noise-free.
+
+    The front is followed from half-way between the first and the last epoch: the
+    points of its bright ridge there each move along their own normal to where the
+    delay has grown or shrunk by the time to an epoch.  Means over points are
+    weighted with the ridge's brightness half-way.
+
+    Attributes
+    ----------
+    source : str
+        Name of the outburst that lights it.
+    mjd : float
+        Half-way between the first and the last epoch.
+    ra, dec, x, y : float
+        Middle of the bright ridge at ``mjd``, degrees, and pixels of the grid frame.
+    normal_pa : float
+        Position angle of the motion: mean gradient of the delay at ``mjd``, degrees.
+    speed_arcsec_yr : float
+        Mean way of the points from the first to the last epoch over the time
+        between: what a straight line through the places measures.
+    change_arcsec_yr2 : float
+        Change of the speed: 4 (a + b) / T^2 with the mean ways a and b from ``mjd``
+        to the first (negative) and the last epoch, T apart.
+    offsets_arcsec : tuple of float
+        Mean way from ``mjd`` to each epoch, negative before it.
+    ras, decs : tuple of float
+        The middle of the ridge moved by these along ``normal_pa``, degrees.
+    surface_brightness : tuple of float
+        Peak of the ridge at each epoch, mag/arcsec^2 above the atmosphere, blurred
+        by that epoch's PSF, smoothed over 5 arcsec along the ridge.
+    length_arcsec : float
+        Extent along the ridge above half of its peak, on the grid frame.
+    width_arcsec : float
+        Full width at half maximum across the ridge, PSF included, there.
+    depth_pc : float
+        Depth of the dust at the middle, pc from the source towards the observer.
+    bound_pairs : tuple of tuple of float, n x n
+        S/N of a perfect matched filter on the difference of epochs i and j,
+        ``sqrt(sum((f_i - f_j)^2 / (v_i + v_j)))`` over the pixels, f the echo and v
+        the variance of one pixel on the grid frame's pixels and flux scale.
+    bound_all : float
+        S/N of the perfect filter on all epochs when the static sky is free in every
+        pixel: ``sqrt(sum(sum_i w_i f_i^2 - (sum_i w_i f_i)^2 / sum_i w_i))`` with
+        w = 1 / v.
+    ridges : float64 array, shape (n, 2, m)
+        RA and Dec of the points of the ridge at each epoch, degrees.
+    weights : float64 array, shape (m,)
+        Their brightness half-way, sum 1.
+    """
+
+    source: str
+    mjd: float
+    ra: float
+    dec: float
+    x: float
+    y: float
+    normal_pa: float
+    speed_arcsec_yr: float
+    change_arcsec_yr2: float
+    offsets_arcsec: tuple[float, ...]
+    ras: tuple[float, ...]
+    decs: tuple[float, ...]
+    surface_brightness: tuple[float, ...]
+    length_arcsec: float
+    width_arcsec: float
+    depth_pc: float
+    bound_pairs: tuple[tuple[float, ...], ...]
+    bound_all: float
+    ridges: FloatArray = field(compare=False, repr=False)
+    weights: FloatArray = field(compare=False, repr=False)
+
+    @property
+    def bound_best(self) -> float:
+        """Return the S/N of a perfect matched filter on the best pair of epochs."""
+        return max(max(row) for row in self.bound_pairs)
 
 
 @dataclass(frozen=True, slots=True)
@@ -188,6 +276,42 @@ class PairTruth:
         return pixel_to_pixel(
             self.science.wcs,
             self.template.wcs,
+            np.asarray(x, dtype=float),
+            np.asarray(y, dtype=float),
+        )
+
+
+@dataclass(frozen=True, slots=True)
+class FieldTruth:
+    """Everything that is exactly known about the epochs of a field.
+
+    Attributes
+    ----------
+    frames : tuple of FrameTruth
+        The frames, in order of time.
+    mjds : tuple of float
+        Middles of the exposures, rising.
+    grid : int
+        Index of the frame whose pixels and flux scale the echoes' numbers are in.
+    sources : tuple of Source
+        The outbursts in the list an astronomer would use.
+    echoes : tuple of TrackTruth
+        The echoes, largest ``bound_all`` first.
+    """
+
+    frames: tuple[FrameTruth, ...]
+    mjds: tuple[float, ...]
+    grid: int
+    sources: tuple[Source, ...]
+    echoes: tuple[TrackTruth, ...]
+
+    def carry(
+        self, start: int, end: int, x: ArrayLike, y: ArrayLike
+    ) -> tuple[FloatArray, FloatArray]:
+        """Return the exact pixels of frame ``end`` of pixels of frame ``start``."""
+        return pixel_to_pixel(
+            self.frames[start].wcs,
+            self.frames[end].wcs,
             np.asarray(x, dtype=float),
             np.asarray(y, dtype=float),
         )
