@@ -17,13 +17,10 @@ from latelight.products.column import Column
 from latelight.products.fits_file import ascii_text, fits_bytes
 from latelight.products.rows import CandidateRow
 from latelight.products.settings import ProductSettings
+from latelight.products.windows import Window, window_around
 from latelight.records import ArcTrace, Difference, MaskArray, PixelArray, Plane
 
 __all__ = ["Cutout", "cut_out", "mask_cards", "template_offset_px", "write_cutout"]
-
-# Sky around the arc on every side: at least this, and this many PSF widths.
-_CONTEXT_PX = 20
-_CONTEXT_FWHM = 8.0
 
 # Header keyword (8 letters at most) and comment of each field of the row.
 CARDS = {
@@ -180,14 +177,11 @@ def cut_out(
     if len(shapes) != 1:
         msg = f"science, template and difference must have one shape, got {shapes}"
         raise ValueError(msg)
-    x0, y0, side = _window(row, trace, difference.fwhm_px, settings.max_cutout_px)
-
-    def cut(image: Any, fill: Any) -> Any:
-        return _cut(image, x0, y0, side, fill)
+    window = _window(row, trace, difference.fwhm_px, settings.max_cutout_px)
 
     def values(pixels: PixelArray, mask: MaskArray) -> PixelArray:
-        piece = cut(pixels, np.nan)
-        piece[(cut(mask, MaskBit.NO_DATA) & MaskBit.NO_DATA) != 0] = np.nan
+        piece: PixelArray = window.cut(pixels, np.nan)
+        piece[(window.cut(mask, MaskBit.NO_DATA) & MaskBit.NO_DATA) != 0] = np.nan
         return piece
 
     return Cutout(
@@ -195,12 +189,12 @@ def cut_out(
         template=values(template.pixels, template.mask),
         science=values(science.pixels, science.mask),
         difference=values(difference.pixels, difference.mask),
-        variance=cut(difference.variance, 1.0),
-        mask=cut(difference.mask, MaskBit.NO_DATA),
-        wcs=None if wcs is None else _shifted(wcs, x0, y0, side),
-        x0=x0,
-        y0=y0,
-        trace=replace(trace, x=trace.x - x0, y=trace.y - y0),
+        variance=window.cut(difference.variance, 1.0),
+        mask=window.cut(difference.mask, MaskBit.NO_DATA),
+        wcs=window.wcs(wcs),
+        x0=window.x0,
+        y0=window.y0,
+        trace=replace(trace, x=trace.x - window.x0, y=trace.y - window.y0),
         fwhm_px=difference.fwhm_px,
     )
 
@@ -264,44 +258,14 @@ def _card(column: Column, value: Any) -> fits.Card:
     return fits.Card(keyword, value, comment)
 
 
-def _window(
-    row: CandidateRow, trace: ArcTrace, fwhm_px: float, longest: int
-) -> tuple[int, int, int]:
-    """Return the first column, first row and side of the square to cut."""
+def _window(row: CandidateRow, trace: ArcTrace, fwhm_px: float, longest: int) -> Window:
+    """Return the square that holds the arc at both epochs."""
     radians = np.radians(row.normal_angle)
     shift = template_offset_px(row)
-    x = np.append(trace.x, [row.x, row.x + shift * np.cos(radians)])
-    y = np.append(trace.y, [row.y, row.y + shift * np.sin(radians)])
-    extent = max(np.ptp(x), np.ptp(y))
-    context = max(_CONTEXT_PX, _CONTEXT_FWHM * fwhm_px, abs(shift))
-    half = int(min(np.ceil(extent / 2 + context), (longest - 1) // 2))
-    centre_x, centre_y = (x.min() + x.max()) / 2, (y.min() + y.max()) / 2
-    return round(centre_x) - half, round(centre_y) - half, 2 * half + 1
-
-
-def _cut(image: Any, x0: int, y0: int, side: int, fill: Any) -> Any:
-    piece = np.full((side, side), fill, dtype=image.dtype)
-    ny, nx = image.shape
-    top, bottom = max(y0, 0), min(y0 + side, ny)
-    left, right = max(x0, 0), min(x0 + side, nx)
-    if top < bottom and left < right:
-        inside = (slice(top - y0, bottom - y0), slice(left - x0, right - x0))
-        piece[inside] = image[top:bottom, left:right]
-    return piece
-
-
-def _shifted(wcs: Any, x0: int, y0: int, side: int) -> Any:
-    shifted = wcs.deepcopy()
-    offset = np.array([x0, y0], dtype=float)
-    shifted.wcs.crpix = shifted.wcs.crpix - offset
-    if shifted.sip is not None:
-        shifted.sip = type(shifted.sip)(
-            shifted.sip.a,
-            shifted.sip.b,
-            shifted.sip.ap,
-            shifted.sip.bp,
-            shifted.sip.crpix - offset,
-        )
-    shifted.wcs.set()
-    shifted.pixel_shape = (side, side)
-    return shifted
+    return window_around(
+        np.append(trace.x, [row.x, row.x + shift * np.cos(radians)]),
+        np.append(trace.y, [row.y, row.y + shift * np.sin(radians)]),
+        fwhm_px=fwhm_px,
+        reach_px=abs(shift),
+        longest_px=longest,
+    )
