@@ -13,8 +13,7 @@ import latelight
 from latelight.masks import MASK_MEANINGS, MaskBit
 from latelight.products.atomic import write_bytes
 from latelight.products.candidate_columns import CANDIDATE_COLUMNS
-from latelight.products.column import Column
-from latelight.products.fits_file import ascii_text, fits_bytes
+from latelight.products.fits_file import fits_bytes, row_card
 from latelight.products.rows import CandidateRow
 from latelight.products.settings import ProductSettings
 from latelight.products.windows import Window, window_around
@@ -213,7 +212,8 @@ def write_cutout(path: Path, cutout: Cutout) -> None:
     primary = fits.PrimaryHDU()
     primary.header["CREATOR"] = f"latelight {latelight.__version__}"
     for column in CANDIDATE_COLUMNS:
-        primary.header.append(_card(column, getattr(cutout.row, column.name)), end=True)
+        value = getattr(cutout.row, column.name)
+        primary.header.append(row_card(column, value, *CARDS[column.name]), end=True)
     primary.header["CUTX0"] = (cutout.x0, "science column of the first pixel, from 0")
     primary.header["CUTY0"] = (cutout.y0, "science row of the first pixel, from 0")
     images = [
@@ -242,20 +242,6 @@ def mask_cards() -> list[tuple[str, str]]:
         (f"MBIT{line.bit.bit_length() - 1:02d}", f"{line.bit.name}: {line.meaning}")
         for line in MASK_MEANINGS
     ]
-
-
-def _card(column: Column, value: Any) -> fits.Card:
-    keyword, meaning = CARDS[column.name]
-    unit = f"[{column.unit}] " if column.unit else ""
-    comment = unit + meaning
-    if isinstance(value, str):
-        value = ascii_text(value)
-        # A card is 80 letters: a long name leaves no room for words about it.
-        taken = len("KEYWORD = '' / ") + len(value.replace("'", "''"))
-        comment = comment if taken + len(comment) <= 80 else ""
-    elif value is not None and column.format:
-        value = float(format(float(value), column.format))
-    return fits.Card(keyword, value, comment)
 
 
 def _window(row: CandidateRow, trace: ArcTrace, fwhm_px: float, longest: int) -> Window:

@@ -7,7 +7,9 @@ from typing import Any
 
 from astropy.io import fits
 
-__all__ = ["ascii_text", "fits_bytes"]
+from latelight.products.column import Column
+
+__all__ = ["ascii_text", "fits_bytes", "row_card"]
 
 
 def fits_bytes(hdus: list[Any]) -> bytes:
@@ -39,3 +41,29 @@ def fits_bytes(hdus: list[Any]) -> bytes:
 def ascii_text(text: str) -> str:
     """Return a text with the letters FITS does not know as backslash escapes."""
     return text.encode("ascii", "backslashreplace").decode("ascii")
+
+
+def row_card(column: Column, value: Any, keyword: str, meaning: str) -> fits.Card:
+    """Return the header card of one field of a row.
+
+    Parameters
+    ----------
+    column : Column
+        Gives unit and format.
+    value : str, int, float or None
+        The field.
+    keyword : str
+        Eight letters at most.
+    meaning : str
+        Comment; the unit is put before it.
+    """
+    unit = f"[{column.unit}] " if column.unit else ""
+    comment = unit + meaning
+    if isinstance(value, str):
+        value = ascii_text(value)
+        # A card is 80 letters: a long name leaves no room for words about it.
+        taken = len("KEYWORD = '' / ") + len(value.replace("'", "''"))
+        comment = comment if taken + len(comment) <= 80 else ""
+    elif value is not None and column.format:
+        value = float(format(float(value), column.format))
+    return fits.Card(keyword, value, comment)
