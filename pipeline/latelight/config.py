@@ -25,6 +25,7 @@ from latelight.errors import SettingsError
 from latelight.frames.settings import FrameSettings, HeaderWords
 from latelight.matching.settings import MatchingSettings
 from latelight.motion.settings import MotionSettings
+from latelight.motion.velocity_stack.settings import VelocityStackSettings
 from latelight.night.settings import TEMPLATE_CHOICES, NightSettings, PairSettings
 from latelight.origin.settings import OriginSettings, SourceSettings
 from latelight.products.settings import ProductSettings
@@ -47,6 +48,7 @@ class NightConfig(StageSettings):
     subtraction: SubtractionSettings = Field(default_factory=SubtractionSettings)
     arcs: ArcSettings = Field(default_factory=ArcSettings)
     motion: MotionSettings = Field(default_factory=MotionSettings)
+    velocity_stack: VelocityStackSettings = Field(default_factory=VelocityStackSettings)
     origin: OriginSettings = Field(default_factory=OriginSettings)
     products: ProductSettings = Field(default_factory=ProductSettings)
     sources: tuple[SourceSettings, ...] = ()

@@ -1,0 +1,1 @@
+"""Find moving ridges by stacking all epochs along trial velocities."""
