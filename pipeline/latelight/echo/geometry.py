@@ -25,19 +25,25 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from latelight.echo.arguments import (
+    as_floats,
     checked_age,
     checked_angle,
+    checked_depth,
     checked_distance,
     require,
 )
 from latelight.echo.constants import ARCSEC_PER_RADIAN, LIGHT_PC_PER_YEAR
+from latelight.echo.ellipsoid import Ellipsoid
 from latelight.records import FloatArray
 
 __all__ = [
+    "angle_deg",
     "delay_gradient",
     "delay_yr",
     "depth_error_pc",
+    "depth_partials",
     "depth_pc",
+    "front_speed",
     "light_speed_arcsec_yr",
     "observer_distance_pc",
     "projected_distance_pc",
@@ -96,9 +102,8 @@ def delay_yr(
     """
     theta = checked_angle(theta_deg)
     distance = checked_distance(distance_pc)
-    depth = np.asarray(depth_pc, dtype=float)
+    depth = checked_depth(depth_pc, distance)
     to_observer = distance - depth
-    require(to_observer > 0.0, "depth_pc", "less than distance_pc", depth)
     rho = to_observer * np.tan(theta)
     r = np.hypot(rho, depth)
     # r - z and l - (D - z) without the cancellation between large lengths.
@@ -131,8 +136,57 @@ def depth_pc(
     ValueError
         If an argument is out of its range.
     """
-    ellipsoid = _Ellipsoid(theta_deg, age_yr, distance_pc)
-    return ellipsoid.depth
+    return Ellipsoid(theta_deg, age_yr, distance_pc).depth
+
+
+def angle_deg(
+    depth_pc: ArrayLike, age_yr: ArrayLike, distance_pc: ArrayLike
+) -> FloatArray:
+    """Return the angle from the source at which dust of one depth echoes now.
+
+    The inverse of :func:`depth_pc`; the same on either side of the source.
+
+    Parameters
+    ----------
+    depth_pc : array_like of float
+        Depth of the dust, pc: from ``-c t / 2``, straight behind the source, to
+        less than the distance.
+    age_yr, distance_pc : array_like of float
+        As for :func:`depth_pc`.
+
+    Returns
+    -------
+    float64
+        Degrees, 0 <= angle < 90.
+
+    Raises
+    ------
+    ValueError
+        If an argument is out of its range, the dust lies at or behind the observer,
+        or so far behind the source that no light has returned from it.
+
+    Notes
+    -----
+    With ``S = D + c t``, from ``r - l = D (2 z - D) / S``::
+
+        rho**2 = c t (2 D + c t) (2 z + c t) (2 (D - z) + c t) / (2 S)**2
+    """
+    distance = checked_distance(distance_pc)
+    path = checked_age(age_yr) * LIGHT_PC_PER_YEAR
+    depth = checked_depth(depth_pc, distance)
+    to_observer = distance - depth
+    behind = 2.0 * depth + path
+    require(
+        behind >= -1e-12 * path,  # straight behind the source, as rounded
+        "depth_pc",
+        "at least -c t / 2",
+        depth,
+        cure="light from dust farther behind the source is still on its way",
+    )
+    square = path * (2.0 * distance + path) * np.maximum(behind, 0.0)
+    square = square * (2.0 * to_observer + path)
+    rho = np.sqrt(square) / (2.0 * (distance + path))
+    return np.degrees(np.arctan2(rho, to_observer))
 
 
 def depth_error_pc(
@@ -163,20 +217,39 @@ def depth_error_pc(
     ValueError
         If an argument is out of its range.
     """
-    e = _Ellipsoid(theta_deg, age_yr, distance_pc)
-    # z = N / (2 B), so dz = (dN - 2 z dB) / (2 B).
-    by_angle = (
-        e.sin * (2.0 * e.distance * (e.distance + e.path) + e.path**2)
-        - 2.0 * e.depth * e.distance * e.sin
+    slopes = depth_partials(theta_deg, age_yr, distance_pc)
+    errors = (theta_err_deg, age_err_yr, distance_err_pc)
+    return np.sqrt(
+        sum(
+            (slope * as_floats(error)) ** 2
+            for slope, error in zip(slopes, errors, strict=True)
+        )
     )
+
+
+def depth_partials(
+    theta_deg: ArrayLike, age_yr: ArrayLike, distance_pc: ArrayLike
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return the partial derivatives of :func:`depth_pc`.
+
+    Arguments and errors as for :func:`depth_pc`.
+
+    Returns
+    -------
+    by_angle, by_age, by_distance : float64
+        pc per degree, pc per Julian year, pc per pc.
+    """
+    e = Ellipsoid(theta_deg, age_yr, distance_pc)
+    # z = N / (2 B), so dz = (dN - 2 z dB) / (2 B).
+    twice = 2.0 * e.breadth
+    by_angle = 2.0 * e.distance * (e.distance + e.path - e.depth) + e.path**2
     by_path = 2.0 * (e.distance * e.versine - e.path * e.cos) - 2.0 * e.depth
     by_distance = e.versine * (4.0 * e.distance + 2.0 * e.path - 2.0 * e.depth)
-    terms = (
-        by_angle * np.radians(np.asarray(theta_err_deg, dtype=float)),
-        by_path * LIGHT_PC_PER_YEAR * np.asarray(age_err_yr, dtype=float),
-        by_distance * np.asarray(distance_err_pc, dtype=float),
+    return (
+        np.radians(e.sin * by_angle / twice),
+        LIGHT_PC_PER_YEAR * by_path / twice,
+        by_distance / twice,
     )
-    return np.sqrt(sum(term**2 for term in terms)) / (2.0 * e.breadth)
 
 
 def projected_distance_pc(
@@ -186,7 +259,7 @@ def projected_distance_pc(
 
     Arguments and errors as for :func:`depth_pc`.
     """
-    e = _Ellipsoid(theta_deg, age_yr, distance_pc)
+    e = Ellipsoid(theta_deg, age_yr, distance_pc)
     return e.to_observer * e.sin
 
 
@@ -197,7 +270,7 @@ def source_distance_pc(
 
     Arguments and errors as for :func:`depth_pc`.
     """
-    return _Ellipsoid(theta_deg, age_yr, distance_pc).to_source
+    return Ellipsoid(theta_deg, age_yr, distance_pc).to_source
 
 
 def observer_distance_pc(
@@ -207,7 +280,7 @@ def observer_distance_pc(
 
     Arguments and errors as for :func:`depth_pc`.
     """
-    return _Ellipsoid(theta_deg, age_yr, distance_pc).to_observer
+    return Ellipsoid(theta_deg, age_yr, distance_pc).to_observer
 
 
 def scattering_angle_deg(
@@ -219,7 +292,7 @@ def scattering_angle_deg(
     the source and at the observer.  Arguments and errors as for
     :func:`depth_pc`.
     """
-    e = _Ellipsoid(theta_deg, age_yr, distance_pc)
+    e = Ellipsoid(theta_deg, age_yr, distance_pc)
     at_source = np.arctan2(e.to_observer * e.sin, e.depth)
     return np.degrees(at_source + e.theta)
 
@@ -258,7 +331,7 @@ def speed_arcsec_yr(
         drho/d(ct)   = 1 / (rho/r + rho/l + s (z/r - (D - z)/l))
         dtheta/d(ct) = (D - z + s rho) / l**2 * drho/d(ct)
     """
-    e = _Ellipsoid(theta_deg, age_yr, distance_pc)
+    e = Ellipsoid(theta_deg, age_yr, distance_pc)
     s = np.asarray(slope, dtype=float)
     rho = e.to_observer * e.sin
     # z/r - cos(theta), without the cancellation far from the observer.
@@ -267,6 +340,23 @@ def speed_arcsec_yr(
     angle = (e.to_observer * e.cos + s * rho) / e.to_observer**2
     with np.errstate(divide="ignore"):
         return ARCSEC_PER_RADIAN * LIGHT_PC_PER_YEAR * angle / per_length
+
+
+def front_speed(
+    theta_deg: ArrayLike, age_yr: ArrayLike, distance_pc: ArrayLike
+) -> FloatArray:
+    """Return how fast the lit front recedes along one line of sight.
+
+    Arguments and errors as for :func:`depth_pc`.
+
+    Returns
+    -------
+    float64
+        Speed away from the observer in units of the speed of light, at least a
+        half: ``r / (r + l - D cos(theta))``, for a distant source ``r / (c t)``.
+    """
+    e = Ellipsoid(theta_deg, age_yr, distance_pc)
+    return e.to_source / (e.path + e.distance * e.versine)
 
 
 def delay_gradient(
@@ -303,37 +393,7 @@ def delay_gradient(
     cos(theta)``: ``D sin(theta) / r`` along ``l dtheta``, ``1 + (l - D
     cos(theta)) / r`` along ``l``.
     """
-    e = _Ellipsoid(theta_deg, age_yr, distance_pc)
+    e = Ellipsoid(theta_deg, age_yr, distance_pc)
     across = e.distance * e.sin / e.to_source
     per_tilt = (e.path + e.distance * e.versine) / e.to_source
     return across, per_tilt
-
-
-class _Ellipsoid:
-    """The point of the ellipsoid in one direction, lengths in pc.
-
-    With ``tau = c t`` and ``B = D (1 - cos(theta)) + tau``::
-
-        l = tau (2 D + tau) / (2 B)
-        r = (2 D (D + tau) (1 - cos(theta)) + tau**2) / (2 B)
-        z = (2 D (D + tau) (1 - cos(theta)) - tau**2 cos(theta)) / (2 B)
-
-    from ``l = D + tau - r``, the law of cosines and ``z = D - l cos(theta)``.
-    """
-
-    def __init__(
-        self, theta_deg: ArrayLike, age_yr: ArrayLike, distance_pc: ArrayLike
-    ) -> None:
-        self.theta = checked_angle(theta_deg)
-        self.distance = checked_distance(distance_pc)
-        self.path = checked_age(age_yr) * LIGHT_PC_PER_YEAR
-        self.sin = np.sin(self.theta)
-        self.cos = np.cos(self.theta)
-        self.versine = 2.0 * np.sin(self.theta / 2.0) ** 2
-        self.breadth = self.distance * self.versine + self.path
-        reach = 2.0 * self.distance * (self.distance + self.path) * self.versine
-        twice = 2.0 * self.breadth
-        self.to_observer = self.path * (2.0 * self.distance + self.path) / twice
-        self.to_source = (reach + self.path**2) / twice
-        self.depth = (reach - self.path**2 * self.cos) / twice
-        self.overshoot = self.path**2 * (1.0 + self.cos) / twice  # r - z
