@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
 
-from latelight.records import FloatArray
+from latelight.records import FloatArray, Source
 from latelight.simulation.backdrop import (
     Kind,
     SimulatedFrame,
@@ -28,7 +28,7 @@ from latelight.simulation.outbursts import (
     place_echoes,
 )
 from latelight.simulation.scenes import random_outbursts
-from latelight.simulation.truth import FieldTruth, FrameTruth
+from latelight.simulation.truth import FieldTruth, FrameTruth, decoys
 from latelight.simulation.writing import write_image
 
 __all__ = [
@@ -38,7 +38,8 @@ __all__ = [
     "random_cadence",
     "random_exposures",
     "random_field",
-    "way_of",
+    "usual_ways",
+    "widest_light",
 ]
 
 # Way of a usual echo between one epoch and the next, arcsec ...
@@ -54,6 +55,8 @@ INTERVALS_YR = (12.0 / 365.25, 1.5)
 UNEVENNESS = 0.35
 # Clouds of fields of many epochs end beyond the whole way of the light.
 CLOUD_DEPTHS = (1.2, 1.8)
+N_DECOYS = 6
+DECOYS_APART_DEG = 25.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -68,11 +71,14 @@ class SimulatedField:
         The frames, in order of time.
     truth : FieldTruth
         What is exactly known about them.
+    decoys : tuple of Source
+        Outbursts that lit nothing here, to be listed beside the true ones.
     """
 
     name: str
     frames: tuple[SimulatedFrame, ...]
     truth: FieldTruth
+    decoys: tuple[Source, ...] = ()
 
     def write(self, folder: Path, *, stem: str = "epoch") -> tuple[Path, ...]:
         """Write ``epoch_1.fits`` and so on; return their paths.
@@ -158,12 +164,21 @@ def random_field(
     plan = EchoPlan(
         count=count,
         brightness=brightness,
-        shifts=_ways(epochs),
+        shifts=usual_ways(epochs),
         depth=CLOUD_DEPTHS,
     )
-    return look_at_field(
+    field = look_at_field(
         outbursts, exposures, plan=plan, kind=kind, n_stars=n_stars, rngs=rest
     )
+    unlit = decoys(
+        conditions,
+        field.truth.sources,
+        ra=ra,
+        dec=dec,
+        count=N_DECOYS,
+        min_apart_deg=DECOYS_APART_DEG,
+    )
+    return replace(field, decoys=unlit)
 
 
 def random_cadence(
@@ -187,7 +202,7 @@ def random_cadence(
     float64 array, shape (epochs,)
         Days from the middle of the span, rising.
     """
-    low, high = way_of(epochs)
+    low, high = _way_of(epochs)
     if epochs > 2:
         low = min(max(low, SEVERAL_WIDTHS * np.hypot(width, SEEING_ARCSEC)), high)
     way = low * (high / low) ** rng.random()
@@ -198,11 +213,25 @@ def random_cadence(
     return days - 0.5 * span
 
 
-def way_of(epochs: int) -> tuple[float, float]:
+def _way_of(epochs: int) -> tuple[float, float]:
     """Return the range of a usual echo's way from the first epoch to the last."""
     if epochs == 2:
         return PAIR_SHIFTS_ARCSEC
     return STEPS_ARCSEC[0] * (epochs - 1), STEPS_ARCSEC[1] * (epochs - 1)
+
+
+def usual_ways(epochs: int) -> tuple[float, float]:
+    """Return the range of any echo's way: sheets change the speed by 60 %."""
+    low, high = _way_of(epochs)
+    return 0.6 * low, 1.6 * high
+
+
+def widest_light(epochs: int) -> float:
+    """Return the largest way of an echo while its light lasts, arcsec.
+
+    With more than two epochs the whole way must be several widths.
+    """
+    return np.inf if epochs == 2 else _way_of(epochs)[1] / SEVERAL_WIDTHS
 
 
 def random_exposures(
@@ -348,14 +377,8 @@ def _brief_outbursts(
 ) -> tuple[Outburst, ...]:
     """Draw outbursts whose echoes can move several widths over the epochs."""
     diagonal = camera.shape[0] * camera.scale_arcsec / 3600.0 * np.sqrt(0.5)
-    widest = np.inf if epochs == 2 else way_of(epochs)[1] / SEVERAL_WIDTHS
+    widest = widest_light(epochs)
     while True:
         outbursts = random_outbursts(rng, ra, dec, mjd, 1.2 * diagonal)
         if all(light_width(o, ra, dec, mjd) < widest for o in outbursts):
             return outbursts
-
-
-def _ways(epochs: int) -> tuple[float, float]:
-    """Return the range of any echo's way: sheets change the speed by 60 %."""
-    low, high = way_of(epochs)
-    return 0.6 * low, 1.6 * high

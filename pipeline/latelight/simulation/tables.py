@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import io
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import asdict
 from pathlib import Path
 
@@ -11,17 +11,36 @@ from astropy.table import Table
 
 from latelight.errors import ProductError
 from latelight.records import Source
-from latelight.simulation.truth import FrameTruth, PairTruth
+from latelight.simulation.truth import FieldTruth, FrameTruth, PairTruth
 
 __all__ = [
     "echo_rows",
     "frame_row",
     "nuisance_rows",
     "source_rows",
+    "track_point_rows",
+    "track_rows",
     "write_table",
 ]
 
 Row = dict[str, str | float]
+
+# Numbers of a track that hold for all epochs.
+TRACK_NUMBERS = (
+    "mjd",
+    "ra",
+    "dec",
+    "x",
+    "y",
+    "normal_pa",
+    "speed_arcsec_yr",
+    "change_arcsec_yr2",
+    "length_arcsec",
+    "width_arcsec",
+    "depth_pc",
+    "bound_all",
+    "bound_best",
+)
 
 UNITS = {
     "ra": "deg",
@@ -35,6 +54,8 @@ UNITS = {
     "surface_brightness": "mag / arcsec2",
     "length_arcsec": "arcsec",
     "width_arcsec": "arcsec",
+    "change_arcsec_yr2": "arcsec / yr2",
+    "offset_arcsec": "arcsec",
     "depth_pc": "pc",
     "distance_pc": "pc",
     "distance_err_pc": "pc",
@@ -54,6 +75,44 @@ UNITS = {
 def echo_rows(truth: PairTruth, **labels: str) -> list[Row]:
     """Return one row an echo, led by labels such as field and file names."""
     return [{**labels, **asdict(echo)} for echo in truth.echoes]
+
+
+def track_rows(truth: FieldTruth, **labels: str) -> list[Row]:
+    """Return one row a track, numbered from 1 and led by labels."""
+    return [
+        {
+            **labels,
+            "track": number,
+            "source": echo.source,
+            **{name: getattr(echo, name) for name in TRACK_NUMBERS},
+            "surface_brightness": echo.surface_brightness[truth.grid],
+        }
+        for number, echo in enumerate(truth.echoes, start=1)
+    ]
+
+
+def track_point_rows(
+    truth: FieldTruth, frames: Sequence[str], **labels: str
+) -> list[Row]:
+    """Return one row for every track and epoch, led by labels.
+
+    ``bound_first`` is the S/N of a perfect filter on the epoch against the first.
+    """
+    return [
+        {
+            **labels,
+            "track": number,
+            "frame": frame,
+            "mjd": truth.mjds[epoch],
+            "ra": echo.ras[epoch],
+            "dec": echo.decs[epoch],
+            "offset_arcsec": echo.offsets_arcsec[epoch],
+            "surface_brightness": echo.surface_brightness[epoch],
+            "bound_first": echo.bound_pairs[0][epoch],
+        }
+        for number, echo in enumerate(truth.echoes, start=1)
+        for epoch, frame in enumerate(frames)
+    ]
 
 
 def frame_row(truth: FrameTruth, *, mjd: float, **labels: str) -> Row:
