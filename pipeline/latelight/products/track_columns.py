@@ -67,8 +67,8 @@ _FRAMES = (
         "time.epoch",
         "Epoch at which place and speed hold, MJD (UTC).",
     ),
-    real("mjd_first", ".6f", "d", "time.start;obs", "First epoch used, MJD (UTC)."),
-    real("mjd_last", ".6f", "d", "time.end;obs", "Last epoch used, MJD (UTC)."),
+    real("mjd_first", ".6f", "d", "time.start;obs", "First epoch of the series, MJD (UTC)."),
+    real("mjd_last", ".6f", "d", "time.end;obs", "Last epoch of the series, MJD (UTC)."),
     integer("n_epochs", "meta.number;obs.image", "Epochs that could be used."),
 )
 
@@ -254,7 +254,7 @@ TRACK_COLUMNS = (
     text(
         "id",
         "meta.id;meta.main",
-        "T and the designation from the position, J2000, truncated and not rounded.",
+        "Designation from the position, J2000, truncated and not rounded.",
     ),
     *_FRAMES,
     *_SHAPE,

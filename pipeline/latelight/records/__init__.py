@@ -25,6 +25,7 @@ from latelight.records.arrays import (
 )
 from latelight.records.difference import CompactResidual, Difference
 from latelight.records.frame import Frame, Plane
+from latelight.records.interpretation import Interpretation
 from latelight.records.matching import MatchedPair, SpatialKernel, SpatialPsf
 from latelight.records.series import EpochSeries
 from latelight.records.source import OriginScore, Source
@@ -41,6 +42,7 @@ __all__ = [
     "FloatArray",
     "Frame",
     "IntArray",
+    "Interpretation",
     "MaskArray",
     "MatchedPair",
     "Motion",
