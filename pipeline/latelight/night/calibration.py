@@ -8,7 +8,7 @@ from typing import Any
 
 from latelight.sky import pixel_angle_to_position_angle, pixel_scale_arcsec
 
-__all__ = ["Calibration", "known", "magnitude_error"]
+__all__ = ["Calibration", "known", "magnitude_error", "scaled"]
 
 _MAG_PER_RELATIVE = 2.5 / math.log(10.0)
 
@@ -16,6 +16,11 @@ _MAG_PER_RELATIVE = 2.5 / math.log(10.0)
 def known(value: float) -> float | None:
     """Return a number, or None for one that is not finite."""
     return float(value) if math.isfinite(value) else None
+
+
+def scaled(value_px: float, scale: float | None) -> float | None:
+    """Return pixels in arcsec; None without a scale or for what is not finite."""
+    return None if scale is None else known(value_px * scale)
 
 
 def magnitude_error(counts: float, counts_err: float) -> float | None:

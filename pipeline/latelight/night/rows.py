@@ -2,12 +2,35 @@
 
 from __future__ import annotations
 
-from latelight.night.calibration import Calibration, known, magnitude_error
-from latelight.night.pairing import Pair
-from latelight.products.rows import ArcRow, CandidateRow, ResidualRow
-from latelight.records import Arc, CompactResidual, Motion, OriginScore
+from collections.abc import Iterable
+from dataclasses import replace
+from typing import TypeVar
 
-__all__ = ["arc_row", "candidate_row", "residual_row", "speed_of"]
+from latelight.night.calibration import Calibration, known, magnitude_error, scaled
+from latelight.night.pairing import Pair
+from latelight.origin.interpret import interpret
+from latelight.products.meaning_columns import MEANING_COLUMNS
+from latelight.products.rows import ArcRow, CandidateRow, ResidualRow
+from latelight.products.track_rows import TrackRow
+from latelight.records import (
+    Arc,
+    CompactResidual,
+    Interpretation,
+    Motion,
+    OriginScore,
+    Source,
+)
+
+__all__ = [
+    "arc_row",
+    "candidate_row",
+    "meaning_of",
+    "residual_row",
+    "speed_of",
+    "with_meaning",
+]
+
+_Moving = TypeVar("_Moving", CandidateRow, TrackRow)
 
 DAYS_PER_YEAR = 365.25
 
@@ -34,8 +57,12 @@ def candidate_row(
     *,
     pair: Pair,
     calibration: Calibration,
+    sources: Iterable[Source] = (),
 ) -> CandidateRow:
-    """Return the row of a candidate; its id is given once the night is complete."""
+    """Return the row of a candidate; its id is given once the night is complete.
+
+    With the list of ``sources`` it says what the arc means for the best of them.
+    """
     x, y = motion.x, motion.y
     ra, dec = calibration.place(x, y)
     normal_pa, across = calibration.direction(x, y, motion.direction_angle)
@@ -44,7 +71,7 @@ def candidate_row(
     counts = motion.surface_brightness_counts
     counts_err = motion.surface_brightness_err_counts
     brightness = calibration.surface_brightness(counts, x, y)
-    return CandidateRow(
+    row = CandidateRow(
         id="",
         field=pair.science.field,
         filter=pair.science.filter,
@@ -55,8 +82,8 @@ def candidate_row(
         ra=ra,
         dec=dec,
         snr=arc.snr,
-        length=_times(arc.length_px, along),
-        width=_times(motion.width_px, across),
+        length=scaled(arc.length_px, along),
+        width=scaled(motion.width_px, across),
         surface_brightness=brightness,
         normal_pa=normal_pa,
         normal_pa_err=None if normal_pa is None else known(motion.direction_angle_err),
@@ -77,7 +104,7 @@ def candidate_row(
         shift_err_px=known(motion.shift_err_px),
         length_px=arc.length_px,
         width_px=motion.width_px,
-        width_err=_times(motion.width_err_px, across),
+        width_err=scaled(motion.width_err_px, across),
         width_err_px=known(motion.width_err_px),
         surface_brightness_err=(
             None if brightness is None else magnitude_error(counts, counts_err)
@@ -89,6 +116,41 @@ def candidate_row(
         profile_chi2=known(motion.chi2),
         curvature_radius=_radius(arc, calibration),
         source_separation=known(score.separation_deg) if score else None,
+    )
+    return with_meaning(row, sources)
+
+
+def with_meaning(row: _Moving, sources: Iterable[Source]) -> _Moving:
+    """Return the row of an arc with what it means if its best source lit it.
+
+    Parameters
+    ----------
+    row : CandidateRow or TrackRow
+        Its ``source`` names the best one, or is empty.
+    sources : iterable of Source
+        All that are listed.
+    """
+    best = next((s for s in sources if row.source and s.name == row.source), None)
+    meaning = None if best is None else meaning_of(row, best)
+    if meaning is None:
+        return row
+    names = [column.name for column in MEANING_COLUMNS]
+    return replace(row, **{name: getattr(meaning, name) for name in names})
+
+
+def meaning_of(row: CandidateRow | TrackRow, source: Source) -> Interpretation | None:
+    """Return what an arc means if a source lit it; None where its place is unknown."""
+    if row.ra is None or row.dec is None:
+        return None
+    return interpret(
+        source,
+        ra=row.ra,
+        dec=row.dec,
+        normal_pa=row.normal_pa,
+        normal_pa_err=row.normal_pa_err,
+        speed_arcsec_yr=row.speed,
+        speed_err_arcsec_yr=row.speed_err,
+        mjd=row.mjd if isinstance(row, TrackRow) else row.mjd_science,
     )
 
 
@@ -108,8 +170,8 @@ def arc_row(arc: Arc, *, pair: Pair, calibration: Calibration) -> ArcRow:
         y=arc.y,
         ra=ra,
         dec=dec,
-        length=_times(arc.length_px, along),
-        width=_times(arc.width_px, across),
+        length=scaled(arc.length_px, along),
+        width=scaled(arc.width_px, across),
         normal_pa=None if normal_pa is None else normal_pa % 180.0,
         length_px=arc.length_px,
         width_px=arc.width_px,
@@ -140,10 +202,6 @@ def residual_row(
         snr=residual.snr,
         fwhm_px=residual.fwhm_px,
     )
-
-
-def _times(length_px: float, scale: float | None) -> float | None:
-    return None if scale is None else known(length_px * scale)
 
 
 def _radius(arc: Arc, calibration: Calibration) -> float | None:
