@@ -142,9 +142,9 @@ def test_points_of_one_ellipsoid(theta, phi, r, l_pc):
     ],
 )
 def test_ellipsoid_differs_from_paraboloid(theta, age, distance, paraboloid, exact):
-    assert paraboloid_depth_pc(theta, age, distance) == pytest.approx(
-        paraboloid, abs=6e-4
-    )
+    # With a stated error of 3 pc the paraboloid would do in all three.
+    approximate = paraboloid_depth_pc(theta, age, distance, error_pc=3.0)
+    assert approximate == pytest.approx(paraboloid, abs=6e-4)
     assert depth_pc(theta, age, distance) == pytest.approx(exact, abs=6e-4)
 
 
@@ -167,7 +167,9 @@ def test_speed_of_tilted_sheets(slope, beta):
     distance = 1e5
     theta, age = np.degrees(100.0 / distance), 50.0 / LIGHT_PC_PER_YEAR
     assert paraboloid_depth_pc(theta, age, distance) == pytest.approx(75.0)
-    speed = paraboloid_speed_arcsec_yr(theta, age, distance, slope)
+    speed = paraboloid_speed_arcsec_yr(
+        theta, age, distance, slope, error_arcsec_yr=np.inf
+    )
     assert speed / light_speed_arcsec_yr(distance) == pytest.approx(beta, rel=1e-4)
 
 
@@ -232,10 +234,11 @@ def test_grid_at_the_distance_of_the_magellanic_cloud(age, depth, arcmin, rate, 
 def test_grid_in_the_galaxy(depth, theta, rate):
     """D = 3 kpc, 400 yr, sheet across the view; computed, paraboloid."""
     # The angle is given to 1e-4 deg: 6e-3 pc of depth.
-    assert paraboloid_depth_pc(theta, 400.0, 3000.0) == pytest.approx(depth, abs=0.02)
-    assert paraboloid_speed_arcsec_yr(theta, 400.0, 3000.0) == pytest.approx(
-        rate, abs=2e-3
-    )
+    place = (theta, 400.0, 3000.0)
+    found = paraboloid_depth_pc(*place, error_pc=np.inf)
+    assert found == pytest.approx(depth, abs=0.02)
+    speed = paraboloid_speed_arcsec_yr(*place, error_arcsec_yr=np.inf)
+    assert speed == pytest.approx(rate, abs=2e-3)
 
 
 @pytest.mark.parametrize(("age", "depth"), [(400.0, 200.0), (1704.62, -200.0)])
@@ -243,7 +246,7 @@ def test_one_motion_two_sheets(age, depth):
     """theta = 1044.4157", 50 kpc: a sheet in front and one behind both move at
     1.611869 "/yr, ages rho (beta -+ sqrt(beta**2 - 1)) / c (computed, paraboloid)."""
     theta = 1044.4157 * ARCSEC
-    speed = paraboloid_speed_arcsec_yr(theta, age, 50_000.0)
+    speed = paraboloid_speed_arcsec_yr(theta, age, 50_000.0, error_arcsec_yr=np.inf)
     assert speed == pytest.approx(1.611869, rel=1e-5)
     # Half a unit in the last digit of the age is 3e-3 pc of depth.
     assert paraboloid_depth_pc(theta, age, 50_000.0) == pytest.approx(depth, abs=5e-3)

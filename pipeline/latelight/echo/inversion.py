@@ -35,7 +35,13 @@ from latelight.echo.geometry import (
 )
 from latelight.records import BoolArray, FloatArray
 
-__all__ = ["AgeDepth", "age_and_depth", "age_and_depth_covariance", "sheet_slope"]
+__all__ = [
+    "AgeDepth",
+    "age_and_depth",
+    "age_and_depth_covariance",
+    "checked_speed",
+    "sheet_slope",
+]
 
 POLISHES = 3
 # Rounding of the cubic's discriminant, relative: dust level with the source has a
@@ -227,7 +233,7 @@ def sheet_slope(
     ``tan(theta + arctan(a))`` and ``b (cos(theta) + radial sin(theta))``.
     """
     e = Ellipsoid(theta_deg, age_yr, distance_pc)
-    speed = _checked_speed(speed_arcsec_yr)
+    speed = checked_speed(speed_arcsec_yr)
     turn = as_floats(turn_deg)
     require(np.isfinite(turn), "turn_deg", "finite", turn)
     across, per_tilt = delay_gradient(theta_deg, age_yr, distance_pc)
@@ -239,7 +245,7 @@ def sheet_slope(
     return radial, aside * (e.cos + radial * e.sin)
 
 
-def _checked_speed(speed_arcsec_yr: ArrayLike) -> FloatArray:
+def checked_speed(speed_arcsec_yr: ArrayLike) -> FloatArray:
     """Return speeds; ValueError unless finite and not zero."""
     speed = as_floats(speed_arcsec_yr)
     require(
@@ -264,7 +270,7 @@ class _Cubic:
     ) -> None:
         self.theta = checked_separation(theta_deg)
         self.distance = checked_distance(distance_pc)
-        self.speed = _checked_speed(speed_arcsec_yr)
+        self.speed = checked_speed(speed_arcsec_yr)
         self.slope = as_floats(slope)
         require(np.isfinite(self.slope), "slope", "finite", self.slope)
         self.m = self.speed / light_speed_arcsec_yr(self.distance)
