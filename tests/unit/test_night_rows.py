@@ -8,11 +8,20 @@ import numpy as np
 import pytest
 from astropy.wcs import WCS
 
+from latelight.echo.geometry import source_distance_pc
 from latelight.frames.headers import FrameHeader
 from latelight.night.calibration import Calibration, known, magnitude_error
 from latelight.night.pairing import Pair
 from latelight.night.rows import arc_row, candidate_row, residual_row
-from latelight.records import Arc, ArcTrace, CompactResidual, Motion, OriginScore
+from latelight.records import (
+    Arc,
+    ArcTrace,
+    CompactResidual,
+    Motion,
+    OriginScore,
+    Source,
+)
+from latelight.sky import separation_deg
 
 SCALE = 0.5
 NEED_WCS = [
@@ -172,6 +181,24 @@ def test_the_best_source_and_unknown_depth(wcs):
     )
     assert (row.source, row.score, row.away_angle) == ("Ember", 1.5, -12.0)
     assert row.dust_depth is None
+
+
+def test_the_best_source_gives_its_meaning(wcs):
+    source = Source("Ember", 151.0, -20.0, 2000.0, None, 300.0, None, 60000.0)
+    score = OriginScore("Ember", 1.5, -12.0, 0.94)
+    row = candidate_row(
+        _arc(),
+        _motion(),
+        score,
+        pair=_pair(),
+        calibration=Calibration(wcs, 25.0),
+        sources=[source],
+    )
+    # At the science epoch, half a year after the age was given.
+    expected = source_distance_pc(separation_deg(150, -20, 151, -20), 300.5, 2000.0)
+    assert row.dust_distance == pytest.approx(float(expected), rel=1e-6)
+    assert row.sheet_slope is not None
+    assert row.implied_age is None
 
 
 def test_an_arc_and_its_circle(wcs):

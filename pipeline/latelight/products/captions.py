@@ -1,12 +1,13 @@
-"""The words of a candidate's picture: its numbers with units and errors."""
+"""The words of pictures: the numbers of a candidate or track, units and errors."""
 
 from __future__ import annotations
 
 from datetime import date, timedelta
 
 from latelight.products.rows import CandidateRow
+from latelight.products.track_rows import TrackRow
 
-__all__ = ["calendar_date", "facts", "interval", "measured", "shortened"]
+__all__ = ["calendar_date", "facts", "interval", "measured", "shortened", "track_facts"]
 
 # Day 0 of the modified Julian date.
 _MJD_ZERO = date(1858, 11, 17)
@@ -18,6 +19,19 @@ def facts(row: CandidateRow) -> list[tuple[str, str]]:
     listed = [("significance", f"S/N {row.snr:.1f}"), *_brightness(row), *_motion(row)]
     listed.extend(_origin(row))
     return listed
+
+
+def track_facts(row: TrackRow) -> list[tuple[str, str]]:
+    """Return what is known of a track as labels and values, in reading order."""
+    listed = [("significance", f"S/N {row.snr:.1f} in {row.n_epochs} epochs")]
+    if row.speed is not None:
+        speed = f"{measured(row.speed, row.speed_err)} arcsec/yr"
+        if row.speed_change is not None and row.speed_change_err is not None:
+            change = measured(row.speed_change, row.speed_change_err)
+            sign = "" if change.startswith("-") else "+"
+            speed += f" ({sign}{change} a year)"
+        listed.append(("speed along the normal", speed))
+    return [*listed, _way(row), *_track_brightness(row), *_origin(row)]
 
 
 def calendar_date(mjd: float) -> str:
@@ -78,16 +92,27 @@ def _motion(row: CandidateRow) -> list[tuple[str, str]]:
         speed = f"{measured(row.shift_px, row.shift_err_px)} px"
     else:
         speed = "one lobe only"
+    return [("motion along the normal", speed), _way(row)]
+
+
+def _way(row: CandidateRow | TrackRow) -> tuple[str, str]:
     if row.normal_pa is not None:
         way = f"PA {measured(row.normal_pa, row.normal_pa_err)}°"
     else:
         way = f"{measured(row.normal_angle, row.normal_angle_err)}° from +x"
     if row.sense_odds is not None and row.sense_odds < 1.0:
         way += " (sense unsure)"
-    return [("motion along the normal", speed), ("towards", way)]
+    return "towards", way
 
 
-def _origin(row: CandidateRow) -> list[tuple[str, str]]:
+def _track_brightness(row: TrackRow) -> list[tuple[str, str]]:
+    if row.surface_brightness is None:
+        return []
+    value = measured(row.surface_brightness, row.surface_brightness_err)
+    return [("brightness", f"{value} mag/arcsec^2")]
+
+
+def _origin(row: CandidateRow | TrackRow) -> list[tuple[str, str]]:
     if not row.source:
         return [("origin", "none listed fits")]
     parts = [shortened(row.source, 28)]

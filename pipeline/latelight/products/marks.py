@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import math
+from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from PIL import Image, ImageDraw
@@ -24,10 +26,10 @@ from latelight.products.drawing import (
     write,
 )
 from latelight.products.profile import ridge_offset
-from latelight.records import FloatArray
+from latelight.records import ArcTrace, FloatArray
 from latelight.sky import pixel_scale_arcsec, position_angle_to_pixel_angle
 
-__all__ = ["Marks"]
+__all__ = ["MarkedArc", "Marks", "marked_candidate"]
 
 _TEXT = 16
 # Lengths on the panel, as fractions of its side.
@@ -37,30 +39,89 @@ _LONGEST_NAME = 20
 _PLATE_OPACITY = 0.8
 
 
+@dataclass(frozen=True, slots=True)
+class MarkedArc:
+    """What the marks of an arc need to know of it; pixels are those of its cutout.
+
+    Attributes
+    ----------
+    side_px : int
+        Side of the cutout.
+    wcs : astropy.wcs.WCS or None
+        Of the cutout.
+    fwhm_px, width_px : float
+        PSF width, and width of the arc with the PSF taken out.
+    trace : ArcTrace
+        Centre line of the arc.
+    x, y : float
+        A place on the ridge.
+    places : tuple of float
+        Where the ridge lay at the epochs, ahead of that place along the motion.
+    angle, angle_err : float
+        Pixel angle of the motion and 1 sigma, degrees.
+    source : str
+        Best source, or empty.
+    away_angle, normal_pa : float or None
+        Motion minus the way from the source, and position angle of the motion,
+        degrees.
+    """
+
+    side_px: int
+    wcs: Any
+    fwhm_px: float
+    width_px: float
+    trace: ArcTrace
+    x: float
+    y: float
+    places: tuple[float, ...]
+    angle: float
+    angle_err: float
+    source: str
+    away_angle: float | None
+    normal_pa: float | None
+
+
+def marked_candidate(cutout: Cutout) -> MarkedArc:
+    """Return what the marks of a candidate need; it lay in two places."""
+    row = cutout.row
+    return MarkedArc(
+        side_px=cutout.science.shape[0],
+        wcs=cutout.wcs,
+        fwhm_px=cutout.fwhm_px,
+        width_px=row.width_px,
+        trace=cutout.trace,
+        x=row.x - cutout.x0,
+        y=row.y - cutout.y0,
+        places=(0.0, template_offset_px(row)),
+        angle=row.normal_angle,
+        angle_err=row.normal_angle_err,
+        source=row.source,
+        away_angle=row.away_angle,
+        normal_pa=row.normal_pa,
+    )
+
+
 class Marks:
-    """Draws over one panel of a candidate's picture.
+    """Draws over one panel of an arc's picture.
 
     Parameters
     ----------
     panel : PIL.Image.Image
         The square panel, RGB, ``OVERSAMPLING`` times as large as it will be.
-    cutout : Cutout
-        The candidate.
+    arc : MarkedArc
+        The arc.
     """
 
-    def __init__(self, panel: Image.Image, cutout: Cutout) -> None:
-        self._cutout = cutout
+    def __init__(self, panel: Image.Image, arc: MarkedArc) -> None:
+        self._arc = arc
         self._canvas = Canvas(panel)
         self._side = panel.width // OVERSAMPLING
-        self._zoom = self._side / cutout.science.shape[0]
+        self._zoom = self._side / arc.side_px
         self._texts: list[tuple[Point, str, str, Colour]] = []
-        row, trace = cutout.row, cutout.trace
-        self._x, self._y = row.x - cutout.x0, row.y - cutout.y0
-        # The trace may follow either lobe: this leads to the science epoch's.
+        # The trace may follow the ridge at any epoch: this leads to the place.
         self._ahead_of_trace = ridge_offset(
-            trace, x=self._x, y=self._y, angle=row.normal_angle
+            arc.trace, x=arc.x, y=arc.y, angle=arc.angle
         )
-        self._template_ahead = template_offset_px(row)
 
     def finished(self) -> Image.Image:
         """Return the panel at its final size, with its texts."""
@@ -72,9 +133,9 @@ class Marks:
             )
         return panel
 
-    def ends(self, *, science: bool) -> None:
-        """Mark where the arc begins and ends at one epoch, clear of the arc itself."""
-        x, y = self._ridge(science=science)
+    def ends(self, ahead: float) -> None:
+        """Mark the ends of the arc when it was so far ahead, clear of the arc."""
+        x, y = self._ridge(ahead)
         for end, inward in ((0, 1), (-1, -2)):
             along = math.atan2(y[end] - y[inward], x[end] - x[inward])
             foot = self._panel(
@@ -88,9 +149,9 @@ class Marks:
             ]
             self._canvas.line(stroke, ARC, width=2.5)
 
-    def trace(self) -> None:
-        """Dot the ridge at the science epoch; the arc shows between the dots."""
-        x, y = self._ridge(science=True)
+    def trace(self, ahead: float) -> None:
+        """Dot the ridge when it was so far ahead; the arc shows between the dots."""
+        x, y = self._ridge(ahead)
         path = np.array([self._panel(*point) for point in zip(x, y, strict=True)])
         along = np.append(0.0, np.cumsum(np.hypot(*np.diff(path, axis=0).T)))
         places = np.arange(0.0, along[-1] + 1e-9, 11.0)
@@ -99,37 +160,37 @@ class Marks:
 
     def motion(self) -> None:
         """Draw the motion as an arrow ahead of the arc, its error as a wedge."""
-        row = self._cutout.row
-        tail = self._along_motion(max(self._template_ahead, 0.0) + self._clearance())
-        err = max(row.normal_angle_err, 0.5)
+        arc = self._arc
+        tail = self._along_motion(max(arc.places) + self._clearance())
+        err = max(arc.angle_err, 0.5)
         fan = [
-            self._off(tail, row.normal_angle + turn, _WEDGE)
+            self._off(tail, arc.angle + turn, _WEDGE)
             for turn in np.linspace(-err, err, 9)
         ]
         self._canvas.fill([tail, *fan], MOTION, opacity=0.35)
-        tip = self._off(tail, row.normal_angle, _ARROW)
+        tip = self._off(tail, arc.angle, _ARROW)
         self._canvas.arrow(tail, tip, MOTION, width=2.5)
 
     def origin(self) -> None:
         """Draw a broken line from behind the arc towards the best source."""
-        row, wcs = self._cutout.row, self._cutout.wcs
-        if not row.source or row.away_angle is None or row.normal_pa is None:
+        arc = self._arc
+        if not arc.source or arc.away_angle is None or arc.normal_pa is None:
             return
         towards = position_angle_to_pixel_angle(
-            wcs, self._x, self._y, row.normal_pa - row.away_angle + 180.0
+            arc.wcs, arc.x, arc.y, arc.normal_pa - arc.away_angle + 180.0
         )
-        start = self._along_motion(min(self._template_ahead, 0.0) - self._clearance())
+        start = self._along_motion(min(arc.places) - self._clearance())
         end = self._off(start, towards, _ORIGIN_LINE)
         self._canvas.dashes(start, end, ORIGIN, width=2.0)
         self._label(
             self._off(end, towards, 0.03),
-            f"to {shortened(row.source, _LONGEST_NAME)}",
+            f"to {shortened(arc.source, _LONGEST_NAME)}",
             towards,
         )
 
     def compass(self) -> None:
         """Draw north and east in a clear corner, or +x and +y without a WCS."""
-        wcs = self._cutout.wcs
+        wcs = self._arc.wcs
         if wcs is None:
             arms = {"x": 0.0, "y": 90.0}
         else:
@@ -156,7 +217,7 @@ class Marks:
 
     def scale_bar(self) -> None:
         """Draw a bar of a round length in arcsec, or pixels without a WCS."""
-        wcs = self._cutout.wcs
+        wcs = self._arc.wcs
         unit = 1.0 if wcs is None else pixel_scale_arcsec(wcs, *self._middle())
         length = nice_step(_SCALE_BAR * self._side / self._zoom * unit)
         bar = length / unit * self._zoom
@@ -169,26 +230,25 @@ class Marks:
         self._canvas.line(ends, INK, width=3.0)
         self._texts.append(((middle, top + 20.0), label, "md", INK))
 
-    def _ridge(self, *, science: bool) -> tuple[FloatArray, FloatArray]:
-        """Return the ridge at an epoch, cutout pixels."""
-        trace = self._cutout.trace
-        ahead = self._ahead_of_trace + (0.0 if science else self._template_ahead)
-        angle = math.radians(self._cutout.row.normal_angle)
-        return trace.x + ahead * math.cos(angle), trace.y + ahead * math.sin(angle)
+    def _ridge(self, ahead: float) -> tuple[FloatArray, FloatArray]:
+        """Return the ridge when it was so far ahead of the place, cutout pixels."""
+        trace, total = self._arc.trace, self._ahead_of_trace + ahead
+        angle = math.radians(self._arc.angle)
+        return trace.x + total * math.cos(angle), trace.y + total * math.sin(angle)
 
     def _clearance(self) -> float:
         """Return how far from a ridge its light is gone, pixels."""
-        return 0.5 * self._cutout.row.width_px + 1.5 * self._cutout.fwhm_px
+        return 0.5 * self._arc.width_px + 1.5 * self._arc.fwhm_px
 
     def _along_motion(self, distance: float) -> Point:
-        """Return the place on the panel that far ahead of the ridge, cutout pixels."""
-        angle = math.radians(self._cutout.row.normal_angle)
+        """Return the place on the panel that far ahead of the arc's, cutout pixels."""
+        arc, angle = self._arc, math.radians(self._arc.angle)
         return self._panel(
-            self._x + distance * math.cos(angle), self._y + distance * math.sin(angle)
+            arc.x + distance * math.cos(angle), arc.y + distance * math.sin(angle)
         )
 
     def _middle(self) -> Point:
-        centre = (self._cutout.science.shape[0] - 1) / 2
+        centre = (self._arc.side_px - 1) / 2
         return centre, centre
 
     def _panel(self, x: float, y: float) -> Point:
@@ -205,7 +265,7 @@ class Marks:
 
     def _clear_corner(self, width: float, height: float) -> Point:
         """Return the corner for a box of that size that is farthest from the arc."""
-        ridges = [self._ridge(science=science) for science in (True, False)]
+        ridges = [self._ridge(ahead) for ahead in self._arc.places]
         x = np.concatenate([ridge[0] for ridge in ridges])
         y = np.concatenate([ridge[1] for ridge in ridges])
         arc_u, arc_v = self._panel(x, y)  # type: ignore[arg-type]

@@ -14,7 +14,7 @@ import numpy as np
 from PIL import Image, ImageDraw
 
 from latelight.products.atomic import write_bytes
-from latelight.products.captions import calendar_date, facts, interval, shortened
+from latelight.products.captions import calendar_date, facts, interval
 from latelight.products.cutouts import Cutout, template_offset_px
 from latelight.products.drawing import (
     INK,
@@ -22,10 +22,10 @@ from latelight.products.drawing import (
     PAPER,
     QUIET,
     RULE,
-    text_width,
     write,
 )
-from latelight.products.marks import Marks
+from latelight.products.heading import draw_heading
+from latelight.products.marks import Marks, marked_candidate
 from latelight.products.panels import (
     BoolArray,
     ColourArray,
@@ -37,7 +37,6 @@ from latelight.products.panels import (
 )
 from latelight.products.profile import measure_profile
 from latelight.products.profile_panel import draw_profile
-from latelight.products.rows import CandidateRow
 from latelight.products.settings import ProductSettings
 from latelight.sky import pixel_scale_arcsec
 
@@ -48,7 +47,7 @@ _HEAD, _CAPTION, _FOOT = 112, 28, 34
 _WIDTH = 2 * _EDGE + 4 * _SIDE + 3 * _GAP
 _HEIGHT = _HEAD + _CAPTION + _SIDE + _FOOT
 _TOP = _HEAD + _CAPTION
-_SMALL, _TEXT, _NAME = 14, 18, 27
+_SMALL, _TEXT = 14, 18
 # Profile to either side of the middle of the lobes: PSF widths, and at least px.
 _REACH_FWHM, _REACH_PX = 5.0, 12.0
 # Sigma of the smoothing of a difference, in FWHM of the arc.
@@ -82,7 +81,13 @@ def draw_picture(cutout: Cutout, *, settings: ProductSettings) -> Image.Image:
         RGB.
     """
     picture = Image.new("RGB", (_WIDTH, _HEIGHT), PAPER)
-    _draw_heading(picture, cutout.row)
+    row = cutout.row
+    draw_heading(
+        picture,
+        name=row.id,
+        context=[row.field, f"filter {row.filter}" if row.filter else "", row.pair],
+        facts=facts(row),
+    )
     _draw_epochs(picture, cutout)
     _draw_difference(picture, cutout, settings.smoothing_px)
     _draw_profile(picture, cutout)
@@ -121,31 +126,8 @@ def _left(panel: int) -> int:
     return _EDGE + panel * (_SIDE + _GAP)
 
 
-def _draw_heading(picture: Image.Image, row: CandidateRow) -> None:
-    draw = ImageDraw.Draw(picture)
-    write(draw, (_EDGE, 14), row.id, size=_NAME)
-    words = [row.field, f"filter {row.filter}" if row.filter else "", row.pair]
-    context = shortened(" · ".join(word for word in words if word), 120)
-    place = (_WIDTH - _EDGE, 22)
-    write(draw, place, context, size=_SMALL, colour=QUIET, anchor="ra")
-    draw.line([(_EDGE, 52), (_WIDTH - _EDGE, 52)], fill=RULE)
-    known = facts(row)
-    widths = [
-        max(text_width(value, size=_TEXT), text_width(label, size=_SMALL))
-        for label, value in known
-    ]
-    # Spread over the whole line, at most four letters apart.
-    free = _WIDTH - 2 * _EDGE - sum(widths)
-    apart = min(44.0, free / max(len(known) - 1, 1))
-    x = float(_EDGE)
-    for (label, value), width in zip(known, widths, strict=True):
-        write(draw, (x, 60), label, size=_SMALL, colour=QUIET)
-        write(draw, (x, 78), value, size=_TEXT)
-        x += width + apart
-
-
 def _draw_epochs(picture: Image.Image, cutout: Cutout) -> None:
-    row = cutout.row
+    row, arc = cutout.row, marked_candidate(cutout)
     epochs = (cutout.template, cutout.science)
     later = interval(row.mjd_science - row.mjd_template)
     captions = (
@@ -155,12 +137,12 @@ def _draw_epochs(picture: Image.Image, cutout: Cutout) -> None:
     for panel, (pixels, colours) in enumerate(
         zip(epochs, colour_epochs(*epochs), strict=True)
     ):
-        marks = Marks(_enlarged(colours, np.isnan(pixels), smooth=False), cutout)
+        marks = Marks(_enlarged(colours, np.isnan(pixels), smooth=False), arc)
         if panel == 0:
             marks.scale_bar()
         else:
             marks.compass()
-        marks.ends(science=panel == 1)
+        marks.ends(arc.places[1 - panel])
         _place(picture, panel, marks.finished(), captions[panel])
     draw = ImageDraw.Draw(picture)
     place = (_left(0), _TOP + _SIDE + 6)
@@ -181,10 +163,11 @@ def _draw_difference(picture: Image.Image, cutout: Cutout, smoothing_px: float) 
     )
     hatched = (cutout.mask != 0) | np.isnan(cutout.difference)
     colours = colour_difference(scale)
-    marks = Marks(_enlarged(colours, hatched, smooth=smoothing_px > 0.0), cutout)
+    arc = marked_candidate(cutout)
+    marks = Marks(_enlarged(colours, hatched, smooth=smoothing_px > 0.0), arc)
     marks.origin()
     marks.motion()
-    marks.trace()
+    marks.trace(0.0)
     caption = "science minus template"
     if smoothing_px > 0.0:
         caption += f", smoothed by {smoothing_px:g} px"

@@ -67,8 +67,16 @@ _FRAMES = (
         "time.epoch",
         "Epoch at which place and speed hold, MJD (UTC).",
     ),
-    real("mjd_first", ".6f", "d", "time.start;obs", "First epoch of the series, MJD (UTC)."),
-    real("mjd_last", ".6f", "d", "time.end;obs", "Last epoch of the series, MJD (UTC)."),
+    real(
+        "mjd_first",
+        ".6f",
+        "d",
+        "time.start;obs",
+        "First epoch of the series, MJD (UTC).",
+    ),
+    real(
+        "mjd_last", ".6f", "d", "time.end;obs", "Last epoch of the series, MJD (UTC)."
+    ),
     integer("n_epochs", "meta.number;obs.image", "Epochs that could be used."),
 )
 
