@@ -12,11 +12,12 @@ dilution, which hardly vary over one cloud, are part of the amplitude.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import Any
 
 import numpy as np
-from scipy import special
-from scipy.interpolate import RectBivariateSpline
+from scipy import ndimage, special
+from scipy.interpolate import make_interp_spline
 
 from latelight.echo.geometry import delay_yr
 from latelight.records import FloatArray, Source
@@ -36,6 +37,7 @@ from latelight.threads import over_rows
 __all__ = ["Echo", "Viewpoint", "age_yr", "render_echo", "sheet_slopes"]
 
 OVERSAMPLE = 2
+NODES = 21
 DEPTH_CELLS = 24
 DEPTH_SIGMAS = 3.0
 # Samples of the light curve; an echo moves less than 0.05 arcsec in the time.
@@ -208,26 +210,27 @@ def render_echo(echo: Echo, view: Viewpoint) -> Patch:
 def _lit_dust(echo: Echo, view: Viewpoint, x: FloatArray, y: FloatArray) -> FloatArray:
     """Return density times light at ``y, x`` sample positions, peak light = 1."""
     # All coordinates and delays are smooth: exact at nodes, splines between.
-    node_x = np.linspace(x[0], x[-1], 21)
-    node_y = np.linspace(y[0], y[-1], 21)
+    node_x, node_y = np.linspace(x[0], x[-1], NODES), np.linspace(y[0], y[-1], NODES)
     grid_x, grid_y = np.meshgrid(node_x, node_y)
     ra, dec = view.wcs.all_pix2world(grid_x.ravel(), grid_y.ravel(), 0)
     east, north = echo.plate().from_sky(ra, dec)
-
-    def spread(values: FloatArray) -> FloatArray:
-        nodes = values.reshape(grid_x.shape)
-        return RectBivariateSpline(node_y, node_x, nodes, s=0)(y, x)
-
-    density = echo.sheet.texture.at(spread(east), spread(north))
     age = age_yr(echo.source, view.mjd)
     ends = (DEPTH_SIGMAS, 0.0, -DEPTH_SIGMAS)
-    early, middle, late = (
-        spread(age - echo.delay(east, north, depth_sigmas=s)) for s in ends
-    )
+    times = [age - echo.delay(east, north, depth_sigmas=s) for s in ends]
+    cumulative = echo.light_curve.cumulative(LIGHT_CURVE_STEP_D)
+    years = cumulative.size * LIGHT_CURVE_STEP_D / DAYS_PER_YEAR
+    image = np.zeros((y.size, x.size))
+    lit = _lit_part(np.reshape(times, (3, NODES, NODES)), years, y.size, x.size)
+    by_row, by_col = _spline(y.size)[lit[0]], _spline(x.size)[lit[1]]
+
+    def spread(values: FloatArray) -> FloatArray:
+        return by_row @ values.reshape(grid_x.shape) @ by_col.T
+
+    density = echo.sheet.texture.at(spread(east), spread(north))
+    early, middle, late = (spread(values) for values in times)
     edges = np.linspace(-DEPTH_SIGMAS, DEPTH_SIGMAS, DEPTH_CELLS + 1)
     weights = np.diff(special.ndtr(edges))
     out = np.empty_like(density)
-    cumulative = echo.light_curve.cumulative(LIGHT_CURVE_STEP_D)
 
     def rows(first: int, last: int) -> None:
         light_sheet(
@@ -244,7 +247,44 @@ def _lit_dust(echo: Echo, view: Viewpoint, x: FloatArray, y: FloatArray) -> Floa
         )
 
     over_rows(rows, out.shape[0])
-    return out
+    image[lit] = out
+    return image
+
+
+def _lit_part(
+    times: FloatArray, years: float, n_rows: int, n_cols: int
+) -> tuple[slice, slice]:
+    """Return the rows and columns that the light curve can reach.
+
+    ``times`` holds the time since the light seen at the nodes left the outburst, at
+    three depths, shape (3, NODES, NODES); it shines from 0 to ``years``.  A mesh
+    counts when it or a neighbour has such times between its corners.
+    """
+    early = ndimage.maximum_filter(times.max(axis=0), 3, mode="nearest")
+    late = ndimage.minimum_filter(times.min(axis=0), 3, mode="nearest")
+    rows, cols = np.nonzero((early >= 0.0) & (late <= years))
+    if rows.size == 0:
+        return slice(0, 0), slice(0, 0)
+
+    def part(nodes: np.ndarray, count: int) -> slice:
+        step = (count - 1) / (NODES - 1)
+        return slice(
+            max(0, int((nodes.min() - 1) * step)),
+            min(count, int(np.ceil((nodes.max() + 1) * step)) + 1),
+        )
+
+    return part(rows, n_rows), part(cols, n_cols)
+
+
+@lru_cache(maxsize=64)
+def _spline(count: int) -> FloatArray:
+    """Return the weights of even nodes in a cubic spline at even points.
+
+    Shape (count, NODES); nodes and points begin and end together.
+    """
+    nodes = np.linspace(0.0, 1.0, NODES)
+    spline = make_interp_spline(nodes, np.eye(NODES), k=3)
+    return np.asarray(spline(np.linspace(0.0, 1.0, count)))
 
 
 def _cloud_centre(echo: Echo, wcs: Any) -> tuple[float, float]:

@@ -113,9 +113,8 @@ def _try_layout(
     mjd = float(rng.uniform(60_000.0, 61_500.0))
     events = [(ra, dec)]
     if two:
-        apart = rng.uniform(*APART_DEG[far])
-        place = offset_position(ra, dec, rng.uniform(0.0, 360.0), apart)
-        events.append((float(place[0]), float(place[1])))
+        apart = float(rng.uniform(*APART_DEG[far]))
+        events.append(_beside(ra, dec, float(rng.uniform(0.0, 360.0)), apart))
     outbursts = tuple(
         _at(
             random_outburst(
@@ -179,10 +178,15 @@ def _around(
     if len(events) == 2:
         apart = float(separation_deg(*events[0], *events[1]))
         pa = float(position_angle(*events[0], *events[1]))
-        ra, dec = (float(v) for v in offset_position(ra, dec, pa, 0.5 * apart))
+        ra, dec = _beside(ra, dec, pa, 0.5 * apart)
     away = low * (high / low) ** rng.random()
-    place = offset_position(ra, dec, rng.uniform(begin, end), away)
-    return float(place[0]), float(place[1])
+    return _beside(ra, dec, float(rng.uniform(begin, end)), away)
+
+
+def _beside(ra: float, dec: float, pa: float, away: float) -> tuple[float, float]:
+    """Return the place so many degrees away in a position angle."""
+    there = offset_position(ra, dec, pa, away)
+    return float(there[0]), float(there[1])
 
 
 def _random_place(rng: np.random.Generator) -> tuple[float, float]:
@@ -225,9 +229,8 @@ def random_sky_decoys(
     reach = AROUND_DEG[layout.far][1]
     made: list[Source] = []
     while len(made) < count:
-        away = reach * np.sqrt(rng.uniform(0.02, 1.5))
-        place = offset_position(like.ra, like.dec, rng.uniform(0.0, 360.0), away)
-        ra, dec = float(place[0]), float(place[1])
+        away = reach * float(np.sqrt(rng.uniform(0.02, 1.5)))
+        ra, dec = _beside(like.ra, like.dec, float(rng.uniform(0.0, 360.0)), away)
         if any(
             float(separation_deg(ra, dec, o.source.ra, o.source.dec))
             < DECOY_CLEAR_DEG[layout.far]
