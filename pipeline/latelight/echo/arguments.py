@@ -15,6 +15,8 @@ __all__ = [
     "checked_angle",
     "checked_depth",
     "checked_distance",
+    "checked_error",
+    "checked_finite",
     "checked_positive",
     "checked_separation",
     "require",
@@ -98,6 +100,21 @@ def checked_depth(depth_pc: ArrayLike, distance_pc: ArrayLike) -> FloatArray:
         cure="dust at or behind the observer cannot be seen in the source's direction",
     )
     return depth
+
+
+def checked_error(value: ArrayLike, name: str) -> FloatArray:
+    """Return errors or widths; ValueError unless zero or positive and finite."""
+    numbers = as_floats(value)
+    fit = (numbers >= 0.0) & np.isfinite(numbers)
+    require(fit, name, "zero or positive, and finite", numbers)
+    return numbers
+
+
+def checked_finite(value: ArrayLike, name: str) -> FloatArray:
+    """Return numbers; ValueError with their name unless finite."""
+    numbers = as_floats(value)
+    require(np.isfinite(numbers), name, "finite", numbers)
+    return numbers
 
 
 def checked_positive(value: ArrayLike, name: str, *, cure: str = "") -> FloatArray:

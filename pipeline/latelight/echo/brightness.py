@@ -26,7 +26,12 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import ArrayLike
 
-from latelight.echo.arguments import as_floats, checked_positive, require
+from latelight.echo.arguments import (
+    as_floats,
+    checked_finite,
+    checked_positive,
+    require,
+)
 from latelight.echo.constants import (
     ARCSEC_PER_RADIAN,
     LIGHT_PC_PER_YEAR,
@@ -298,8 +303,7 @@ def scattering_depth_from_brightness(
     ValueError
         If an argument is out of its range.
     """
-    seen = as_floats(brightness_mag)
-    require(np.isfinite(seen), "brightness_mag", "finite", seen)
+    seen = checked_finite(brightness_mag, "brightness_mag")
     whole = _mag_at_unit_depth(
         theta_deg, age_yr, distance_pc, peak_mag=peak_mag, asymmetry=asymmetry
     )
@@ -346,8 +350,7 @@ def _mag_at_unit_depth(
     asymmetry: ArrayLike,
 ) -> FloatArray:
     """Return the surface brightness of a sheet of scattering depth 1."""
-    peak = as_floats(peak_mag)
-    require(np.isfinite(peak), "peak_mag", "finite", peak)
+    peak = checked_finite(peak_mag, "peak_mag")
     e = Ellipsoid(theta_deg, age_yr, distance_pc)
     turned = scattering_angle_deg(theta_deg, age_yr, distance_pc)
     per_sr = phase_function(turned, asymmetry) * (e.distance / e.to_source) ** 2

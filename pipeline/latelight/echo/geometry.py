@@ -25,11 +25,12 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from latelight.echo.arguments import (
-    as_floats,
     checked_age,
     checked_angle,
     checked_depth,
     checked_distance,
+    checked_error,
+    checked_finite,
     require,
 )
 from latelight.echo.constants import ARCSEC_PER_RADIAN, LIGHT_PC_PER_YEAR
@@ -217,14 +218,13 @@ def depth_error_pc(
     ValueError
         If an argument is out of its range.
     """
-    slopes = depth_partials(theta_deg, age_yr, distance_pc)
-    errors = (theta_err_deg, age_err_yr, distance_err_pc)
-    return np.sqrt(
-        sum(
-            (slope * as_floats(error)) ** 2
-            for slope, error in zip(slopes, errors, strict=True)
-        )
+    by_angle, by_age, by_distance = depth_partials(theta_deg, age_yr, distance_pc)
+    terms = (
+        by_angle * checked_error(theta_err_deg, "theta_err_deg"),
+        by_age * checked_error(age_err_yr, "age_err_yr"),
+        by_distance * checked_error(distance_err_pc, "distance_err_pc"),
     )
+    return np.sqrt(sum(term**2 for term in terms))
 
 
 def depth_partials(
@@ -332,7 +332,7 @@ def speed_arcsec_yr(
         dtheta/d(ct) = (D - z + s rho) / l**2 * drho/d(ct)
     """
     e = Ellipsoid(theta_deg, age_yr, distance_pc)
-    s = np.asarray(slope, dtype=float)
+    s = checked_finite(slope, "slope")
     rho = e.to_observer * e.sin
     # z/r - cos(theta), without the cancellation far from the observer.
     per_depth = e.versine - e.overshoot / e.to_source

@@ -23,6 +23,7 @@ from numpy.typing import ArrayLike
 from latelight.echo.arguments import (
     as_floats,
     checked_distance,
+    checked_finite,
     checked_separation,
     require,
 )
@@ -234,11 +235,9 @@ def sheet_slope(
     """
     e = Ellipsoid(theta_deg, age_yr, distance_pc)
     speed = checked_speed(speed_arcsec_yr)
-    turn = as_floats(turn_deg)
-    require(np.isfinite(turn), "turn_deg", "finite", turn)
     across, per_tilt = delay_gradient(theta_deg, age_yr, distance_pc)
     gradient = light_speed_arcsec_yr(e.to_observer) / speed
-    turned = np.radians(turn)
+    turned = np.radians(checked_finite(turn_deg, "turn_deg"))
     away = (across - gradient * np.cos(turned)) / per_tilt
     aside = -gradient * np.sin(turned) / per_tilt
     radial = (away * e.cos + e.sin) / (e.cos - away * e.sin)
@@ -271,8 +270,7 @@ class _Cubic:
         self.theta = checked_separation(theta_deg)
         self.distance = checked_distance(distance_pc)
         self.speed = checked_speed(speed_arcsec_yr)
-        self.slope = as_floats(slope)
-        require(np.isfinite(self.slope), "slope", "finite", self.slope)
+        self.slope = checked_finite(slope, "slope")
         self.m = self.speed / light_speed_arcsec_yr(self.distance)
         self.sin, self.cos = np.sin(self.theta), np.cos(self.theta)
         self.half = 2.0 * np.sin(self.theta / 2.0)  # 2 V = half**2

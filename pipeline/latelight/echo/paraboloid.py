@@ -20,6 +20,7 @@ from latelight.echo.arguments import (
     checked_angle,
     checked_depth,
     checked_distance,
+    checked_finite,
     require,
 )
 from latelight.echo.constants import LIGHT_PC_PER_YEAR
@@ -140,7 +141,7 @@ def paraboloid_speed_arcsec_yr(
     """
     rho, path = _small_angle(theta_deg, age_yr, distance_pc)
     to_source = rho**2 / (2.0 * path) + path / 2.0
-    s = as_floats(slope)
+    s = checked_finite(slope, "slope")
     with np.errstate(divide="ignore"):
         beta = to_source / (rho - s * path)
     speed = beta * light_speed_arcsec_yr(distance_pc)

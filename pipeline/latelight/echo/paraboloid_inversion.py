@@ -8,7 +8,11 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import ArrayLike
 
-from latelight.echo.arguments import as_floats, checked_distance, checked_separation
+from latelight.echo.arguments import (
+    checked_distance,
+    checked_finite,
+    checked_separation,
+)
 from latelight.echo.constants import LIGHT_PC_PER_YEAR
 from latelight.echo.geometry import light_speed_arcsec_yr
 from latelight.echo.inversion import AgeDepth, age_and_depth, checked_speed
@@ -45,7 +49,7 @@ def paraboloid_age_and_depth(
     speed = checked_speed(speed_arcsec_yr)
     exact = age_and_depth(theta_deg, speed_arcsec_yr, distance_pc, slope=slope)
     beta = speed / light_speed_arcsec_yr(distance)
-    square = beta**2 - 1.0 - 2.0 * beta * as_floats(slope)
+    square = beta**2 - 1.0 - 2.0 * beta * checked_finite(slope, "slope")
     spread = np.sqrt(np.maximum(square, 0.0))
     solutions = []
     for root, part in zip(exact, (beta + spread, beta - spread), strict=True):

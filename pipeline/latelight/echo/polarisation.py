@@ -11,7 +11,13 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import ArrayLike
 
-from latelight.echo.arguments import as_floats, checked_age, checked_separation, require
+from latelight.echo.arguments import (
+    as_floats,
+    checked_age,
+    checked_error,
+    checked_separation,
+    require,
+)
 from latelight.echo.constants import LIGHT_PC_PER_YEAR
 from latelight.records import FloatArray
 
@@ -132,8 +138,8 @@ def polarisation_distance_error_pc(
     theta = checked_separation(theta_deg)
     by_angle = (np.cos(theta) - np.sin(theta)) / _excess(theta)
     return distance * np.hypot(
-        by_angle * np.radians(as_floats(theta_err_deg)),
-        as_floats(age_err_yr) / checked_age(age_yr),
+        by_angle * np.radians(checked_error(theta_err_deg, "theta_err_deg")),
+        checked_error(age_err_yr, "age_err_yr") / checked_age(age_yr),
     )
 
 

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import ArrayLike
 
-from latelight.echo.arguments import as_floats, require
+from latelight.echo.arguments import checked_error
 from latelight.echo.constants import LIGHT_PC_PER_YEAR
 from latelight.echo.geometry import delay_gradient, speed_arcsec_yr
 from latelight.records import FloatArray
@@ -86,7 +86,7 @@ def profile_width(
     ``s = 0`` (from memory).
     """
     durations, thicknesses, seeing = (
-        _checked_width(value, name)
+        checked_error(value, name)
         for value, name in (
             (duration_yr, "duration_yr"),
             (thickness_pc, "thickness_pc"),
@@ -104,10 +104,3 @@ def profile_width(
     return ProfileWidth(
         burst=burst, dust=dust, psf=psf, total=np.sqrt(burst**2 + dust**2 + psf**2)
     )
-
-
-def _checked_width(value: ArrayLike, name: str) -> FloatArray:
-    """Return widths; ValueError unless zero or positive and finite."""
-    width = as_floats(value)
-    require((width >= 0.0) & np.isfinite(width), name, "zero or positive", width)
-    return width

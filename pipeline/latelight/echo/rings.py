@@ -7,7 +7,7 @@ The small-angle form of the ellipsoid for light paths much shorter than all dist
 with ``D`` the distance of the source and ``d`` that of the dust, BOTH FROM THE
 OBSERVER (Trümper & Schönfelder 1973, A&A 25, 445, from memory; Vaughan et al. 2004,
 ApJ 603, L5).  A source at infinity has ``theta = sqrt(2 c t / d)``.  Rings are wide by
-minutes of arc and days old, where this differs from the exact form by less than 1e-6.
+minutes of arc and days old: the exact form differs by about ``c t / d``, 1e-4 and less.
 """
 
 from __future__ import annotations
@@ -15,7 +15,12 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import ArrayLike
 
-from latelight.echo.arguments import as_floats, checked_positive, require
+from latelight.echo.arguments import (
+    as_floats,
+    checked_error,
+    checked_positive,
+    require,
+)
 from latelight.echo.constants import (
     ARCSEC_PER_RADIAN,
     METRES_PER_PARSEC,
@@ -137,11 +142,15 @@ def ring_dust_distance_error_pc(
     distance = ring_dust_distance_pc(
         theta_arcsec, delay_s, source_distance_pc=source_distance_pc
     )
-    share = distance / _checked_source(source_distance_pc)  # d / D
+    of_theta = checked_error(theta_err_arcsec, "theta_err_arcsec")
+    of_delay = checked_error(delay_err_s, "delay_err_s")
+    of_source = checked_error(source_distance_err_pc, "source_distance_err_pc")
+    source = _checked_source(source_distance_pc)
+    share = distance / source  # d / D
     parts = (
-        (1.0 - share) * 2.0 * as_floats(theta_err_arcsec) / as_floats(theta_arcsec),
-        (1.0 - share) * as_floats(delay_err_s) / as_floats(delay_s),
-        share * as_floats(source_distance_err_pc) / as_floats(source_distance_pc),
+        (1.0 - share) * 2.0 * of_theta / as_floats(theta_arcsec),
+        (1.0 - share) * of_delay / as_floats(delay_s),
+        share * of_source / source,
     )
     return distance * np.sqrt(sum(part**2 for part in parts))
 

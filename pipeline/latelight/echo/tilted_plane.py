@@ -23,6 +23,7 @@ from latelight.echo.arguments import (
     checked_age,
     checked_depth,
     checked_distance,
+    checked_finite,
     require,
 )
 from latelight.echo.constants import LIGHT_PC_PER_YEAR
@@ -194,11 +195,11 @@ def tilted_plane_curve(
         As :func:`tilted_plane_ellipse`, or if a point lies at or behind the observer.
     """
     plane = _Plane(age_yr, distance_pc, depth_pc, tilt_deg)
-    phase = np.radians(as_floats(phase_deg))
+    phase = np.radians(checked_finite(phase_deg, "phase_deg"))
     x = plane.centre + plane.along * np.cos(phase)
     y = plane.across * np.sin(phase)
     theta = plane.angle_deg(np.hypot(x, y), x)
-    turned = np.degrees(np.arctan2(y, x)) + as_floats(tilt_pa_deg)
+    turned = np.degrees(np.arctan2(y, x)) + checked_finite(tilt_pa_deg, "tilt_pa_deg")
     theta, turned = np.broadcast_arrays(theta, turned % 360.0)
     return theta, turned
 
@@ -240,7 +241,8 @@ def tilted_plane_angle_deg(
         as_floats(depth_pc),
         cure="ask tilted_plane_curve for the points of a curve beside it",
     )
-    along = np.cos(np.radians(as_floats(position_angle_deg) - as_floats(tilt_pa_deg)))
+    direction = checked_finite(position_angle_deg, "position_angle_deg")
+    along = np.cos(np.radians(direction - checked_finite(tilt_pa_deg, "tilt_pa_deg")))
     rise = plane.tilt * along
     # The positive root of w rho**2 + 2 h rho - inside = 0, without cancellation.
     w, h = 1.0 + rise**2 * plane.flat, rise * plane.lean

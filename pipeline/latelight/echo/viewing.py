@@ -14,7 +14,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import ArrayLike
 
-from latelight.echo.arguments import as_floats, require
+from latelight.echo.arguments import checked_finite
 from latelight.echo.ellipsoid import Ellipsoid
 from latelight.records import FloatArray
 
@@ -74,8 +74,7 @@ def viewing_direction(
         If an argument is out of its range.
     """
     e = Ellipsoid(theta_deg, age_yr, distance_pc)
-    angle = as_floats(position_angle_deg)
-    require(np.isfinite(angle), "position_angle_deg", "finite", angle)
+    angle = checked_finite(position_angle_deg, "position_angle_deg")
     inclination = np.arctan2(e.to_observer * e.sin, e.depth)
     inclination, turned = np.broadcast_arrays(inclination, np.radians(angle))
     across = np.sin(inclination)
