@@ -8,6 +8,7 @@ parallax, with all lengths the same.
 import numpy as np
 import pytest
 
+from latelight.arcs.profiles import lobe_profile
 from latelight.echo.brightness import (
     illuminated_depth_pc,
     scattering_depth,
@@ -78,7 +79,7 @@ def test_width_in_the_galaxy(depth, burst, dust):
 
 
 def test_a_tilt_widens_both_by_the_same():
-    """c tau r / (rho - s ct) and dz ct / (rho - s ct), rho = 100, ct = 50 (computed)."""
+    """c tau r / (rho - s ct), dz ct / (rho - s ct); rho = 100, ct = 50 (computed)."""
     place = (np.degrees(100.0 / FAR), 50.0 / LIGHT_PC_PER_YEAR, FAR)
     arcsec_per_pc = 206_264.806 / FAR
     for slope in (-1.0, 0.0, 1.0, 3.0):
@@ -102,10 +103,10 @@ def test_a_tilt_widens_both_by_the_same():
 )
 def test_a_pair_of_ridges_against_one(ratio, gain):
     """Separation over sigma to the gain in S/N, sqrt(2 (1 - exp(-q**2 / 4 s**2)));
-    computed and here summed from the profiles."""
+    computed, and here summed from the profiles that arcs are fitted with."""
     x = np.linspace(-40.0, 40.0, 16_001)
-    ridge = np.exp(-0.5 * x**2)
-    pair = np.exp(-0.5 * (x - ratio) ** 2) - ridge
+    ridge = lobe_profile(x, 1.0, 0.0)
+    pair = lobe_profile(x - ratio, 1.0, 0.0) - ridge
     found = np.sqrt((pair**2).sum() / (ridge**2).sum())
     assert found == pytest.approx(gain, abs=1e-4)
 
@@ -208,9 +209,10 @@ def test_brightness_of_a_thick_sheet(density, magnitude):
 
 
 def test_scattering_depth_of_the_lit_part():
-    """n_H = 100 per cm3 over 0.06625 pc: 6.68e-3 (computed)."""
+    """n_H = 100 per cm3 over 0.06625 pc: 6.68e-3 (computed, from an albedo and a
+    cross-section of two figures: 1 %)."""
     found = scattering_depth(100.0, 0.06625, V_BAND)
-    assert found == pytest.approx(6.68e-3, rel=3e-3)
+    assert found == pytest.approx(6.68e-3, rel=0.01)
 
 
 def test_equation_7_of_sugerman():

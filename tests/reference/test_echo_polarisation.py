@@ -22,7 +22,8 @@ def degree(mu):
 @pytest.mark.parametrize(
     ("age", "distance", "theta"),
     [
-        # D = c t / theta of the most polarised ring (Sparks 1994, ApJ 433, 19); computed.
+        # D = c t / theta of the most polarised ring (Sparks 1994, ApJ 433, 19),
+        # computed.
         (20.0, 15.2e6, 0.08321),
         (50.0, 16.5e6, 0.19164),
         (10.0, 785e3, 0.80562),
