@@ -31,6 +31,7 @@ from latelight.origin.settings import OriginSettings, SourceSettings
 from latelight.products.settings import ProductSettings
 from latelight.registration.settings import RegistrationSettings
 from latelight.settings import StageSettings
+from latelight.stacking.settings import StackingSettings
 from latelight.subtraction.settings import SubtractionSettings
 
 __all__ = ["NightConfig", "describe_keys", "load_config"]
@@ -45,6 +46,7 @@ class NightConfig(StageSettings):
     pairs: PairSettings = Field(default_factory=PairSettings)
     registration: RegistrationSettings = Field(default_factory=RegistrationSettings)
     matching: MatchingSettings = Field(default_factory=MatchingSettings)
+    stacking: StackingSettings = Field(default_factory=StackingSettings)
     subtraction: SubtractionSettings = Field(default_factory=SubtractionSettings)
     arcs: ArcSettings = Field(default_factory=ArcSettings)
     motion: MotionSettings = Field(default_factory=MotionSettings)

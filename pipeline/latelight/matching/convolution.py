@@ -20,6 +20,7 @@ __all__ = [
     "convolve",
     "convolve_mask",
     "convolve_variance",
+    "convolved_power",
     "gaussian_kernel",
     "kernel_sum",
     "noise_gain",
@@ -27,6 +28,8 @@ __all__ = [
 
 # A block of this side keeps its transforms in the processor's cache.
 _BLOCK = 256
+# Side of the grid on which the power spectrum of noise is held.
+_POWER_SIZE = 64
 # Pixels whose true value is unknown and large: they spoil wherever the kernel
 # gives them some 1e-4 of its peak.  The others were filled from their
 # neighbours, so only the kernel's core matters.
@@ -166,6 +169,26 @@ def noise_gain(kernel: FloatArray, noise_power: FloatArray | None) -> float:
         return white
     power = _folded_power(kernel, noise_power.shape)
     return white * float(np.mean(power * noise_power) / np.mean(power))
+
+
+def convolved_power(kernel: FloatArray, noise_power: FloatArray | None) -> FloatArray:
+    """Return the power spectrum, mean 1, of noise put through a kernel.
+
+    Parameters
+    ----------
+    kernel : float64 array, shape (k, k)
+        The kernel.
+    noise_power : float64 array, shape (64, 64), or None
+        Power spectrum of the noise before, mean 1; None for white noise.
+
+    Returns
+    -------
+    float64 array, shape (64, 64)
+        ``|K^|^2 G`` on the FFT's frequency grid.
+    """
+    before = np.ones((_POWER_SIZE, _POWER_SIZE)) if noise_power is None else noise_power
+    power = _folded_power(kernel, before.shape) * before
+    return power / power.mean()
 
 
 def _folded_power(kernel: FloatArray, shape: tuple[int, ...]) -> FloatArray:

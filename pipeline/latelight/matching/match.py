@@ -16,13 +16,14 @@ from latelight.matching.convolution import (
     convolve,
     convolve_mask,
     convolve_variance,
+    convolved_power,
     gaussian_kernel,
     kernel_sum,
 )
 from latelight.matching.fit import KernelFit, fit_kernel
 from latelight.matching.psf import measure_psf
 from latelight.matching.settings import MatchingSettings
-from latelight.matching.sharpness import Roles, assign_roles
+from latelight.matching.sharpness import Roles, assign_roles, smoothing_needed
 from latelight.matching.stars import choose_stars, matched_clean, spread_over_cells
 from latelight.matching.system import FitImages, build_systems, disc_offsets
 from latelight.records import (
@@ -34,12 +35,13 @@ from latelight.records import (
     PixelArray,
     Plane,
     SpatialKernel,
+    SpatialPsf,
     StarList,
 )
 from latelight.threads import over_rows
 from latelight.widths import FWHM_PER_SIGMA
 
-__all__ = ["match_pair"]
+__all__ = ["match_pair", "smoothing_for"]
 
 _STAGE = "matching"
 
@@ -74,6 +76,7 @@ def match_pair(
     template_stars: StarList,
     alignment: Alignment,
     settings: MatchingSettings,
+    smoothing_px: float | None = None,
 ) -> MatchedPair:
     """Bring a template and a science frame to one PSF and one flux scale.
 
@@ -89,6 +92,10 @@ def match_pair(
         Which stars are the same.
     settings : MatchingSettings
         Table ``[matching]``.
+    smoothing_px : float or None
+        When given, the template is convolved whatever the PSFs, and the science
+        frame first smoothed by a Gaussian of this sigma, pixels: so many templates
+        are brought to one PSF (:func:`smoothing_for` says how much they need).
 
     Returns
     -------
@@ -118,7 +125,11 @@ def match_pair(
         )
         raise ValueError(msg)
     rows, snr = matched_clean(science_stars, template_stars, alignment)
-    roles = _roles(science, template, science_stars, rows, settings)
+    if smoothing_px is None:
+        psfs = _psfs(science, template, science_stars, rows, settings)
+        roles = assign_roles(*psfs, sharpening=settings.sharpening)
+    else:
+        roles = Roles(convolve_template=True, smoothing_px=smoothing_px)
     layers = {True: _layer(template), False: _layer(science)}
     sharp = layers[roles.convolve_template]
     broad = _smoothed(layers[not roles.convolve_template], roles.smoothing_px)
@@ -169,6 +180,37 @@ def match_pair(
     )
 
 
+def smoothing_for(
+    science: Plane,
+    template: Plane,
+    *,
+    science_stars: StarList,
+    template_stars: StarList,
+    alignment: Alignment,
+    settings: MatchingSettings,
+) -> float:
+    """Return the smoothing a science frame needs for a template to be convolved to it.
+
+    Parameters
+    ----------
+    science, template, science_stars, template_stars, alignment, settings
+        As for :func:`match_pair`.
+
+    Returns
+    -------
+    float
+        Sigma of the Gaussian, pixels; 0 when the template is the sharper everywhere.
+
+    Raises
+    ------
+    StageError
+        If there are too few common clean stars for the PSFs.
+    """
+    rows, _ = matched_clean(science_stars, template_stars, alignment)
+    psfs = _psfs(science, template, science_stars, rows, settings)
+    return smoothing_needed(*psfs, sharpening=settings.sharpening)[0]
+
+
 def _positive_sum(kernel: SpatialKernel) -> PixelArray:
     """Return the kernel's sum at every pixel; refuse one that is not positive."""
     total = kernel_sum(kernel)
@@ -181,22 +223,22 @@ def _positive_sum(kernel: SpatialKernel) -> PixelArray:
     return total
 
 
-def _roles(
+def _psfs(
     science: Plane,
     template: Plane,
     stars: StarList,
     rows: IntArray,
     settings: MatchingSettings,
-) -> Roles:
+) -> tuple[SpatialPsf, SpatialPsf]:
+    """Return the PSFs of both frames from the same stars."""
     x, y = stars.x[rows], stars.y[rows]
     spread = spread_over_cells(
         np.arange(rows.size), x, y, shape=science.mask.shape, most=_STARS_FOR_ROLES
     )
     x, y = x[spread], y[spread]
-    return assign_roles(
+    return (
         measure_psf(science, x=x, y=y, settings=settings),
         measure_psf(template, x=x, y=y, settings=settings),
-        sharpening=settings.sharpening,
     )
 
 
@@ -240,8 +282,13 @@ def _convolved(layer: _Layer, kernel: SpatialKernel) -> _Layer:
             layer.variance, layer.mask, kernel, noise_power=layer.noise_power
         ),
         mask=convolve_mask(layer.mask, kernel),
-        noise_power=None,
+        noise_power=convolved_power(kernel.at(*_middle(kernel)), layer.noise_power),
     )
+
+
+def _middle(kernel: SpatialKernel) -> tuple[float, float]:
+    ny, nx = kernel.shape
+    return (nx - 1) / 2, (ny - 1) / 2
 
 
 def _smoothed(layer: _Layer, sigma: float) -> _Layer:
@@ -262,7 +309,8 @@ def _scaled(layer: _Layer, factor: PixelArray) -> _Layer:
 
 
 def _plane(layer: _Layer) -> Plane:
-    return Plane(layer.light + layer.sky, layer.variance, layer.mask)
+    light, sky = layer.light, layer.sky
+    return Plane(light + sky, layer.variance, layer.mask, layer.noise_power)
 
 
 def _fit(

@@ -9,7 +9,7 @@ from scipy import fft
 
 from latelight.records import FloatArray, SpatialPsf
 
-__all__ = ["Roles", "assign_roles"]
+__all__ = ["Roles", "assign_roles", "smoothing_needed"]
 
 _GRID = 64
 # Below this transfer a PSF holds noise rather than stars.
@@ -52,7 +52,34 @@ def assign_roles(
         Share of the PSF's variance that a kernel may take away without being said
         to sharpen: PSFs are not known better.
     """
-    needed = {True: 0.0, False: 0.0}
+    template_needs, science_needs = smoothing_needed(
+        science, template, sharpening=sharpening
+    )
+    # At equal need (equal seeing) the science frame is left alone.
+    choice = template_needs <= science_needs
+    return Roles(
+        convolve_template=choice,
+        smoothing_px=template_needs if choice else science_needs,
+    )
+
+
+def smoothing_needed(
+    science: SpatialPsf, template: SpatialPsf, *, sharpening: float
+) -> tuple[float, float]:
+    """Return the smoothing needed to convolve the template, and the science frame.
+
+    Parameters
+    ----------
+    science, template, sharpening
+        As for :func:`assign_roles`.
+
+    Returns
+    -------
+    template, science : float
+        Sigma of the least Gaussian that the other frame must be given first so that
+        nothing is sharpened when this one is convolved, pixels.
+    """
+    needed = [0.0, 0.0]
     ny, nx = science.kernel.shape
     for fy in _PLACES:
         for fx in _PLACES:
@@ -61,12 +88,10 @@ def assign_roles(
                 science.kernel.at(*where), template.kernel.at(*where)
             )
             low, high = np.linalg.eigvalsh(excess)
-            for choice, least in ((True, low), (False, -high)):
+            for choice, least in enumerate((low, -high)):
                 if least < -sharpening * size:
                     needed[choice] = max(needed[choice], -least)
-    # At equal need (equal seeing) the science frame is left alone.
-    choice = needed[True] <= needed[False]
-    return Roles(convolve_template=choice, smoothing_px=float(np.sqrt(needed[choice])))
+    return float(np.sqrt(needed[0])), float(np.sqrt(needed[1]))
 
 
 def _transfer(psf: FloatArray) -> FloatArray:

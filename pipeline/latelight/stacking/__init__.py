@@ -1,0 +1,1 @@
+"""Stacking stage: a deep template from several epochs of one field."""
