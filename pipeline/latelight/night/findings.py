@@ -14,9 +14,11 @@ from latelight.night.calibration import Calibration
 from latelight.night.journal import Journal
 from latelight.night.pairing import Pair
 from latelight.night.rows import arc_row, candidate_row, residual_row, speed_of
-from latelight.origin.score import score_origins
+from latelight.night.track_rows import interpretation_rows
+from latelight.origin.score import best_origin, score_origins
 from latelight.products.cutouts import Cutout, cut_out
 from latelight.products.rows import ArcRow, ResidualRow
+from latelight.products.track_rows import InterpretationRow
 from latelight.records import (
     Arc,
     Difference,
@@ -40,10 +42,13 @@ class Finding:
         Its ridge, an index of ``Findings.arcs``.
     cutout : Cutout
         Its pixels, and its row without the id, which only the whole night can give.
+    interpretations : tuple of InterpretationRow
+        One a source, without the id.
     """
 
     arc: int
     cutout: Cutout
+    interpretations: tuple[InterpretationRow, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -121,14 +126,19 @@ def find_all(
         arcs, moving = _motions(difference, arcs, pair, config)
     with journal.stage("origin"):
         origins = {
-            index: _best_origin(motion, pair, calibration, sources, config)
+            index: _scores(motion, pair, calibration, sources, config)
             for index, motion in moving.items()
         }
     with journal.stage("products"):
         candidates = []
         for index, motion in moving.items():
             row = candidate_row(
-                arcs[index], motion, origins[index], pair=pair, calibration=calibration
+                arcs[index],
+                motion,
+                best_origin(origins[index], settings=config.origin),
+                pair=pair,
+                calibration=calibration,
+                sources=sources,
             )
             cutout = cut_out(
                 row,
@@ -139,7 +149,8 @@ def find_all(
                 trace=arcs[index].trace,
                 settings=config.products,
             )
-            candidates.append(Finding(index, cutout))
+            meanings = interpretation_rows(row, origins[index], sources=sources)
+            candidates.append(Finding(index, cutout, meanings))
     journal.add(n_arcs=len(arcs), n_candidates=len(candidates))
     return Findings(
         tuple(arc_row(arc, pair=pair, calibration=calibration) for arc in arcs),
@@ -178,20 +189,20 @@ def _motions(
     return tuple(judged), moving
 
 
-def _best_origin(
+def _scores(
     motion: Motion,
     pair: Pair,
     calibration: Calibration,
     sources: tuple[Source, ...],
     config: NightConfig,
-) -> OriginScore | None:
-    """Return the best source of a moving arc, if any explains it well enough."""
+) -> tuple[OriginScore, ...]:
+    """Return how well each source explains a moving arc, best first."""
     ra, dec = calibration.place(motion.x, motion.y)
     pa, _ = calibration.direction(motion.x, motion.y, motion.direction_angle)
     if ra is None or dec is None or pa is None:
-        return None
+        return ()
     speed, speed_err = speed_of(motion, pair, calibration)
-    scores = score_origins(
+    return score_origins(
         sources,
         ra=ra,
         dec=dec,
@@ -203,6 +214,3 @@ def _best_origin(
         settings=config.origin,
         sense_odds=motion.sense_odds,
     )
-    if scores and scores[0].score >= config.origin.min_score:
-        return scores[0]
-    return None

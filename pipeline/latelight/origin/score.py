@@ -10,7 +10,7 @@ random arc.
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -29,7 +29,7 @@ from latelight.origin.sources import age_yr
 from latelight.records import FloatArray, OriginScore, Source
 from latelight.sky import position_angle, separation_deg, wrap_180
 
-__all__ = ["direction_density", "motion_density", "score_origins"]
+__all__ = ["best_origin", "direction_density", "motion_density", "score_origins"]
 
 ANGLE_NODES = 33
 SPEED_NODES = 17
@@ -110,6 +110,23 @@ def score_origins(
     )
     scores = [_score(source, observed, settings) for source in sources]
     return tuple(sorted(scores, key=lambda s: (-s.score, s.separation_deg, s.source)))
+
+
+def best_origin(
+    scores: Sequence[OriginScore], *, settings: OriginSettings
+) -> OriginScore | None:
+    """Return the source to be named, best of all; None when none explains the arc.
+
+    Parameters
+    ----------
+    scores : sequence of OriginScore
+        Best first.
+    settings : OriginSettings
+        ``min_score`` is used.
+    """
+    if scores and scores[0].score >= settings.min_score:
+        return scores[0]
+    return None
 
 
 def direction_density(
