@@ -243,7 +243,8 @@ def test_without_a_wcs_only_pixels_are_left():
     }
     assert known == {
         "mjd", "mjd_first", "mjd_last", "snr", "x", "y", "normal_angle",
-        "normal_angle_err", "length_px", "width_px", "sense_odds", "chi2",
+        "normal_angle_err", "length_px", "width_px", "sense_odds", "chi2", "speed_px",
+        "speed_err_px",
     }  # fmt: skip
     assert interpretation_rows(row, (), sources=SOURCES) == ()
     points = track_point_rows(

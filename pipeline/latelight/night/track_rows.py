@@ -105,6 +105,8 @@ def track_row(
         sense_odds=known(track.sense_odds),
         chi2=known(track.chi2),
         seeing=scaled(float(np.median(series.fwhm_px)), pixel),
+        speed_px=known(track.speed_px_yr),
+        speed_err_px=known(track.speed_err_px_yr),
         source_separation=known(score.separation_deg) if score else None,
     )
     return with_meaning(row, sources)

@@ -31,6 +31,9 @@ def track_facts(row: TrackRow) -> list[tuple[str, str]]:
             sign = "" if change.startswith("-") else "+"
             speed += f" ({sign}{change} a year)"
         listed.append(("speed along the normal", speed))
+    elif row.speed_px is not None:
+        speed = f"{measured(row.speed_px, row.speed_err_px)} px/yr"
+        listed.append(("speed along the normal", speed))
     return [*listed, _way(row), *_track_brightness(row), *_origin(row)]
 
 

@@ -94,15 +94,23 @@ def draw_picture(cutout: Cutout, *, settings: ProductSettings) -> Image.Image:
     return picture
 
 
-def png_bytes(picture: Image.Image) -> bytes:
-    """Return a picture as PNG of 256 colours; the same picture gives the same bytes.
+def png_bytes(picture: Image.Image, *, few_colours: bool = True) -> bytes:
+    """Return a picture as PNG; the same picture gives the same bytes.
 
-    The fewer colours cannot be told from the full ones by eye, and take half the
-    time and a third of the bytes.
+    Parameters
+    ----------
+    picture : PIL.Image.Image
+        RGB.
+    few_colours : bool
+        Keep 256 colours: in images full of noise they cannot be told from all of
+        them by eye, and take half the time and a third of the bytes.  Smooth
+        gradients need all.
     """
     stream = io.BytesIO()
-    fewer = picture.quantize(256, Image.Quantize.FASTOCTREE, dither=Image.Dither.NONE)
-    fewer.save(stream, format="PNG", compress_level=3)
+    if few_colours:
+        way = Image.Quantize.FASTOCTREE
+        picture = picture.quantize(256, way, dither=Image.Dither.NONE)
+    picture.save(stream, format="PNG", compress_level=3)
     return stream.getvalue()
 
 

@@ -57,13 +57,8 @@ class _Axes:
     def down(self, mjd: FloatArray) -> FloatArray:
         """Return heights: linear between the strips, and on beyond the outer two."""
         inner = np.interp(mjd, self.mjd, self.y)
-        per_day = [
-            (self.y[j] - self.y[i]) / (self.mjd[j] - self.mjd[i])
-            for i, j in ((0, 1), (-2, -1))
-        ]
-        before = np.minimum(mjd - self.mjd[0], 0.0) * per_day[0]
-        after = np.maximum(mjd - self.mjd[-1], 0.0) * per_day[1]
-        return inner + before + after
+        per_day = (self.y[-1] - self.y[0]) / (self.mjd[-1] - self.mjd[0])
+        return inner + per_day * (mjd - np.clip(mjd, self.mjd[0], self.mjd[-1]))
 
 
 def draw_position_time(
@@ -105,7 +100,10 @@ def draw_position_time(
             height=round(thick * OVERSAMPLING),
             smooth=True,
         )
-        panel.paste(strip, (0, round((middle - thick / 2) * OVERSAMPLING)))
+        top = round((middle - thick / 2) * OVERSAMPLING)
+        panel.paste(strip, (0, top))
+        box = (0, top, strip.width - 1, top + strip.height - 1)
+        ImageDraw.Draw(panel).rectangle(box, outline=RULE, width=OVERSAMPLING)
     canvas = Canvas(panel)
     _draw_fit(canvas, axes, cutout, height)
     _draw_points(canvas, axes, track)

@@ -250,6 +250,20 @@ _PIXELS = (
     real("chi2", ".3f", "", "stat.fit.chi2", "Reduced chi-square of the joint fit."),
     real("seeing", ".3f", "arcsec", "instr.obsty.seeing", "Median FWHM of the epochs."),
     real(
+        "speed_px",
+        ".4f",
+        "pix/yr",
+        "phys.veloc.ang;instr.pixel",
+        "Apparent speed along normal_angle at mjd per Julian year.",
+    ),
+    real(
+        "speed_err_px",
+        ".4f",
+        "pix/yr",
+        "stat.error;phys.veloc.ang;instr.pixel",
+        "1 sigma of speed_px.",
+    ),
+    real(
         "source_separation",
         ".5f",
         "deg",

@@ -76,6 +76,8 @@ TRACK_CARDS = {
     "sense_odds": ("SENSEODD", "log10 odds of the sense"),
     "chi2": ("CHI2", "reduced chi-square of the fit"),
     "seeing": ("SEEING", "median FWHM of the epochs"),
+    "speed_px": ("SPEEDPX", "along the normal"),
+    "speed_err_px": ("SPEEDPXE", "1 sigma"),
     "source_separation": ("SRCSEP", "track to source"),
     "dust_distance": ("DUSTDIST", "dust to source"),
     "dust_distance_err": ("DUSTDERR", "1 sigma"),

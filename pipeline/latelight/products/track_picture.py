@@ -61,7 +61,8 @@ def write_track_picture(
     ProductError
         If the file cannot be written.
     """
-    write_bytes(path, png_bytes(draw_track_picture(cutout, settings=settings)))
+    picture = draw_track_picture(cutout, settings=settings)
+    write_bytes(path, png_bytes(picture, few_colours=False))
 
 
 def draw_track_picture(
@@ -138,9 +139,8 @@ def _draw_moving(
     marks.origin()
     marks.motion()
     marks.trace(0.0)
-    marks.compass()
     marks.scale_bar()
-    _place(picture, 0, marks.finished(), "added along the motion, own scale")
+    _place(picture, 0, marks.finished(), "added along the motion")
 
 
 def _draw_epochs(
@@ -166,10 +166,12 @@ def _draw_epochs(
         common = DifferenceScale(scale.pixels, limit)
         marks = Marks(_panel(common, cutout.epochs[i], smoothing), arc)
         marks.ends(arc.places[i])
+        if panel == 1:
+            marks.compass()
         _place(picture, panel, marks.finished(), calendar_date(cutout.mjd[i]))
     y = _TOP + _BODY + 6
     draw_colour_bar(picture, x=_RIGHT + 44, y=y, width=84, limit=limit)
-    words = ["epoch minus static sky"]
+    words = ["epochs minus static sky, one scale"]
     if smoothing > 0.0:
         words.append(f"smoothed by {smoothing:g} px")
     words.append("hatched: masked")

@@ -73,6 +73,8 @@ class TrackRow:
         Reduced chi-square of the joint fit.
     seeing : float or None
         Median FWHM of the epochs, arcsec.
+    speed_px, speed_err_px : float or None
+        As ``speed``, pixels per Julian year.
     source_separation : float or None
         Angle between track and source, degrees.
     dust_distance, dust_distance_err : float or None
@@ -129,6 +131,8 @@ class TrackRow:
     sense_odds: float | None
     chi2: float | None
     seeing: float | None
+    speed_px: float | None = None
+    speed_err_px: float | None = None
     source_separation: float | None = None
     dust_distance: float | None = None
     dust_distance_err: float | None = None
