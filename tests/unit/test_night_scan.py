@@ -9,6 +9,7 @@ from latelight.config import NightConfig
 from latelight.errors import SettingsError
 from latelight.frames.headers import FrameHeader
 from latelight.night import scan
+from latelight.night.quality import Quality
 
 
 def _config(folder, *patterns, template="earliest"):
@@ -80,7 +81,7 @@ def plan_of(monkeypatch, tmp_path):
 
 
 def _quality(fwhm_px, sigma=10.0, arcsec=None):
-    return scan._Quality(fwhm_px, arcsec, sigma)
+    return Quality(fwhm_px, arcsec, sigma)
 
 
 def test_the_sharpest_on_the_sky_is_the_template(plan_of):

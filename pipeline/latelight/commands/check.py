@@ -47,6 +47,7 @@ def _check(arguments: argparse.Namespace) -> int:
         arguments.settings, lambda: plan_night(config, jobs=arguments.jobs)
     )
     plan = night.plan
+    comparisons = plan.comparisons
     print_table(
         ("field", "filter", "template", "science", "days"),
         [
@@ -57,18 +58,18 @@ def _check(arguments: argparse.Namespace) -> int:
                 pair.science.name,
                 f"{pair.science.mjd - pair.template.mjd:+.2f}",
             )
-            for pair in plan.pairs
+            for pair in comparisons
         ],
     )
     for remark in plan.remarks:
-        print(f"left out  {remark}")
+        print(f"remark    {remark}")
     for header in night.headers if arguments.verbose > 0 else ():
         for note in header.notes:
             print(f"note      {header.name}: {note}")
     for row in plan.failed:
         print(f"unusable  {row.pair}: {row.reason}")
     print(
-        f"{count(len(night.headers), 'frame')} in {count(len(plan.pairs), 'pair')}, "
+        f"{count(len(night.headers), 'frame')} in {count(len(comparisons), 'pair')}, "
         f"{len(plan.failed)} unusable; {count(len(sources), 'source')} listed"
     )
     return SOME_FAILED if plan.failed else DONE

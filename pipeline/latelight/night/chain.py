@@ -2,10 +2,7 @@
 
 from __future__ import annotations
 
-import logging
 import math
-import traceback
-import warnings
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -13,7 +10,6 @@ from typing import Any
 import numpy as np
 
 from latelight.config import NightConfig
-from latelight.errors import LatelightError
 from latelight.frames.headers import FrameHeader
 from latelight.frames.reader import read_frames
 from latelight.matching.match import match_pair
@@ -41,7 +37,7 @@ from latelight.subtraction.difference import subtract
 from latelight.subtraction.proper import subtract_proper
 from latelight.threads import on_each
 
-__all__ = ["Outcome", "PairTask", "load_frame", "process_pair"]
+__all__ = ["Outcome", "PairTask", "judge", "load_frame", "process_pair", "seeing"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -102,18 +98,8 @@ def process_pair(task: PairTask) -> Outcome:
     """
     journal = Journal(task.pair)
     findings, difference, wcs, part = Findings(), None, None, None
-    with warnings.catch_warnings(record=True) as caught:
-        warnings.simplefilter("always")
-        try:
-            findings, difference, wcs, part = _run(task, journal)
-        except LatelightError as error:
-            journal.close_failed(str(error))
-        except Exception as error:
-            where = journal.at or "chain"
-            reason = f"{where}: unexpected {type(error).__name__}: {error}"
-            journal.close_failed(reason, trace=traceback.format_exc())
-    for text in dict.fromkeys(f"{w.category.__name__}: {w.message}" for w in caught):
-        journal.say(text, stage="", level=logging.WARNING)
+    with journal.guarded():
+        findings, difference, wcs, part = _run(task, journal)
     keep = task.config.products.differences
     return Outcome(
         row=journal.row,
@@ -168,7 +154,7 @@ def _run(
         difference = _subtract(science, resampled, matched, alignment, stars, config)
     del resampled
     calibration = _calibrate(science, matched, task.pair, journal)
-    _judge(difference, calibration, journal)
+    judge(difference, calibration, journal)
     findings = find_all(
         difference,
         matched,
@@ -278,8 +264,8 @@ def _find_stars(
         n_stars_template=len(template_stars),
         fwhm_science_px=known(stars.fwhm_px),
         fwhm_template_px=known(template_stars.fwhm_px),
-        seeing_science=_seeing(science, stars),
-        seeing_template=_seeing(template, template_stars),
+        seeing_science=seeing(science, stars),
+        seeing_template=seeing(template, template_stars),
     )
     return stars, template_stars
 
@@ -363,7 +349,7 @@ def _calibrate(
     return Calibration(science.wcs, zero_point)
 
 
-def _judge(difference: Difference, calibration: Calibration, journal: Journal) -> None:
+def judge(difference: Difference, calibration: Calibration, journal: Journal) -> None:
     """Record how quiet and how deep a difference is."""
     journal.add(
         fwhm_difference_px=known(difference.fwhm_px),
@@ -377,7 +363,7 @@ def _judge(difference: Difference, calibration: Calibration, journal: Journal) -
         journal.add(depth=calibration.depth(sigma, difference.pixels.shape))
 
 
-def _seeing(frame: Frame, stars: StarList) -> float | None:
+def seeing(frame: Frame, stars: StarList) -> float | None:
     """Return the width of the stars, arcsec."""
     ny, nx = frame.plane.pixels.shape
     scale = Calibration(frame.wcs, None).scale(0.5 * (nx - 1), 0.5 * (ny - 1))

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from typing import Literal
 
 import numpy as np
 
@@ -12,7 +11,7 @@ from latelight.config import NightConfig
 from latelight.motion.measure import measure_motion
 from latelight.night.calibration import Calibration
 from latelight.night.journal import Journal
-from latelight.night.pairing import Pair
+from latelight.night.pairing import AnyPair, StackPair
 from latelight.night.rows import arc_row, candidate_row, residual_row, speed_of
 from latelight.night.track_rows import interpretation_rows
 from latelight.origin.score import best_origin, score_origins
@@ -95,7 +94,7 @@ def find_all(
     matched: MatchedPair,
     *,
     stars: StarList,
-    pair: Pair,
+    pair: AnyPair,
     calibration: Calibration,
     sources: tuple[Source, ...],
     config: NightConfig,
@@ -109,7 +108,7 @@ def find_all(
         The pair subtracted, and the planes it was made from.
     stars : StarList
         Stars of the science frame.
-    pair : Pair
+    pair : Pair or StackPair
         The two frames.
     calibration : Calibration
         Scales of the science frame.
@@ -164,34 +163,47 @@ def find_all(
 
 
 def _motions(
-    difference: Difference, arcs: tuple[Arc, ...], pair: Pair, config: NightConfig
+    difference: Difference, arcs: tuple[Arc, ...], pair: AnyPair, config: NightConfig
 ) -> tuple[tuple[Arc, ...], dict[int, Motion]]:
     """Measure every arc that is worth a look.
 
     Returns the arcs, those that cannot be measured set aside with the reason, and
     the motions by the index of their arc.
     """
-    later: Literal["science", "template"] = (
-        "science" if pair.science.mjd > pair.template.mjd else "template"
-    )
     judged: list[Arc] = []
     moving: dict[int, Motion] = {}
     for index, arc in enumerate(arcs):
         verdict = arc.verdict
+        if verdict == "arc" and isinstance(pair, StackPair) and arc.sign < 0:
+            verdict = "of the stack: brighter in other epochs"
         if verdict == "arc":
             try:
-                moving[index] = measure_motion(
-                    difference, arc, later=later, settings=config.motion
-                )
+                moving[index] = _motion(difference, arc, pair, config)
             except ValueError as error:
                 verdict = f"not measurable: {error}"
         judged.append(replace(arc, verdict=verdict))
     return tuple(judged), moving
 
 
+def _motion(
+    difference: Difference, arc: Arc, pair: AnyPair, config: NightConfig
+) -> Motion:
+    """Measure one arc.
+
+    A stack is not of one moment: what it has of the arc tells no shift, and nothing
+    of the sense when it was taken before as well as after.
+    """
+    motion = measure_motion(
+        difference, arc, later=pair.later or "science", settings=config.motion
+    )
+    if isinstance(pair, StackPair):
+        motion = replace(motion, shift_px=np.nan, shift_err_px=np.nan, lobes=1)
+    return motion if pair.later else replace(motion, sense_odds=0.0)
+
+
 def _scores(
     motion: Motion,
-    pair: Pair,
+    pair: AnyPair,
     calibration: Calibration,
     sources: tuple[Source, ...],
     config: NightConfig,

@@ -4,12 +4,15 @@ from __future__ import annotations
 
 import logging
 import time
+import traceback
+import warnings
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import replace
 from typing import Any
 
-from latelight.night.pairing import Pair, failed_pair
+from latelight.errors import LatelightError
+from latelight.night.pairing import AnyPair, failed_pair
 from latelight.night.record import Event, peak_memory_mb
 from latelight.products.rows import PairRow
 
@@ -21,7 +24,7 @@ class Journal:
 
     Parameters
     ----------
-    pair : Pair
+    pair : Pair or StackPair
         The pair; its row counts as failed until it is closed as done.
 
     Attributes
@@ -35,12 +38,42 @@ class Journal:
         The stage that is running, or that failed; empty between stages.
     """
 
-    def __init__(self, pair: Pair) -> None:
+    def __init__(self, pair: AnyPair) -> None:
         self._name = pair.name
-        self._start = time.perf_counter()
+        self._seconds = 0.0
+        self._since = time.perf_counter()
         self.row: PairRow = failed_pair(pair, "")
         self.events: list[Event] = []
         self.at = ""
+
+    @property
+    def closed(self) -> bool:
+        """Whether the pair is done or has failed with a reason."""
+        return self.row.status == "done" or self.row.reason != ""
+
+    @contextmanager
+    def guarded(self) -> Iterator[None]:
+        """Work on the pair; whatever goes wrong closes it as failed, and is kept.
+
+        An error raised on purpose leaves its reason, anything else its kind, and its
+        traceback in the log.  The time of the pair is that spent in here.
+        """
+        self._since = time.perf_counter()
+        with warnings.catch_warnings(record=True) as caught:
+            warnings.simplefilter("always")
+            try:
+                yield
+            except LatelightError as error:
+                self.close_failed(str(error))
+            except Exception as error:
+                where = self.at or "chain"
+                reason = f"{where}: unexpected {type(error).__name__}: {error}"
+                self.close_failed(reason, trace=traceback.format_exc())
+        for text in dict.fromkeys(
+            f"{w.category.__name__}: {w.message}" for w in caught
+        ):
+            self.say(text, stage="", level=logging.WARNING)
+        self._seconds += time.perf_counter() - self._since
 
     def add(self, **facts: Any) -> None:
         """Fill fields of the row."""
@@ -74,7 +107,8 @@ class Journal:
         self._close(f"failed: {reason}", logging.ERROR, trace)
 
     def _close(self, message: str, level: int, trace: str) -> None:
-        seconds, memory = time.perf_counter() - self._start, peak_memory_mb()
+        seconds = self._seconds + time.perf_counter() - self._since
+        memory = peak_memory_mb()
         self.add(seconds=seconds, peak_memory=memory)
         self.events.append(
             Event(message, self._name, self.at, seconds, memory, level, trace)

@@ -5,15 +5,33 @@ from __future__ import annotations
 import re
 from collections import defaultdict
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
+from typing import Literal, TypeVar
 
 from latelight.frames.headers import FrameHeader
 from latelight.night.overlap import overlap_fraction
 from latelight.night.settings import PairSettings
 from latelight.products.rows import PairRow
 
-__all__ = ["Pair", "Plan", "failed_frame", "failed_pair", "plan_pairs", "set_aside"]
+__all__ = [
+    "AnyPair",
+    "Neighbours",
+    "Pair",
+    "Plan",
+    "Stack",
+    "StackPair",
+    "StackTemplate",
+    "failed_frame",
+    "failed_pair",
+    "file_name",
+    "plan_pairs",
+    "set_aside",
+    "time_order",
+    "with_unique_names",
+]
+
+Side = Literal["science", "template"]
 
 # Two readings of one clock; no exposure is shorter than this apart from the next.
 _SAME_MOMENT_DAYS = 1e-6
@@ -35,6 +53,75 @@ class Pair:
     template: FrameHeader
     science: FrameHeader
 
+    @property
+    def later(self) -> Side:
+        """Which of the two was taken later."""
+        return "science" if self.science.mjd > self.template.mjd else "template"
+
+
+@dataclass(frozen=True, slots=True)
+class StackTemplate:
+    """A template made of several epochs.
+
+    Attributes
+    ----------
+    name : str
+        What it is made of, in words.
+    mjd : float
+        Its mean epoch, MJD.
+    mjds : tuple of float
+        Those of its frames.
+    """
+
+    name: str
+    mjd: float
+    mjds: tuple[float, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class StackPair:
+    """A frame to be compared with a stack of the other epochs of its field.
+
+    Attributes
+    ----------
+    name : str
+        Unique in a night, and fit for the name of a file.
+    template : StackTemplate
+        The stack.
+    science : FrameHeader
+        The frame.
+    """
+
+    name: str
+    template: StackTemplate
+    science: FrameHeader
+
+    @property
+    def later(self) -> Side | None:
+        """Which of the two was taken later; None when the stack has both sides."""
+        if all(mjd < self.science.mjd for mjd in self.template.mjds):
+            return "science"
+        if all(mjd > self.science.mjd for mjd in self.template.mjds):
+            return "template"
+        return None
+
+
+AnyPair = Pair | StackPair
+SomePair = TypeVar("SomePair", Pair, StackPair)
+
+
+@dataclass(frozen=True, slots=True)
+class Stack:
+    """The epochs of one field that are worked on together.
+
+    Attributes
+    ----------
+    pairs : tuple of StackPair
+        Each epoch with the stack of the others, in order of time.
+    """
+
+    pairs: tuple[StackPair, ...]
+
 
 @dataclass(frozen=True, slots=True)
 class Plan:
@@ -48,11 +135,19 @@ class Plan:
         Frames that cannot take part, with the reason.
     remarks : tuple of str
         Frames left out as is right, in words for the log.
+    stacks : tuple of Stack
+        Fields whose template is a stack, in the same order.
     """
 
     pairs: tuple[Pair, ...]
     failed: tuple[PairRow, ...]
     remarks: tuple[str, ...]
+    stacks: tuple[Stack, ...] = ()
+
+    @property
+    def comparisons(self) -> tuple[AnyPair, ...]:
+        """Everything that will be compared: pairs, then frames with stacks."""
+        return (*self.pairs, *(pair for stack in self.stacks for pair in stack.pairs))
 
 
 def set_aside(
@@ -133,8 +228,8 @@ def plan_pairs(
     failed: list[PairRow] = []
     remarks: list[str] = []
     given = {t.path for t in templates}
-    known = _Neighbours(templates or headers)
-    for science in sorted(headers, key=_order):
+    known = Neighbours(templates or headers)
+    for science in sorted(headers, key=time_order):
         if science.path in given:
             continue
         rivals = known.of(science, min_overlap=settings.min_overlap)
@@ -152,24 +247,26 @@ def plan_pairs(
                 f"(pairs.min_days = {settings.min_days:g}), not compared with it"
             )
             continue
-        pairs.append(Pair(_name(science, template), template, science))
-    return Plan(_with_unique_names(pairs), tuple(failed), tuple(remarks))
+        name = file_name(science.name, template.name)
+        pairs.append(Pair(name, template, science))
+    return Plan(with_unique_names(pairs), tuple(failed), tuple(remarks))
 
 
-def _order(header: FrameHeader) -> tuple[str, str, str, float, str]:
+def time_order(header: FrameHeader) -> tuple[str, str, str, float, str]:
+    """Return the key that orders frames by field, filter, chip and epoch."""
     return (header.field, header.filter, header.chip, header.mjd, str(header.path))
 
 
-def _name(science: FrameHeader, template: FrameHeader) -> str:
+def file_name(science: str, template: str) -> str:
     """Return the name of a pair, fit for the name of a file."""
-    return re.sub(r"[^\w.+-]+", "_", f"{science.name}-{template.name}")
+    return re.sub(r"[^\w.+-]+", "_", f"{science}-{template}")
 
 
 def _days(a: FrameHeader, b: FrameHeader) -> float:
     return abs(a.mjd - b.mjd)
 
 
-class _Neighbours:
+class Neighbours:
     """Frames by their words, so that a night of many chips is searched quickly."""
 
     def __init__(self, headers: Sequence[FrameHeader]) -> None:
@@ -231,14 +328,14 @@ def _why_alone(
     return f"one epoch only: no other frame of {what}; add frames of another epoch"
 
 
-def _with_unique_names(pairs: Sequence[Pair]) -> tuple[Pair, ...]:
+def with_unique_names(pairs: Sequence[SomePair]) -> tuple[SomePair, ...]:
     """Put numbers on the names that frames of the same name in two folders share."""
     seen: dict[str, int] = {}
-    unique: list[Pair] = []
+    unique: list[SomePair] = []
     for pair in pairs:
         count = seen[pair.name] = seen.get(pair.name, 0) + 1
         name = pair.name if count == 1 else f"{pair.name}-{count}"
-        unique.append(Pair(name, pair.template, pair.science))
+        unique.append(replace(pair, name=name))
     return tuple(unique)
 
 
@@ -257,7 +354,7 @@ def failed_frame(header: FrameHeader, reason: str) -> PairRow:
     )
 
 
-def failed_pair(pair: Pair, reason: str) -> PairRow:
+def failed_pair(pair: AnyPair, reason: str) -> PairRow:
     """Return the row of a pair that could not be finished."""
     return PairRow(
         pair=pair.name,

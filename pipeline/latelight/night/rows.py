@@ -7,7 +7,7 @@ from dataclasses import replace
 from typing import TypeVar
 
 from latelight.night.calibration import Calibration, known, magnitude_error, scaled
-from latelight.night.pairing import Pair
+from latelight.night.pairing import AnyPair
 from latelight.origin.interpret import interpret
 from latelight.products.meaning_columns import MEANING_COLUMNS
 from latelight.products.rows import ArcRow, CandidateRow, ResidualRow
@@ -39,9 +39,12 @@ _STRAIGHT_PX = 0.1
 
 
 def speed_of(
-    motion: Motion, pair: Pair, calibration: Calibration
+    motion: Motion, pair: AnyPair, calibration: Calibration
 ) -> tuple[float, float] | tuple[None, None]:
-    """Return the speed of an arc along its motion and 1 sigma, arcsec/yr."""
+    """Return the speed of an arc along its motion and 1 sigma, arcsec/yr.
+
+    None against a stack: such a motion has no shift.
+    """
     _, scale = calibration.direction(motion.x, motion.y, motion.direction_angle)
     shift, shift_err = known(motion.shift_px), known(motion.shift_err_px)
     if scale is None or shift is None or shift_err is None:
@@ -55,7 +58,7 @@ def candidate_row(
     motion: Motion,
     score: OriginScore | None,
     *,
-    pair: Pair,
+    pair: AnyPair,
     calibration: Calibration,
     sources: Iterable[Source] = (),
 ) -> CandidateRow:
@@ -154,7 +157,7 @@ def meaning_of(row: CandidateRow | TrackRow, source: Source) -> Interpretation |
     )
 
 
-def arc_row(arc: Arc, *, pair: Pair, calibration: Calibration) -> ArcRow:
+def arc_row(arc: Arc, *, pair: AnyPair, calibration: Calibration) -> ArcRow:
     """Return the row of a ridge, kept or set aside."""
     ra, dec = calibration.place(arc.x, arc.y)
     normal_pa, across = calibration.direction(arc.x, arc.y, arc.normal_angle)
@@ -185,7 +188,7 @@ def arc_row(arc: Arc, *, pair: Pair, calibration: Calibration) -> ArcRow:
 
 
 def residual_row(
-    residual: CompactResidual, *, pair: Pair, calibration: Calibration
+    residual: CompactResidual, *, pair: AnyPair, calibration: Calibration
 ) -> ResidualRow:
     """Return the row of a compact residual."""
     ra, dec = calibration.place(residual.x, residual.y)

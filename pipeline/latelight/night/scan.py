@@ -7,18 +7,17 @@ from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
-import numpy as np
-
 from latelight.config import NightConfig
 from latelight.errors import FrameError, SettingsError
 from latelight.frames.digest import file_digest
 from latelight.frames.files import frame_stem
 from latelight.frames.headers import FrameHeader, read_headers
-from latelight.night.calibration import Calibration
 from latelight.night.chain import load_frame
 from latelight.night.engine import Lost, run_tasks
 from latelight.night.pairing import Plan, failed_frame, plan_pairs, set_aside
+from latelight.night.quality import Quality, flux_noises, quality_of, widths
 from latelight.night.settings import TEMPLATE_CHOICES
+from latelight.night.stack_planning import StackPlan, plan_stacks
 from latelight.products.rows import PairRow
 from latelight.registration.stars import detect_stars
 
@@ -57,15 +56,35 @@ def plan_night(config: NightConfig, *, jobs: int) -> Night:
     Raises
     ------
     SettingsError
-        If no file matches, or the template named in the settings is unusable.
+        If no file matches, the template named in the settings is unusable, or a
+        stack is asked for with a method of subtraction that takes none.
     """
     headers, failed, digests = _read_all(find_files(config), config)
     kept, copies = set_aside(headers, digests)
     templates = _given_templates(config, digests)
     kept, unmeasured, rank = _ranked(kept, config, jobs)
-    plan = plan_pairs(kept, settings=config.pairs, rank=rank, templates=templates)
+    stacked = _stacks(kept, config)
+    plan = plan_pairs(
+        stacked.rest, settings=config.pairs, rank=rank, templates=templates
+    )
     every = (*failed, *copies, *unmeasured, *plan.failed)
-    return Night(kept, Plan(plan.pairs, every, plan.remarks), digests)
+    remarks = stacked.remarks + plan.remarks
+    return Night(kept, Plan(plan.pairs, every, remarks, stacked.stacks), digests)
+
+
+def _stacks(headers: tuple[FrameHeader, ...], config: NightConfig) -> StackPlan:
+    """Return the stacks, where the settings ask for them, and all other frames."""
+    if config.pairs.template != "stack":
+        return StackPlan((), headers, ())
+    if config.subtraction.method != "kernel":
+        fault = (
+            'subtraction.method: must be "kernel" with pairs.template = "stack", got '
+            f'"{config.subtraction.method}"; change one of the two'
+        )
+        raise SettingsError(None, [fault])
+    return plan_stacks(
+        headers, settings=config.pairs, min_epochs=config.stacking.min_epochs
+    )
 
 
 def find_files(config: NightConfig) -> tuple[Path, ...]:
@@ -137,15 +156,6 @@ def _given_templates(
         raise SettingsError(None, [fault]) from None
 
 
-@dataclass(frozen=True, slots=True)
-class _Quality:
-    """How sharp and how quiet a frame is: pixels, arcsec or None, and counts."""
-
-    fwhm_px: float
-    fwhm_arcsec: float | None
-    sigma: float
-
-
 def _ranked(
     headers: tuple[FrameHeader, ...], config: NightConfig, jobs: int
 ) -> tuple[
@@ -154,12 +164,12 @@ def _ranked(
     """Return the frames that can be ranked, the others' rows, and the rank."""
     if config.pairs.template not in ("sharpest", "deepest"):
         return headers, (), lambda header: header.mjd
-    quality: dict[tuple[Path, str], _Quality] = {}
+    quality: dict[tuple[Path, str], Quality] = {}
     failed: list[PairRow] = []
     tasks = [(header, config) for header in headers]
     for index, found in sorted(run_tasks(_measure, tasks, jobs=jobs), key=_first):
         header = headers[index]
-        if isinstance(found, _Quality):
+        if isinstance(found, Quality):
             quality[header.path, header.chip] = found
         else:
             reason = found.reason if isinstance(found, Lost) else found
@@ -167,9 +177,9 @@ def _ranked(
     kept = tuple(h for h in headers if (h.path, h.chip) in quality)
     measured = [quality[h.path, h.chip] for h in kept]
     if config.pairs.template == "sharpest":
-        scores = _widths(measured)
+        scores = widths(measured)
     else:
-        scores = _noises(kept, measured)
+        scores = flux_noises(kept, measured)
     ranks = {(h.path, h.chip): s for h, s in zip(kept, scores, strict=True)}
     return kept, tuple(failed), lambda header: ranks[header.path, header.chip]
 
@@ -178,38 +188,13 @@ def _first(item: tuple[int, object]) -> int:
     return item[0]
 
 
-def _measure(task: tuple[FrameHeader, NightConfig]) -> _Quality | str:
+def _measure(task: tuple[FrameHeader, NightConfig]) -> Quality | str:
     """Measure a frame; return why it cannot be when so."""
     header, config = task
     try:
         frame = load_frame(header, config)
-        fwhm = detect_stars(frame.plane, settings=config.registration).fwhm_px
+        stars = detect_stars(frame.plane, settings=config.registration)
     except Exception as error:
         return f"unusable as a frame of a pair: {error}"
-    if not np.isfinite(fwhm):
-        return "no star stands out: sharpness and depth are unknown"
-    ny, nx = frame.plane.pixels.shape
-    scale = Calibration(frame.wcs, None).scale(0.5 * (nx - 1), 0.5 * (ny - 1))
-    good = frame.plane.mask == 0
-    sigma = float(np.sqrt(np.median(frame.plane.variance[good])))
-    return _Quality(fwhm, None if scale is None else fwhm * scale, sigma)
-
-
-def _widths(quality: Sequence[_Quality]) -> list[float]:
-    """Return the widths on the sky, or in pixels when a frame has no WCS."""
-    widths = [q.fwhm_arcsec for q in quality if q.fwhm_arcsec is not None]
-    return widths if len(widths) == len(quality) else [q.fwhm_px for q in quality]
-
-
-def _noises(headers: Sequence[FrameHeader], quality: Sequence[_Quality]) -> list[float]:
-    """Return the noise of a star's flux in each frame, on one flux scale.
-
-    The noise of a point source on a bright sky goes as sigma times the width of
-    the PSF.  The scale is that of the zero points, or where one is missing, that
-    of the exposure times.
-    """
-    if all(h.zero_point is not None for h in headers):
-        scales = [10.0 ** (-0.4 * (h.zero_point or 0.0)) for h in headers]
-    else:
-        scales = [1.0 / h.exposure_s for h in headers]
-    return [q.sigma * q.fwhm_px * s for q, s in zip(quality, scales, strict=True)]
+    found = quality_of(frame, stars)
+    return found or "no star stands out: sharpness and depth are unknown"

@@ -125,6 +125,9 @@ class SeriesPart:
         Of :class:`Epoch`.
     seeds : tuple of TrackSeed
         Arcs of the pair that are worth a look, on the grid.
+    noise_ratio : float or None
+        Measured over predicted noise, where the pixels cannot tell: an epoch that has
+        a part in its own template is quieter than its variance.
     """
 
     file: Path
@@ -135,6 +138,7 @@ class SeriesPart:
     fwhm_px: float
     template_variance: float
     seeds: tuple[TrackSeed, ...]
+    noise_ratio: float | None = None
 
 
 def to_grid(
@@ -247,7 +251,9 @@ def build_series(parts: Sequence[SeriesPart]) -> EpochSeries:
     shared = parts[0].template_variance if own else 0.0
     ratio = [
         _noise_ratio(pixels[i], variance[i] + np.float32(shared), mask[i])
-        for i in range(len(parts))
+        if part.noise_ratio is None
+        else part.noise_ratio
+        for i, part in enumerate(parts)
     ]
     if own:
         ratio.append(float(np.median(ratio)))
@@ -301,11 +307,14 @@ def seed_on_grid(
     """
     science, template = epochs
     trace, angle, stretch = _moved(arc.trace, motion, pixel_map)
-    years = abs(science - template) / DAYS_PER_YEAR
+    speed = np.nan
+    if np.isfinite(motion.shift_px):
+        years = abs(science - template) / DAYS_PER_YEAR
+        speed = motion.shift_px * stretch / years
     return TrackSeed(
         trace=trace,
         direction_angle=angle,
-        speed_px_yr=motion.shift_px * stretch / years,
+        speed_px_yr=speed,
         mjd=science if arc.sign > 0 else template,
         width_px=float(np.hypot(motion.width_px, fwhm_px)) * stretch,
         snr=arc.snr,
