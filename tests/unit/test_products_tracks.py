@@ -11,7 +11,7 @@ from PIL import Image
 
 from latelight.masks import MaskBit
 from latelight.products.captions import track_facts
-from latelight.products.coadding import coadd_moving
+from latelight.products.coadding import part_moving
 from latelight.products.position_time import draw_position_time, place_strips
 from latelight.products.settings import ProductSettings
 from latelight.products.track_columns import TRACK_COLUMNS
@@ -211,21 +211,25 @@ def test_what_moves_is_parted_from_what_stands_still():
     weight = np.ones(pixels.shape)
     pixels[2, :, 40], weight[2, :, 40] = 0.0, 0.0
     zero = np.zeros(5)
-    moving = coadd_moving(pixels.astype(np.float32), weight, step_x=steps, step_y=zero)
+    moving, stood = part_moving(
+        pixels.astype(np.float32), weight, step_x=steps, step_y=zero
+    )
     profile = moving[60] - np.median(moving[60])
     assert profile[40] == pytest.approx(10.0, rel=0.1)
     assert int(profile.argmax()) == 40
     assert abs(moving[20, 40] - moving[60, 40]) < 5.0
+    assert stood[20, 40] - np.median(stood) == pytest.approx(50.0, rel=0.1)
 
 
 def test_a_place_without_data_is_blank_in_the_sum():
     weight = np.ones((3, 20, 20))
     weight[:, :5] = 0.0
     zero = np.zeros(3)
-    moving = coadd_moving(
+    moving, stood = part_moving(
         np.ones((3, 20, 20), np.float32), weight, step_x=zero, step_y=zero
     )
     assert np.isnan(moving[:5]).all()
+    np.testing.assert_array_equal(np.isnan(stood), np.isnan(moving))
     assert np.isfinite(moving[5:]).all()
 
 
@@ -247,7 +251,7 @@ def test_track_cutout_file(tmp_path):
     with fits.open(path, checksum=True) as hdus:
         names = [hdu.name for hdu in hdus][1:]
         epochs = [f"EPOCH{i}" for i in range(1, 6)]
-        assert names == ["MOVING", *epochs, "PROFILES", "POINTS", "TRACE"]
+        assert names == ["MOVING", "STILL", *epochs, "PROFILES", "POINTS", "TRACE"]
         header = hdus[0].header
         assert (header["ID"], header["SPEED"]) == ("J104412.12-601601.6_track", 2.0)
         assert header.comments["SPEED"] == "[arcsec/yr] along the normal"
@@ -355,3 +359,15 @@ def test_the_head_line_tells_the_motion():
     assert told["origin"] == "Nova Ficta 1604 · score +1.2 · +8° off"
     bare = make_row(speed=None, speed_px=8.0, speed_err_px=0.4, normal_pa=None)
     assert dict(track_facts(bare))["speed along the normal"] == "8.0 ± 0.4 px/yr"
+
+
+def test_the_arc_on_the_template_shows_but_once():
+    """An image taken from all epochs is taken from what stands still, and no more."""
+    scene = Scene(years=(0.0, 1.0, 2.0, 3.0, 4.0))
+    plain = scene.cut()
+    pixels = scene.series.pixels - scene.series.pixels[1]
+    scene.series = replace(scene.series, pixels=pixels)
+    cutout = scene.cut()
+    assert not cutout.epochs[1][:, :20].any()
+    gap = (cutout.epochs - cutout.still) - (plain.epochs - plain.still)
+    assert np.nanmax(np.abs(gap)) < 1e-4 * HEIGHT

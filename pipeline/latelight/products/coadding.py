@@ -1,4 +1,4 @@
-"""Add the epochs of a moving arc along its motion, the static sky taken out."""
+"""Part what moves along a track from what stands still."""
 
 from __future__ import annotations
 
@@ -10,21 +10,21 @@ from scipy import ndimage
 
 from latelight.records import FloatArray, PixelArray
 
-__all__ = ["coadd_moving"]
+__all__ = ["part_moving"]
 
 # Rounds of telling what moves from what stands still.  Sharp structure is parted in
 # two or three; what is wider than the way moved goes slowly, and stays shared.
 _ROUNDS = 8
 
 
-def coadd_moving(
+def part_moving(
     pixels: PixelArray,
     weight: FloatArray,
     *,
     step_x: FloatArray,
     step_y: FloatArray,
-) -> PixelArray:
-    """Return what moves in a series, as it stands where the steps are zero.
+) -> tuple[PixelArray, PixelArray]:
+    """Return what moves in a series, and what stands still.
 
     The sky is taken for the sum of an image that stands still and one that moves as
     a whole; by turns each is the weighted mean of what the other leaves over.
@@ -40,14 +40,15 @@ def coadd_moving(
 
     Returns
     -------
-    float32 array, shape (ny, nx)
-        NaN where no epoch has data.
+    moving, still : float32 array, shape (ny, nx)
+        Co-added along the motion, as it stands where the steps are zero, and co-added
+        in place; NaN where no epoch has data.
     """
     weight = weight.astype(np.float32)
     steps = np.stack([step_y, step_x], axis=1)
     total = weight.sum(axis=0)
     total_back = _total(_shifted(w, -s) for w, s in zip(weight, steps, strict=True))
-    moving = np.zeros(pixels.shape[1:], np.float32)
+    moving = still = np.zeros(pixels.shape[1:], np.float32)
     for _ in range(_ROUNDS):
         left = [
             w * (d - _shifted(moving, s))
@@ -61,7 +62,10 @@ def coadd_moving(
         moving = _ratio(_total(left), total_back)
     # Shifts blend neighbours: a trace of weight is no measurement.
     enough = total_back > 1e-3 * max(float(total_back.max()), 1e-30)
-    return np.where(enough, moving, np.float32(np.nan))
+    return (
+        np.where(enough, moving, np.float32(np.nan)),
+        np.where(total > 0.0, still, np.float32(np.nan)),
+    )
 
 
 def _shifted(image: FloatArray | PixelArray, step: FloatArray) -> PixelArray:

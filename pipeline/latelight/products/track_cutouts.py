@@ -12,7 +12,7 @@ from astropy.io import fits
 
 import latelight
 from latelight.products.atomic import write_bytes
-from latelight.products.coadding import coadd_moving
+from latelight.products.coadding import part_moving
 from latelight.products.fits_file import ascii_text, fits_bytes, row_card
 from latelight.products.settings import ProductSettings
 from latelight.products.track_columns import TRACK_COLUMNS
@@ -107,9 +107,10 @@ class TrackCutout:
         The same in pixels; trace and place are those of the cutout.
     epochs : float32 array, shape (n, m, m)
         Each epoch's difference, counts; NaN where masked.
-    moving : float32 array, shape (m, m)
-        The epochs co-added along the motion, as at the track's ``mjd``, the static
-        sky taken out, counts; NaN without value.
+    moving, still : float32 array, shape (m, m)
+        What moves in them, co-added along the motion as at the track's ``mjd``, and
+        what stands still: the sky less the template, the arc on that included;
+        counts, NaN without value.
     noise : float64 array, shape (n,)
         Median 1 sigma of one pixel of each epoch, counts.
     names : tuple of str
@@ -128,6 +129,7 @@ class TrackCutout:
     track: Track
     epochs: PixelArray
     moving: PixelArray
+    still: PixelArray
     noise: FloatArray
     names: tuple[str, ...]
     fwhm_px: float
@@ -220,7 +222,7 @@ def cut_out_track(
     pixels = np.stack([window.cut(image, 0.0) for image in series.pixels])
     variance = np.stack([window.cut(image, 1.0) for image in series.variance])
     good = np.stack([window.cut(mask, 1) == 0 for mask in series.mask])
-    moving = coadd_moving(
+    moving, still = part_moving(
         pixels,
         np.where(good, 1.0 / np.maximum(variance, 1e-30), 0.0),
         step_x=offsets * np.cos(angle),
@@ -238,6 +240,7 @@ def cut_out_track(
         ),
         epochs=np.where(good, pixels, np.float32(np.nan)),
         moving=moving,
+        still=still,
         noise=np.array(
             [
                 np.sqrt(np.median(v[g])) if g.any() else 0.0
@@ -256,10 +259,11 @@ def cut_out_track(
 def write_track_cutout(path: Path, cutout: TrackCutout) -> None:
     """Write a track's cutout: the row in the primary header, images and tables.
 
-    MOVING (the epochs co-added along the motion) and EPOCH1, EPOCH2... (differences,
-    counts), each with its WCS; PROFILES (brightness along the motion, a column an
-    epoch: the position-time picture), POINTS (the track at each epoch) and TRACE
-    (the ridge at MJD-REF, pixels of the cutout).
+    MOVING (the epochs co-added along the motion), STILL (what does not move in them)
+    and EPOCH1, EPOCH2... (differences, counts), each with its WCS;
+    PROFILES (brightness along the motion, a column an epoch: the position-time
+    picture), POINTS (the track at each epoch) and TRACE (the ridge at MJD-REF, pixels
+    of the cutout).
 
     Raises
     ------
@@ -276,10 +280,15 @@ def write_track_cutout(path: Path, cutout: TrackCutout) -> None:
     primary.header["CUTX0"] = (cutout.x0, "grid column of the first pixel, from 0")
     primary.header["CUTY0"] = (cutout.y0, "grid row of the first pixel, from 0")
     header = None if cutout.wcs is None else cutout.wcs.to_header(relax=True)
-    moving = fits.ImageHDU(cutout.moving, header=header, name="MOVING")
-    moving.header["BUNIT"] = "count"
-    moving.header.add_comment("epochs co-added along the motion, as at MJD-REF")
-    hdus: list[Any] = [primary, moving]
+    hdus: list[Any] = [primary]
+    for name, image, meaning in (
+        ("MOVING", cutout.moving, "epochs co-added along the motion, as at MJD-REF"),
+        ("STILL", cutout.still, "what stands still in the epochs"),
+    ):
+        hdu = fits.ImageHDU(image, header=header, name=name)
+        hdu.header["BUNIT"] = "count"
+        hdu.header.add_comment(meaning)
+        hdus.append(hdu)
     for number, point in enumerate(cutout.track.points):
         hdu = fits.ImageHDU(
             cutout.epochs[number], header=header, name=f"EPOCH{number + 1}"
@@ -291,7 +300,7 @@ def write_track_cutout(path: Path, cutout: TrackCutout) -> None:
             float(f"{cutout.noise[number]:.6g}"),
             "[count] median 1 sigma of one pixel",
         )
-        hdu.header.add_comment("epoch minus static sky; NaN where masked")
+        hdu.header.add_comment("epoch minus template; NaN where masked")
         hdus.append(hdu)
     for name, table in (
         ("PROFILES", _profile_table(cutout)),

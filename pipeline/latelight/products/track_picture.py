@@ -152,19 +152,21 @@ def _draw_epochs(
     )
     heights = [p.height_counts for p in cutout.track.points]
     brightest = max((h for h in heights if np.isfinite(h)), default=0.0)
+    # The template holds the arc too: without what stands still it shows but once.
+    shown = cutout.epochs[chosen] - cutout.still
     scales = [
         difference_scale(
-            cutout.epochs[i],
-            np.isnan(cutout.epochs[i]).astype(np.uint16),
+            pixels,
+            np.isnan(pixels).astype(np.uint16),
             smoothing_px=smoothing,
             brightness=brightest,
         )
-        for i in chosen
+        for pixels in shown
     ]
     limit = max(scale.limit for scale in scales)
     for panel, (i, scale) in enumerate(zip(chosen, scales, strict=True), start=1):
         common = DifferenceScale(scale.pixels, limit)
-        marks = Marks(_panel(common, cutout.epochs[i], smoothing), arc)
+        marks = Marks(_panel(common, shown[panel - 1], smoothing), arc)
         marks.ends(arc.places[i])
         if panel == 1:
             marks.compass()
