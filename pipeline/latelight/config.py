@@ -25,6 +25,7 @@ from latelight.errors import SettingsError
 from latelight.frames.settings import FrameSettings, HeaderWords
 from latelight.matching.settings import MatchingSettings
 from latelight.motion.settings import MotionSettings
+from latelight.motion.tracks.settings import TrackSettings
 from latelight.motion.velocity_stack.settings import VelocityStackSettings
 from latelight.night.settings import TEMPLATE_CHOICES, NightSettings, PairSettings
 from latelight.origin.settings import OriginSettings, SourceSettings
@@ -51,6 +52,7 @@ class NightConfig(StageSettings):
     arcs: ArcSettings = Field(default_factory=ArcSettings)
     motion: MotionSettings = Field(default_factory=MotionSettings)
     velocity_stack: VelocityStackSettings = Field(default_factory=VelocityStackSettings)
+    tracks: TrackSettings = Field(default_factory=TrackSettings)
     origin: OriginSettings = Field(default_factory=OriginSettings)
     products: ProductSettings = Field(default_factory=ProductSettings)
     sources: tuple[SourceSettings, ...] = ()

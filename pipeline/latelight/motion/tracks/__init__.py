@@ -1,0 +1,1 @@
+"""Follow arcs over all epochs of a field."""

@@ -1,0 +1,177 @@
+"""Compiled loops of the tracks: sums over strips, and paths tried on them."""
+
+from __future__ import annotations
+
+import numpy as np
+from numba import njit
+
+from latelight.records import FloatArray, IntArray, MaskArray, PixelArray
+
+__all__ = ["path_log_p", "strip_sums"]
+
+
+@njit(nogil=True, cache=True)
+def strip_sums(
+    pixels: PixelArray,
+    variance: PixelArray,
+    mask: MaskArray,
+    excess: FloatArray,
+    x: FloatArray,
+    y: FloatArray,
+    across_x: FloatArray,
+    across_y: FloatArray,
+    offsets: FloatArray,
+    bins: IntArray,
+    signal: FloatArray,
+    omega: FloatArray,
+    weight: FloatArray,
+    first: int,
+    last: int,
+) -> None:
+    """Sum all epochs along an arc, the static sky free in every sample.
+
+    Parameters
+    ----------
+    pixels, variance, mask : array, shape (n, ny, nx)
+        The series.
+    excess : float64 array, shape (n,)
+        Factor on the variance.
+    x, y, across_x, across_y : float64 array, shape (s,)
+        Points of the trace, and the step of one offset there, pixels.
+    offsets : float64 array, shape (m,)
+        Distances along the normal.
+    bins : int array, shape (s,)
+        Bin along the arc of each point.
+    signal, weight : float64 array, shape (b, m, n)
+        Output: sums of ``w_i (d_i - sum_j w_j d_j / W)`` and of ``w_i``.
+    omega : float64 array, shape (b, m, n, n)
+        Output: sums of ``delta_ij w_i - w_i w_j / W``, the covariance of ``signal``.
+    first, last : int
+        Offsets ``first <= k < last`` of the output are written.
+    """
+    n, ny, nx = pixels.shape
+    d = np.zeros(n)
+    w = np.zeros(n)
+    for k in range(first, last):
+        for s in range(x.size):
+            px, py = x[s] + offsets[k] * across_x[s], y[s] + offsets[k] * across_y[s]
+            if not (0.0 <= px < nx - 1.0 and 0.0 <= py < ny - 1.0):
+                continue
+            col, row = int(px), int(py)
+            fx, fy = px - col, py - row
+            total = mean = 0.0
+            for i in range(n):
+                w[i] = 0.0
+                # A sample leans on four pixels: all of them must be sound.
+                if (
+                    mask[i, row, col]
+                    | mask[i, row, col + 1]
+                    | mask[i, row + 1, col]
+                    | mask[i, row + 1, col + 1]
+                ):
+                    continue
+                upper = (1.0 - fx) * variance[i, row, col] + fx * variance[
+                    i, row, col + 1
+                ]
+                lower = (1.0 - fx) * variance[i, row + 1, col] + fx * variance[
+                    i, row + 1, col + 1
+                ]
+                v = (1.0 - fy) * upper + fy * lower
+                if not v > 0.0:
+                    continue
+                upper = (1.0 - fx) * pixels[i, row, col] + fx * pixels[i, row, col + 1]
+                lower = (1.0 - fx) * pixels[i, row + 1, col] + fx * pixels[
+                    i, row + 1, col + 1
+                ]
+                d[i] = (1.0 - fy) * upper + fy * lower
+                w[i] = 1.0 / (v * excess[i])
+                total += w[i]
+                mean += w[i] * d[i]
+            if total == 0.0:
+                continue
+            mean /= total
+            b = bins[s]
+            for i in range(n):
+                if w[i] == 0.0:
+                    continue
+                signal[b, k, i] += w[i] * (d[i] - mean)
+                weight[b, k, i] += w[i]
+                omega[b, k, i, i] += w[i]
+                for j in range(n):
+                    omega[b, k, i, j] -= w[i] * w[j] / total
+
+
+@njit(nogil=True, cache=True)
+def path_log_p(
+    signal: FloatArray,
+    omega: FloatArray,
+    lobes: FloatArray,
+    rows: IntArray,
+    places: FloatArray,
+    step: float,
+    starts: FloatArray,
+    speeds: FloatArray,
+    times: FloatArray,
+    scatter: float,
+) -> FloatArray:
+    """Return ln of the probability of straight paths, but for a constant.
+
+    Parameters
+    ----------
+    signal : float64 array, shape (m, n)
+        Sums along the whole arc.
+    omega : float64 array, shape (m, n, n)
+        Their covariance.
+    lobes : float64 array, shape (k, m)
+        A unit lobe at each of the places.
+    rows : int array, shape (k, 2)
+        First and past-the-last row in which it is not zero.
+    places : float64 array, shape (k,)
+        Where, ``step`` apart, pixels.
+    starts, speeds : float64 array, shape (a,), (b,)
+        Places at time 0, pixels, and speeds, pixels per year, to try.
+    times : float64 array, shape (n,)
+        Julian years.
+    scatter : float
+        Of the heights at the epochs, 1 sigma as a fraction of their mean.
+
+    Returns
+    -------
+    float64 array, shape (a, b)
+        With heights A_i of normal prior, mean A and sigma ``scatter A`` about the
+        best common A > 0, integrated out; 0 where there is no light.
+    """
+    n = times.size
+    out = np.zeros((starts.size, speeds.size))
+    r = np.zeros(n)
+    g = np.zeros((n, n))
+    at = np.zeros(n, np.int64)
+    for a in range(starts.size):
+        for b in range(speeds.size):
+            for i in range(n):
+                place = starts[a] + speeds[b] * times[i]
+                k = int(np.floor((place - places[0]) / step + 0.5))
+                at[i] = min(max(k, 0), places.size - 1)
+            for i in range(n):
+                first, last = rows[at[i], 0], rows[at[i], 1]
+                r[i] = 0.0
+                for u in range(first, last):
+                    r[i] += lobes[at[i], u] * signal[u, i]
+                for j in range(i + 1):
+                    g[i, j] = 0.0
+                    low = max(first, rows[at[j], 0])
+                    high = min(last, rows[at[j], 1])
+                    for u in range(low, high):
+                        g[i, j] += lobes[at[i], u] * omega[u, i, j] * lobes[at[j], u]
+                    g[j, i] = g[i, j]
+            norm = g.sum()
+            if norm <= 0.0 or r.sum() <= 0.0:
+                continue
+            height = r.sum() / norm
+            spread = (scatter * height) ** 2
+            off = r - height * g.sum(axis=1)
+            inner = np.eye(n) + spread * g
+            gain = 0.5 * spread * (off @ np.linalg.solve(inner, off))
+            gain += 0.5 * height * r.sum()
+            out[a, b] = gain - 0.5 * np.log(np.linalg.det(inner))
+    return out
