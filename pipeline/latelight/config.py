@@ -29,6 +29,7 @@ from latelight.motion.tracks.settings import TrackSettings
 from latelight.motion.velocity_stack.settings import VelocityStackSettings
 from latelight.night.settings import TEMPLATE_CHOICES, NightSettings, PairSettings
 from latelight.origin.settings import OriginSettings, SourceSettings
+from latelight.planning.settings import FieldSettings, LayerSettings, PlanSettings
 from latelight.products.settings import ProductSettings
 from latelight.registration.settings import RegistrationSettings
 from latelight.settings import StageSettings
@@ -55,7 +56,10 @@ class NightConfig(StageSettings):
     tracks: TrackSettings = Field(default_factory=TrackSettings)
     origin: OriginSettings = Field(default_factory=OriginSettings)
     products: ProductSettings = Field(default_factory=ProductSettings)
+    plan: PlanSettings = Field(default_factory=PlanSettings)
     sources: tuple[SourceSettings, ...] = ()
+    fields: tuple[FieldSettings, ...] = ()
+    layers: tuple[LayerSettings, ...] = ()
 
 
 def load_config(path: Path) -> NightConfig:
@@ -249,7 +253,7 @@ def describe_keys() -> str:
         model = _model_of(info)
         if model is None:
             continue
-        many = table == "sources"
+        many = get_origin(info.annotation) is tuple
         lines += ["", f"# [[{table}]]" if many else f"[{table}]"]
         for key, entry in model.model_fields.items():
             lines += _describe_key(key, entry, commented=many)

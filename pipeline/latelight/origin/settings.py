@@ -92,6 +92,18 @@ class SourceSettings(StageSettings):
         description="Year in which the outburst's light arrived, instead of age_yr "
         "[Julian year, AD].",
     )
+    peak_mag: float | None = Field(
+        None,
+        ge=-30.0,
+        le=40.0,
+        description="Apparent magnitude of the outburst at its peak, for plans [mag].",
+    )
+    duration_days: float | None = Field(
+        None,
+        gt=0.0,
+        description="Width of its light curve, its fluence over its peak flux, for "
+        "plans [day].",
+    )
 
     @model_validator(mode="after")
     def _keys_belong_together(self) -> Self:

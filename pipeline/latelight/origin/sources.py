@@ -26,6 +26,8 @@ _UNITS = {
     "age_err_yr": "yr",
     "age_at_mjd": "d",
     "outburst_year": "yr",
+    "peak_mag": "mag",
+    "duration_days": "d",
 }
 
 
@@ -46,6 +48,8 @@ def source_of(entry: SourceSettings) -> Source:
         age_yr=age,
         age_err_yr=entry.age_err_yr,
         age_at_mjd=age_at,
+        peak_mag=entry.peak_mag,
+        duration_days=entry.duration_days,
     )
 
 

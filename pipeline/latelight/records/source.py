@@ -23,6 +23,10 @@ class Source:
         Julian years since its light arrived, at ``age_at_mjd``.
     age_at_mjd : float or None
         MJD at which the age holds.
+    peak_mag : float or None
+        Apparent magnitude of the outburst at its peak.
+    duration_days : float or None
+        Width of its light curve: its fluence over its peak flux, days.
     """
 
     name: str
@@ -33,6 +37,8 @@ class Source:
     age_yr: float | None = None
     age_err_yr: float | None = None
     age_at_mjd: float | None = None
+    peak_mag: float | None = None
+    duration_days: float | None = None
 
 
 @dataclass(frozen=True, slots=True)
