@@ -2,25 +2,24 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from typing import Literal
 
 import numpy as np
-import sep
 
 from latelight.errors import StageError
 from latelight.mask_growth import disc, grow_mask
-from latelight.masks import MaskBit
-from latelight.matching._kernels import fill_bad
 from latelight.matching.basis import make_basis
-from latelight.matching.convolution import (
-    convolve,
-    convolve_mask,
-    convolve_variance,
-    convolved_power,
-    gaussian_kernel,
-    kernel_sum,
-)
+from latelight.matching.convolution import kernel_sum
 from latelight.matching.fit import KernelFit, fit_kernel
+from latelight.matching.layers import (
+    KEEP_VALUE,
+    Layer,
+    convolved,
+    layer_of,
+    plane_of,
+    scaled,
+    smoothed,
+)
 from latelight.matching.psf import measure_psf
 from latelight.matching.settings import MatchingSettings
 from latelight.matching.sharpness import Roles, assign_roles, smoothing_needed
@@ -30,7 +29,6 @@ from latelight.records import (
     Alignment,
     FloatArray,
     IntArray,
-    MaskArray,
     MatchedPair,
     PixelArray,
     Plane,
@@ -38,7 +36,6 @@ from latelight.records import (
     SpatialPsf,
     StarList,
 )
-from latelight.threads import over_rows
 from latelight.widths import FWHM_PER_SIGMA
 
 __all__ = ["match_pair", "smoothing_for"]
@@ -50,22 +47,8 @@ _STAGE = "matching"
 _RADIUS_IN_FWHM = 6.0
 # Disc in which held-out stars are judged: where a star's light matters.
 _JUDGED_IN_FWHM = 2.5
-_SKY_BOX = 128
 # Stars enough to tell the sharper frame.
 _STARS_FOR_ROLES = 120
-# Pixels whose own value still says most about a bright star's light.
-_KEEP_VALUE = MaskBit.SATURATED | MaskBit.BLEED | MaskBit.SPIKE
-
-
-@dataclass(frozen=True, slots=True)
-class _Layer:
-    """A frame ready for convolution: sky removed, bad pixels filled."""
-
-    light: PixelArray
-    sky: PixelArray
-    variance: PixelArray
-    mask: MaskArray
-    noise_power: FloatArray | None
 
 
 def match_pair(
@@ -76,7 +59,7 @@ def match_pair(
     template_stars: StarList,
     alignment: Alignment,
     settings: MatchingSettings,
-    smoothing_px: float | None = None,
+    convolve: Literal["sharper", "template"] = "sharper",
 ) -> MatchedPair:
     """Bring a template and a science frame to one PSF and one flux scale.
 
@@ -92,10 +75,10 @@ def match_pair(
         Which stars are the same.
     settings : MatchingSettings
         Table ``[matching]``.
-    smoothing_px : float or None
-        When given, the template is convolved whatever the PSFs, and the science
-        frame first smoothed by a Gaussian of this sigma, pixels: so many templates
-        are brought to one PSF (:func:`smoothing_for` says how much they need).
+    convolve : {"sharper", "template"}
+        ``"template"`` leaves the science frame as it is, so that many templates are
+        brought to one PSF; :func:`smoothing_for` says how much the science frame must
+        be smoothed beforehand.
 
     Returns
     -------
@@ -125,14 +108,13 @@ def match_pair(
         )
         raise ValueError(msg)
     rows, snr = matched_clean(science_stars, template_stars, alignment)
-    if smoothing_px is None:
+    roles = Roles(convolve_template=True, smoothing_px=0.0)
+    if convolve == "sharper":
         psfs = _psfs(science, template, science_stars, rows, settings)
         roles = assign_roles(*psfs, sharpening=settings.sharpening)
-    else:
-        roles = Roles(convolve_template=True, smoothing_px=smoothing_px)
-    layers = {True: _layer(template), False: _layer(science)}
+    layers = {True: layer_of(template), False: layer_of(science)}
     sharp = layers[roles.convolve_template]
-    broad = _smoothed(layers[not roles.convolve_template], roles.smoothing_px)
+    broad = smoothed(layers[not roles.convolve_template], roles.smoothing_px)
 
     ratio = _flux_ratio(science_stars, template_stars, alignment)
     fwhm = _widths(science_stars, template_stars, roles)
@@ -147,7 +129,7 @@ def match_pair(
         settings=settings,
     )
     total = _positive_sum(fit.kernel)
-    matched = _convolved(sharp, fit.kernel)
+    matched = convolved(sharp, fit.kernel)
     middle = float(fit.kernel.planes[0].sum())
     if roles.convolve_template:
         scale, science_layer, template_layer = middle, broad, matched
@@ -155,10 +137,10 @@ def match_pair(
         # The kernel took the science frame to template counts: bring both back.
         scale, science_layer, template_layer = (
             1.0 / middle,
-            _scaled(matched, 1.0 / total),
-            _scaled(broad, 1.0 / total),
+            scaled(matched, 1.0 / total),
+            scaled(broad, 1.0 / total),
         )
-    science_plane, template_plane = _plane(science_layer), _plane(template_layer)
+    science_plane, template_plane = plane_of(science_layer), plane_of(template_layer)
     return MatchedPair(
         science=science_plane,
         template=template_plane,
@@ -260,62 +242,9 @@ def _radius(fwhm: float) -> int:
     return max(5, int(np.ceil(_RADIUS_IN_FWHM * fwhm)))
 
 
-def _layer(plane: Plane) -> _Layer:
-    """Take the sky off and fill the pixels that must not be spread."""
-    bad = plane.mask != 0
-    height, width = plane.pixels.shape
-    sky = sep.Background(
-        plane.pixels, mask=bad, bw=min(_SKY_BOX, width), bh=min(_SKY_BOX, height)
-    ).back(dtype=np.float32)
-    light = plane.pixels - sky
-    lost = (plane.mask & ~np.uint16(_KEEP_VALUE)) != 0
-    over_rows(lambda first, last: fill_bad(light, lost, 2, first, last), height)
-    return _Layer(light, sky, plane.variance, plane.mask, plane.noise_power)
-
-
-def _convolved(layer: _Layer, kernel: SpatialKernel) -> _Layer:
-    total = kernel_sum(kernel)
-    return _Layer(
-        light=convolve(layer.light, kernel),
-        sky=layer.sky * total,
-        variance=convolve_variance(
-            layer.variance, layer.mask, kernel, noise_power=layer.noise_power
-        ),
-        mask=convolve_mask(layer.mask, kernel),
-        noise_power=convolved_power(kernel.at(*_middle(kernel)), layer.noise_power),
-    )
-
-
-def _middle(kernel: SpatialKernel) -> tuple[float, float]:
-    ny, nx = kernel.shape
-    return (nx - 1) / 2, (ny - 1) / 2
-
-
-def _smoothed(layer: _Layer, sigma: float) -> _Layer:
-    if sigma == 0.0:
-        return layer
-    ny, nx = layer.light.shape
-    return _convolved(layer, gaussian_kernel(sigma, shape=(ny, nx)))
-
-
-def _scaled(layer: _Layer, factor: PixelArray) -> _Layer:
-    return _Layer(
-        layer.light * factor,
-        layer.sky * factor,
-        layer.variance * factor**2,
-        layer.mask,
-        layer.noise_power,
-    )
-
-
-def _plane(layer: _Layer) -> Plane:
-    light, sky = layer.light, layer.sky
-    return Plane(light + sky, layer.variance, layer.mask, layer.noise_power)
-
-
 def _fit(
-    sharp: _Layer,
-    broad: _Layer,
+    sharp: Layer,
+    broad: Layer,
     rows: IntArray,
     snr: FloatArray,
     stars: StarList,
@@ -354,11 +283,11 @@ def _fit(
     return fit, centre
 
 
-def _fit_images(sharp: _Layer, broad: _Layer, *, spoil: float) -> FitImages:
+def _fit_images(sharp: Layer, broad: Layer, *, spoil: float) -> FitImages:
     """Mark what a star's disc must leave out."""
     mask = sharp.mask | broad.mask
     # The light missing from a saturated core is missing around it once convolved.
-    unknown = (mask & np.uint16(_KEEP_VALUE)).astype(np.uint16)
+    unknown = (mask & np.uint16(KEEP_VALUE)).astype(np.uint16)
     return FitImages(
         sharp=sharp.light,
         target=broad.light,
