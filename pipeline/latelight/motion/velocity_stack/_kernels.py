@@ -6,50 +6,71 @@ import numpy as np
 from numba import njit
 
 __all__ = [
+    "block_rows",
     "block_sums",
     "compress",
     "keep_best",
-    "mask_ridge",
-    "residual_sums",
+    "project_rows",
     "ridge_sums",
     "sample_trial",
+    "take_out_ridge",
 ]
 
 
 @njit(nogil=True, cache=True)
-def residual_sums(
+def project_rows(
     pixels: np.ndarray,
     variance: np.ndarray,
     mask: np.ndarray,
-    size: int,
-    signal: np.ndarray,
     weight: np.ndarray,
+    signal: np.ndarray,
+    total: np.ndarray,
     first: int,
     last: int,
 ) -> None:
-    """Sum w R and w (1 - w / sum w) of each block, for some rows of blocks."""
-    n, ny, nx = pixels.shape
-    w = np.zeros((n, nx), np.float32)
-    total = np.zeros(nx, np.float32)
+    """Write w, w R and the sum of w over the epochs, for some rows."""
+    n, _, nx = pixels.shape
     mean = np.zeros(nx, np.float32)
     zero, one = np.float32(0.0), np.float32(1.0)
-    for row in range(first, last):
-        for y in range(row * size, min((row + 1) * size, ny)):
-            total[:] = zero
-            mean[:] = zero
-            for i in range(n):
-                for x in range(nx):
-                    w[i, x] = one / variance[i, y, x] if mask[i, y, x] == 0 else zero
-                    total[x] += w[i, x]
-                    mean[x] += w[i, x] * pixels[i, y, x]
+    for y in range(first, last):
+        mean[:] = zero
+        total[y] = zero
+        for i in range(n):
             for x in range(nx):
-                total[x] = one / total[x] if total[x] > zero else zero
-                mean[x] *= total[x]
-            for i in range(n):
-                for x in range(nx):
-                    own = w[i, x]
-                    signal[i, row, x // size] += own * (pixels[i, y, x] - mean[x])
-                    weight[i, row, x // size] += own * max(one - own * total[x], zero)
+                w = one / variance[i, y, x] if mask[i, y, x] == 0 else zero
+                weight[i, y, x] = w
+                total[y, x] += w
+                mean[x] += w * pixels[i, y, x]
+        for x in range(nx):
+            mean[x] = mean[x] / total[y, x] if total[y, x] > zero else zero
+        for i in range(n):
+            for x in range(nx):
+                signal[i, y, x] = weight[i, y, x] * (pixels[i, y, x] - mean[x])
+
+
+@njit(nogil=True, cache=True)
+def block_rows(
+    weight: np.ndarray,
+    signal: np.ndarray,
+    total: np.ndarray,
+    size: int,
+    signal_sum: np.ndarray,
+    weight_sum: np.ndarray,
+    first: int,
+    last: int,
+) -> None:
+    """Sum w R and w (1 - w / sum w) over blocks, for some rows of blocks."""
+    n, ny, nx = weight.shape
+    zero = np.float32(0.0)
+    for i in range(n):
+        for row in range(first, last):
+            for y in range(row * size, min((row + 1) * size, ny)):
+                for col in range(signal_sum.shape[2]):
+                    for x in range(col * size, min((col + 1) * size, nx)):
+                        w = weight[i, y, x]
+                        if w > zero:
+                            signal_sum[i, row, col] += signal[i, y, x]
+                            weight_sum[i, row, col] += w - w * w / total[y, x]
 
 
 @njit(nogil=True, cache=True)
@@ -152,10 +173,33 @@ def keep_best(
 
 
 @njit(nogil=True, cache=True)
+def row_span(
+    dy: float, cosine: float, sine: float, reach_u: float, reach_s: float
+) -> tuple[float, float]:
+    """Return where a row crosses the box |across| <= reach_u, |along| <= reach_s."""
+    low, high = -1e9, 1e9
+    if abs(cosine) > 1e-6:
+        middle = -dy * sine / cosine
+        low = max(low, middle - reach_u / abs(cosine))
+        high = min(high, middle + reach_u / abs(cosine))
+    if abs(sine) > 1e-6:
+        middle = dy * cosine / sine
+        low = max(low, middle - reach_s / abs(sine))
+        high = min(high, middle + reach_s / abs(sine))
+    return low, high
+
+
+_REACH = 3.0
+_FINE = 512.0
+# exp(-d^2 / 2) by d^2, in steps of 1/512: right to 0.05 %.
+_GAUSSIAN = np.exp(-0.5 * (np.arange(int(_REACH**2 * _FINE) + 1) + 0.5) / _FINE)
+
+
+@njit(nogil=True, cache=True)
 def ridge_sums(
-    pixels: np.ndarray,
-    variance: np.ndarray,
-    mask: np.ndarray,
+    weight: np.ndarray,
+    signal: np.ndarray,
+    total: np.ndarray,
     shifts: np.ndarray,
     x0: float,
     y0: float,
@@ -174,79 +218,67 @@ def ridge_sums(
     ``matched[i] = sum w_i m_i R_i``, ``power[i, j] = sum (delta_ij w_i m_i^2 -
     w_i w_j m_i m_j / sum_k w_k)`` and ``area[i]``, the share of m_i on good pixels.
     """
-    n, ny, nx = pixels.shape
+    n, ny, nx = weight.shape
     n_blocks = matched.shape[0]
     half = 0.5 * n_blocks * block
-    reach = 3.2 * sigma
+    reach = _REACH * sigma
+    limit = _REACH * _REACH
     cosine, sine = np.cos(angle), np.sin(angle)
-    sag = 0.5 * curvature * half * half
-    low = shifts.min() - reach + min(sag, 0.0)
-    high = shifts.max() + reach + max(sag, 0.0)
-    middle, spread = 0.5 * (low + high), 0.5 * (high - low)
+    inverse = 1.0 / sigma
+    sag = 0.25 * curvature * half * half
+    spread = abs(sag) + reach * np.sqrt(1.0 + (curvature * half) ** 2)
     reach_y = abs(sine) * spread + abs(cosine) * half
-    centre_y, centre_x = y0 + middle * sine, x0 + middle * cosine
-    model, w, full = np.zeros(n), np.zeros(n), np.zeros((n_blocks, n))
+    full = np.zeros((n_blocks, n))
     matched[:], power[:], area[:] = 0.0, 0.0, 0.0
-    for y in range(
-        max(int(np.ceil(centre_y - reach_y)), 0),
-        min(int(np.floor(centre_y + reach_y)) + 1, ny),
-    ):
-        dy = y - centre_y
-        left, right = -1e9, 1e9
-        if abs(cosine) > 1e-6:
-            at = -dy * sine / cosine
-            left = max(left, at - spread / abs(cosine))
-            right = min(right, at + spread / abs(cosine))
-        if abs(sine) > 1e-6:
-            at = dy * cosine / sine
-            left = max(left, at - half / abs(sine))
-            right = min(right, at + half / abs(sine))
-        for x in range(
-            max(int(np.ceil(centre_x + left)), 0),
-            min(int(np.floor(centre_x + right)) + 1, nx),
+    for i in range(n):
+        middle_x = x0 + (shifts[i] + sag) * cosine
+        middle_y = y0 + (shifts[i] + sag) * sine
+        for y in range(
+            max(int(np.ceil(middle_y - reach_y)), 0),
+            min(int(np.floor(middle_y + reach_y)) + 1, ny),
         ):
-            along = (y - y0) * cosine - (x - x0) * sine
-            k = int(np.floor((along + half) / block))
-            if k < 0 or k >= n_blocks:
-                continue
-            turn = curvature * along
-            lean = 1.0 / np.sqrt(1.0 + turn * turn)
-            across = (x - x0) * cosine + (y - y0) * sine - 0.5 * turn * along
-            lit = False
-            for i in range(n):
-                d = (across - shifts[i]) * lean
-                model[i] = 0.0
-                if abs(d) < reach:
-                    model[i] = np.exp(-0.5 * (d / sigma) ** 2)
-                    full[k, i] += model[i]
-                    lit = True
-            if not lit:
-                continue
-            total = mean = 0.0
-            for i in range(n):
-                w[i] = 1.0 / variance[i, y, x] if mask[i, y, x] == 0 else 0.0
-                total += w[i]
-                mean += w[i] * pixels[i, y, x]
-            if total <= 0.0:
-                continue
-            mean /= total
-            for i in range(n):
-                wm = w[i] * model[i]
-                if wm == 0.0:
+            low, high = row_span(y - middle_y, cosine, sine, spread, half)
+            for x in range(
+                max(int(np.ceil(middle_x + low)), 0),
+                min(int(np.floor(middle_x + high)) + 1, nx),
+            ):
+                along = (y - y0) * cosine - (x - x0) * sine
+                k = int(np.floor((along + half) / block))
+                if k < 0 or k >= n_blocks:
                     continue
-                area[k, i] += model[i]
-                matched[k, i] += wm * (pixels[i, y, x] - mean)
-                power[k, i, i] += wm * model[i]
+                turn = curvature * along
+                scale = inverse / (1.0 + 0.5 * turn * turn)  # leaning ridges look wider
+                across = (x - x0) * cosine + (y - y0) * sine - 0.5 * turn * along
+                d = (across - shifts[i]) * scale
+                if d * d >= limit:
+                    continue
+                model = _GAUSSIAN[int(d * d * _FINE)]
+                full[k, i] += model
+                w = weight[i, y, x]
+                if w <= 0.0:
+                    continue
+                area[k, i] += model
+                matched[k, i] += model * signal[i, y, x]
+                power[k, i, i] += w * model * model
+                share = w * model / total[y, x]
+                power[k, i, i] -= share * w * model
                 for j in range(n):
-                    power[k, i, j] -= wm * w[j] * model[j] / total
+                    d = (across - shifts[j]) * scale
+                    if j != i and d * d < limit:
+                        other = _GAUSSIAN[int(d * d * _FINE)]
+                        power[k, i, j] -= share * weight[j, y, x] * other
     for k in range(n_blocks):
         for i in range(n):
             area[k, i] /= max(full[k, i], 1e-9)
 
 
 @njit(nogil=True, cache=True)
-def mask_ridge(
-    mask: np.ndarray,
+def take_out_ridge(
+    pixels: np.ndarray,
+    weight: np.ndarray,
+    signal: np.ndarray,
+    total: np.ndarray,
+    epoch: int,
     x0: float,
     y0: float,
     angle: float,
@@ -254,10 +286,9 @@ def mask_ridge(
     first: float,
     last: float,
     half_width: float,
-    bit: int,
 ) -> None:
-    """Mark the pixels within half a width of a parabola's stretch."""
-    ny, nx = mask.shape
+    """Give the pixels of one epoch along a parabola no weight, and project anew."""
+    n, ny, nx = pixels.shape
     cosine, sine = np.cos(angle), np.sin(angle)
     far = max(abs(first), abs(last))
     reach = far + half_width + 0.5 * abs(curvature) * far * far
@@ -267,5 +298,14 @@ def mask_ridge(
             if along < first or along > last:
                 continue
             across = (x - x0) * cosine + (y - y0) * sine
-            if abs(across - 0.5 * curvature * along * along) < half_width:
-                mask[y, x] |= np.uint16(bit)
+            if abs(across - 0.5 * curvature * along * along) > half_width:
+                continue
+            weight[epoch, y, x] = 0.0
+            w = mean = 0.0
+            for i in range(n):
+                w += weight[i, y, x]
+                mean += weight[i, y, x] * pixels[i, y, x]
+            mean = mean / w if w > 0.0 else 0.0
+            total[y, x] = w
+            for i in range(n):
+                signal[i, y, x] = weight[i, y, x] * (pixels[i, y, x] - mean)

@@ -12,17 +12,48 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from latelight.motion.velocity_stack._kernels import block_sums, residual_sums
+from latelight.motion.velocity_stack._kernels import (
+    block_rows,
+    block_sums,
+    project_rows,
+)
 from latelight.records import EpochSeries, FloatArray, PixelArray
 from latelight.threads import over_rows
 from latelight.widths import FWHM_PER_SIGMA
 
-__all__ = ["Level", "base_bin", "build_levels", "epoch_shares"]
+__all__ = ["Level", "Moving", "base_bin", "build_levels", "take_out_static"]
 
 _WIDTHS_A_LEVEL = np.sqrt(2.0)
 """Filters of sigma s serve widths up to this many times s; levels double s."""
 _LATTICE = 11
 """One pixel in so many, each way, tells the weights of the epochs."""
+
+
+@dataclass(frozen=True, slots=True)
+class Moving:
+    """What is not static: every epoch's residuals, weighted.
+
+    Attributes
+    ----------
+    weight : float32 array, shape (n, ny, nx)
+        ``w_i``; 0 where masked.
+    signal : float32 array, shape (n, ny, nx)
+        ``w_i R_i``.
+    total : float32 array, shape (ny, nx)
+        ``sum_i w_i``.
+    """
+
+    weight: PixelArray
+    signal: PixelArray
+    total: PixelArray
+
+    def shares(self) -> FloatArray:
+        """Return each epoch's typical share of the weight, shape (n,); sum 1."""
+        lattice = self.weight[:, ::_LATTICE, ::_LATTICE]
+        typical = np.array(
+            [np.median(w[w > 0.0]) if (w > 0.0).any() else 0.0 for w in lattice]
+        )
+        return typical / max(float(typical.sum()), 1e-300)
 
 
 @dataclass(frozen=True, slots=True)
@@ -53,18 +84,40 @@ def base_bin(fwhm_px: float) -> int:
     return max(1, round(fwhm_px / 1.65))
 
 
-def build_levels(series: EpochSeries, *, widest_px: float) -> tuple[Level, ...]:
-    """Return levels of doubling block size, finest first.
+def take_out_static(series: EpochSeries) -> Moving:
+    """Take the weighted mean over the epochs out of every pixel.
 
     Parameters
     ----------
     series : EpochSeries
         Shape (n, ny, nx).
+    """
+    pixels, variance, mask = series.pixels, series.variance, series.mask
+    weight, signal = np.empty_like(pixels), np.empty_like(pixels)
+    total = np.empty(pixels.shape[1:], np.float32)
+
+    def project(first: int, last: int) -> None:
+        project_rows(pixels, variance, mask, weight, signal, total, first, last)
+
+    over_rows(project, pixels.shape[1])
+    return Moving(weight, signal, total)
+
+
+def build_levels(
+    moving: Moving, *, fwhm_px: float, widest_px: float
+) -> tuple[Level, ...]:
+    """Return levels of doubling block size, finest first.
+
+    Parameters
+    ----------
+    moving : Moving
+        Shape (n, ny, nx).
+    fwhm_px : float
+        PSF width, pixels.
     widest_px : float
         Full width at half maximum of the widest ridge wanted, pixels.
     """
-    size = base_bin(float(np.median(series.fwhm_px)))
-    levels = [_finest(series, size)]
+    levels = [_finest(moving, base_bin(fwhm_px))]
     while FWHM_PER_SIGMA * _WIDTHS_A_LEVEL * levels[-1].bin_px < widest_px:
         last = levels[-1]
         levels.append(
@@ -73,28 +126,22 @@ def build_levels(series: EpochSeries, *, widest_px: float) -> tuple[Level, ...]:
     return tuple(levels)
 
 
-def epoch_shares(series: EpochSeries) -> FloatArray:
-    """Return each epoch's typical share of the weight, shape (n,); the sum is 1."""
-    lattice = np.s_[:, ::_LATTICE, ::_LATTICE]
-    good = series.mask[lattice] == 0
-    variance = series.variance[lattice]
-    typical = np.array(
-        [
-            1.0 / np.median(v[g]) if g.any() else 0.0
-            for v, g in zip(variance, good, strict=True)
-        ]
-    )
-    return typical / max(typical.sum(), 1e-300)
-
-
-def _finest(series: EpochSeries, size: int) -> Level:
-    n, ny, nx = series.pixels.shape
+def _finest(moving: Moving, size: int) -> Level:
+    n, ny, nx = moving.weight.shape
     shape = (n, -(-ny // size), -(-nx // size))
     signal, weight = np.zeros(shape, np.float32), np.zeros(shape, np.float32)
-    pixels, variance, mask = series.pixels, series.variance, series.mask
 
     def add(first: int, last: int) -> None:
-        residual_sums(pixels, variance, mask, size, signal, weight, first, last)
+        block_rows(
+            moving.weight,
+            moving.signal,
+            moving.total,
+            size,
+            signal,
+            weight,
+            first,
+            last,
+        )
 
     over_rows(add, shape[1])
     return Level(size, signal, weight)

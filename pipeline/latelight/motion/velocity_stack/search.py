@@ -6,8 +6,12 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from latelight.motion.velocity_stack._kernels import mask_ridge
-from latelight.motion.velocity_stack.levels import build_levels, epoch_shares
+from latelight.motion.velocity_stack._kernels import take_out_ridge
+from latelight.motion.velocity_stack.levels import (
+    Moving,
+    build_levels,
+    take_out_static,
+)
 from latelight.motion.velocity_stack.moving import (
     BLOCK_PX,
     Match,
@@ -18,12 +22,16 @@ from latelight.motion.velocity_stack.moving import (
 )
 from latelight.motion.velocity_stack.settings import VelocityStackSettings
 from latelight.motion.velocity_stack.trials import Guess, Passage, search_level
-from latelight.motion.velocity_stack.verdicts import genuine
+from latelight.motion.velocity_stack.verdicts import (
+    Case,
+    genuine,
+    no_epoch_alone,
+    seen_at_enough_epochs,
+)
 from latelight.records import (
     ArcTrace,
     EpochSeries,
     FloatArray,
-    MaskArray,
     TrackSeed,
 )
 from latelight.widths import FWHM_PER_SIGMA
@@ -37,23 +45,29 @@ _LEAST_RADIUS_PX = 150.0
 _CAP = 1.6
 """One epoch counts in full up to so many times its even share of the threshold:
 two epochs alone then stay below it."""
-_STARTS = 3
+_GUESS_HALF_PX = 48.0
+"""Half the length along which a guess is looked at."""
+_STARTS = 2
 """Guesses refined on one ridge: another start often finds the better optimum."""
+_BESIDE = 2.0
+_BEYOND_PX = 60.0
+"""Within so many widths of a ridge and so far beyond its ends, another is its own
+continuation: echoes bend more than a parabola, and have tails."""
 _STILL_THERE = 0.75
 """Of a guess's significance must be left beside what is explained already."""
-_EXPLAINED = np.uint16(1)
 
 
 @dataclass(frozen=True, slots=True)
 class _Search:
-    """One series under search; ``mask`` grows as ridges are explained."""
+    """One series under search; what is explained leaves ``moving``."""
 
     series: EpochSeries
-    mask: MaskArray
+    moving: Moving
     passage: Passage
     reach: Reach
     noise_sigma: FloatArray
     noise_ratio: FloatArray
+    settings: VelocityStackSettings
 
     def ratio(self, sigma_px: float) -> float:
         """Return the noise of ridges of that width over what the variance states."""
@@ -62,6 +76,10 @@ class _Search:
     def snr(self, match: Match) -> float:
         """Return a calibrated significance."""
         return match.snr / self.ratio(match.ridge.sigma_px)
+
+    def case(self, match: Match) -> Case:
+        """Return what the tests look at."""
+        return Case(match, self.ratio(match.ridge.sigma_px), self.settings)
 
 
 def search_velocities(
@@ -88,15 +106,17 @@ def search_velocities(
     if series.mjd[-1] <= series.mjd[0]:
         return ()
     search, guesses = _prepare(series, settings)
+    found: list[Match] = []
     seeds: list[TrackSeed] = []
     while guesses:
         match, guesses = _next_match(search, guesses)
         if match is None or search.snr(match) < settings.threshold:
             continue
-        ratio = search.ratio(match.ridge.sigma_px)
-        if genuine(match, noise_ratio=ratio, shortest_px=settings.shortest_px):
+        known = any(_continues(match, other) for other in found)
+        if not known and genuine(search.case(match)):
             seeds.append(_seed(search, match))
-        _mask_explained(search, match)
+            found.append(match)
+        _take_out(search, match)
     return tuple(sorted(seeds, key=lambda s: (-s.snr, s.trace.y[0], s.trace.x[0])))
 
 
@@ -105,14 +125,16 @@ def _prepare(
 ) -> tuple[_Search, list[Guess]]:
     """Search coarsely; return the guesses, most significant first."""
     middle, span = _time(series)
+    moving = take_out_static(series)
     passage = Passage(
         phase=(series.mjd - middle) / span,
-        share=epoch_shares(series),
+        share=moving.shares(),
         cap=_CAP * settings.threshold / float(np.sqrt(len(series))),
     )
+    fwhm = float(np.median(series.fwhm_px))
     guesses: list[Guess] = []
     calibration = []
-    for level in build_levels(series, widest_px=settings.widest_px):
+    for level in build_levels(moving, fwhm_px=fwhm, widest_px=settings.widest_px):
         found, point = search_level(
             level,
             passage,
@@ -130,7 +152,7 @@ def _prepare(
         curvature=1.0 / _LEAST_RADIUS_PX,
     )
     sigma, ratio = np.array(calibration).T
-    return _Search(series, series.mask.copy(), passage, reach, sigma, ratio), guesses
+    return _Search(series, moving, passage, reach, sigma, ratio, settings), guesses
 
 
 def _time(series: EpochSeries) -> tuple[float, float]:
@@ -144,7 +166,7 @@ def _next_match(
 ) -> tuple[Match | None, list[Guess]]:
     """Refine the first guess and a few more on the same ridge; return the best."""
     guess, rest = guesses[0], guesses[1:]
-    if not _still_there(search, guess):
+    if not _promising(search, guess):
         return None, rest
     best = _refined(search, guess)
     more = [other for other in rest if _close(best.ridge, other)][: _STARTS - 1]
@@ -156,16 +178,25 @@ def _next_match(
 
 
 def _refined(search: _Search, guess: Guess) -> Match:
-    return refine(search.series, search.mask, search.passage, guess, search.reach)
+    return refine(
+        search.moving,
+        search.passage,
+        guess,
+        search.reach,
+        search.settings.threshold * search.ratio(guess.sigma_px),
+    )
 
 
-def _still_there(search: _Search, guess: Guess) -> bool:
-    """Tell whether a guess holds beside the ridges explained meanwhile."""
+def _promising(search: _Search, guess: Guess) -> bool:
+    """Tell whether a guess holds beside what is explained, and at several epochs."""
     ridge = MovingRidge(
         guess.x, guess.y, guess.angle, 0.0, guess.shift_px, guess.sigma_px
     )
-    match = follow(search.series, search.mask, search.passage, ridge, 48.0)
-    return search.snr(match) > _STILL_THERE * guess.snr
+    match = follow(search.moving, search.passage, ridge, _GUESS_HALF_PX)
+    if search.snr(match) < _STILL_THERE * guess.snr:
+        return False
+    case = search.case(match)
+    return seen_at_enough_epochs(case) and no_epoch_alone(case)
 
 
 def _close(ridge: MovingRidge, guess: Guess) -> bool:
@@ -187,15 +218,37 @@ def _close(ridge: MovingRidge, guess: Guess) -> bool:
     )
 
 
-def _mask_explained(search: _Search, match: Match) -> None:
-    """Mask a ridge at every epoch where it lies."""
+def _continues(match: Match, other: Match) -> bool:
+    """Tell whether a ridge is what bends away from, or lies behind, another one."""
+    n = match.last - match.first + 1
+    ridge = match.ridge
+    along = match.along[match.first : match.last + 1]
+    inward = 0.5 * ridge.curvature * along**2
+    x = ridge.x + inward * np.cos(ridge.angle) - along * np.sin(ridge.angle)
+    y = ridge.y + inward * np.sin(ridge.angle) + along * np.cos(ridge.angle)
+    dx, dy = x - other.ridge.x, y - other.ridge.y
+    cosine, sine = np.cos(other.ridge.angle), np.sin(other.ridge.angle)
+    far = dy * cosine - dx * sine
+    across = dx * cosine + dy * sine - 0.5 * other.ridge.curvature * far**2
+    near = np.abs(across) < _BESIDE * FWHM_PER_SIGMA * other.ridge.sigma_px
+    near &= far > other.along[other.first] - _BEYOND_PX
+    near &= far < other.along[other.last] + _BEYOND_PX
+    return int(near.sum()) > 0.5 * n
+
+
+def _take_out(search: _Search, match: Match) -> None:
+    """Take a ridge out of every epoch where it lies."""
     ridge = match.ridge
     # As far as a Gaussian of that significance rises above the noise.
     far = np.sqrt(2.0 * np.log(max(search.snr(match), 3.0))) + 0.7
     half_width = float(far) * ridge.sigma_px + 1.0
     for i, shift in enumerate(ridge.shift_px * search.passage.phase):
-        mask_ridge(
-            search.mask[i],
+        take_out_ridge(
+            search.series.pixels,
+            search.moving.weight,
+            search.moving.signal,
+            search.moving.total,
+            i,
             ridge.x + shift * np.cos(ridge.angle),
             ridge.y + shift * np.sin(ridge.angle),
             ridge.angle,
@@ -203,7 +256,6 @@ def _mask_explained(search: _Search, match: Match) -> None:
             float(match.along[match.first]) - 2.0 * BLOCK_PX,
             float(match.along[match.last]) + 2.0 * BLOCK_PX,
             half_width,
-            _EXPLAINED,
         )
 
 

@@ -43,13 +43,13 @@ class VelocityStackSettings(StageSettings):
         "[pixel].",
     )
     shortest_px: float = Field(
-        40.0,
+        45.0,
         ge=16.0,
         le=1000.0,
         description="Least length of a ridge [pixel].",
     )
     widest_px: float = Field(
-        20.0,
+        26.0,
         ge=4.0,
         le=200.0,
         description="Greatest full width of a ridge at half maximum [pixel].",

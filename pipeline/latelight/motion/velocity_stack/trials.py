@@ -39,7 +39,7 @@ CodeArray = NDArray[np.int16]
 
 _LENGTH = 14.0
 """Sigma along the ridge in units of sigma across."""
-_LEAST_SHIFT = 2.5
+_LEAST_SHIFT = 3.5
 """Least distance moved over all epochs, units of sigma across: residues of stars,
 which stay, are not taken for slow ridges."""
 _SHIFT_STEP = 2.0
@@ -199,8 +199,8 @@ def _strongest(
         floor = _floor(power, bank.margin, shape)
         if floor <= 0.0:
             continue
-        for one, other in zip(response, power, strict=True):
-            compress(one, other, passage.cap, floor / len(signal))
+        for i in range(len(signal)):
+            compress(response[i], power[i], passage.cap, floor / len(signal))
         widths += _stack(best, code, response, power, bank, passage, number, floor)
     return _Found(best, code, widths or [1.0])
 
