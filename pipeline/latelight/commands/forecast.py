@@ -20,7 +20,7 @@ if TYPE_CHECKING:
     from latelight.products.forecast_rows import ForecastRow
     from latelight.reports.forecast import ForecastResult
 
-__all__ = ["add_to"]
+__all__ = ["add_to", "read_date"]
 
 
 def add_to(commands: argparse._SubParsersAction[argparse.ArgumentParser]) -> None:
@@ -35,7 +35,7 @@ def add_to(commands: argparse._SubParsersAction[argparse.ArgumentParser]) -> Non
     )
     parser.add_argument(
         "--at",
-        type=_date,
+        type=read_date,
         required=True,
         metavar="DATE",
         help="ISO date and time in UTC (2027-03-14T05:30) or MJD",
@@ -121,7 +121,8 @@ def _cells(row: ForecastRow) -> tuple[str, ...]:
     )
 
 
-def _date(text: str) -> float:
+def read_date(text: str) -> float:
+    """Read a date of the command line as MJD."""
     from latelight.reports.dates import mjd_of
 
     try:

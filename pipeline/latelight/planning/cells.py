@@ -30,6 +30,7 @@ from latelight.widths import FWHM_PER_SIGMA
 __all__ = [
     "CellArray",
     "Cells",
+    "cell_corners",
     "cell_places",
     "cells_of",
     "joined",
@@ -179,6 +180,12 @@ def uniq(cells: Cells) -> CellArray:
 def cell_places(cell: CellArray, order: int) -> tuple[FloatArray, FloatArray]:
     """Return RA and Dec of the middles of cells, degrees."""
     lon, lat = _pixels(order).healpix_to_lonlat(cell)
+    return lon.to_value(units.deg), lat.to_value(units.deg)
+
+
+def cell_corners(cell: CellArray, order: int) -> tuple[FloatArray, FloatArray]:
+    """Return RA and Dec of the corners of cells, degrees, shape (n, 4) each."""
+    lon, lat = _pixels(order).boundaries_lonlat(cell, step=1)
     return lon.to_value(units.deg), lat.to_value(units.deg)
 
 
