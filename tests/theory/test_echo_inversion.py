@@ -21,6 +21,7 @@ from latelight.echo.inversion import (
     age_and_depth_covariance,
     sheet_slope,
 )
+from latelight.echo.paraboloid_inversion import paraboloid_age_and_depth
 from latelight.echo.propagation import independent, propagate
 
 pytestmark = pytest.mark.theory
@@ -118,6 +119,24 @@ def test_one_of_both_ages_is_the_true_one(echoes):
         np.testing.assert_array_equal(
             root.depth_pc[fit], depth_pc(theta[fit], root.age_yr[fit], distance[fit])
         )
+
+
+@pytest.mark.parametrize("slope", [-0.3, 0.0, 0.4, 3.0])
+def test_paraboloid_ages_are_those_of_its_speed(slope):
+    """beta = r / (rho - s ct) with r = rho**2 / (2 ct) + ct / 2, at no parallax."""
+    rho, path, distance = 100.0, 50.0, 1e9
+    beta = (rho**2 / (2.0 * path) + path / 2.0) / (rho - slope * path)
+    speed = beta * light_speed_arcsec_yr(distance)
+    front, behind = paraboloid_age_and_depth(
+        np.degrees(rho / distance), speed, distance, slope=slope
+    )
+    assert front.age_yr * LIGHT_PC_PER_YEAR == pytest.approx(path, rel=1e-9)
+    assert front.depth_pc == pytest.approx(75.0, rel=1e-9)
+    # The other root of (1 + 2 beta s) (ct)**2 - 2 beta rho ct + rho**2 = 0.
+    other = rho**2 / (1.0 + 2.0 * beta * slope) / path
+    assert behind.possible == (other > 0.0)
+    if behind.possible:
+        assert behind.age_yr * LIGHT_PC_PER_YEAR == pytest.approx(other, rel=1e-9)
 
 
 def test_front_is_younger_and_nearer(echoes):

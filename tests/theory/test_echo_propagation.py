@@ -4,7 +4,14 @@ import numpy as np
 import pytest
 
 from latelight.echo.constants import LIGHT_PC_PER_YEAR
-from latelight.echo.geometry import depth_error_pc, depth_partials, depth_pc
+from latelight.echo.geometry import (
+    depth_error_pc,
+    depth_partials,
+    depth_pc,
+    observer_distance_pc,
+    scattering_angle_deg,
+    source_distance_pc,
+)
 from latelight.echo.place import echo_place
 from latelight.echo.propagation import independent, propagate
 
@@ -90,6 +97,15 @@ def test_depth_partials_are_the_numeric_ones(rng):
         # The depth's own rounding, over the step.
         rounding = 1e-14 * np.abs(depth_pc(*place)).max() / step
         assert np.all(np.abs(numeric - slope) <= 1e-6 * np.abs(slope) + rounding)
+
+
+def test_place_is_that_of_the_geometry():
+    at = (3.0, 400.0, 3000.0)
+    place = echo_place(*at, np.zeros((3, 3)))
+    assert place.depth_pc == depth_pc(*at)
+    assert place.source_distance_pc == source_distance_pc(*at)
+    assert place.observer_distance_pc == observer_distance_pc(*at)
+    assert place.scattering_deg == scattering_angle_deg(*at)
 
 
 def test_place_has_the_covariance_of_its_parts():
