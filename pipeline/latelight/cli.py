@@ -14,7 +14,7 @@ from collections.abc import Sequence
 from typing import Any
 
 import latelight
-from latelight.commands import check, forecast, plan, run
+from latelight.commands import check, forecast, origins, plan, run
 from latelight.commands.shared import (
     EXIT_CODES,
     INTERRUPTED,
@@ -27,7 +27,7 @@ from latelight.threads import quiet_libraries
 
 __all__ = ["main"]
 
-_COMMANDS = (run, check, forecast, plan)
+_COMMANDS = (run, check, origins, forecast, plan)
 
 
 def main(argv: Sequence[str] | None = None) -> int:

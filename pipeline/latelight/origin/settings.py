@@ -60,6 +60,37 @@ class OriginSettings(StageSettings):
         le=10.0,
         description="Least score at which a source is named as the origin [dex].",
     )
+    chance_level: float = Field(
+        0.01,
+        gt=0.0,
+        le=0.5,
+        description="Chance that arcs without a common origin point to one by "
+        "accident, below which `latelight origins` claims it.",
+    )
+    further_chance_level: float = Field(
+        0.05,
+        gt=0.0,
+        le=0.5,
+        description="The same for a second and every further origin beside one that is "
+        "claimed.",
+    )
+    random_skies: int = Field(
+        48,
+        ge=8,
+        le=10_000,
+        description="Skies of random directions that are searched at most to find that "
+        "chance.",
+    )
+    tilt_correlation_arcmin: float = Field(
+        1.0,
+        ge=0.0,
+        le=600.0,
+        description="Distance over which arcs of one filament share their tilt, so "
+        "that they count as fewer; 0 when all are independent [arcmin].",
+    )
+    max_origins: int = Field(
+        8, ge=1, le=100, description="Origins that are searched for at most."
+    )
 
 
 class SourceSettings(StageSettings):
