@@ -55,13 +55,9 @@ def _plan(arguments: argparse.Namespace) -> int:
         lambda: plan_fields(config, sources, mjd=arguments.at, folder=arguments.output),
     )
     print_table(
-        (
-            "source", "field", "away", "depth pc", "turned", "arcsec/yr",
-            "days apart",
-            "mag/arcsec2",
-        ),
+        ("source", "field", "away", "depth pc", "turned", "arcsec/yr", "days", "mag"),
         [_field_cells(row) for row in result.fields],
-    )  # fmt: skip
+    )
     print_table(
         ("source", "layer", "depth pc", "radius", "centre", "area deg2"),
         [_ring_cells(row) for row in result.rings],

@@ -138,10 +138,9 @@ def plan_fields(
     files = _write(folder, rows, rings, echoes)
     panels = [
         SourcePanel(source, age_yr(source, mjd), found.rings, found.cells)
-        for source in sources
-        for found in [echoes[source.name]]
-        if found.rings or any(row.dust_depth is not None for row in rows)
+        for source, found in zip(sources, echoes.values(), strict=True)
     ]
+    panels.sort(key=lambda panel: not panel.rings)  # those with rings first
     files += (folder / "plan.png",)
     write_bytes(files[-1], draw_plan(panels, fields, mjd=mjd))
     return PlanResult(rows, rings, mjd, folder, files)
