@@ -59,13 +59,15 @@ def choose_epochs(
     epochs : sequence of EpochQuality
         At least one.
     settings : StackingSettings
-        ``max_epochs``, ``max_seeing``, ``min_weight``, ``min_overlap``.
+        ``min_epochs``, ``max_epochs``, ``max_seeing``, ``min_weight``,
+        ``min_overlap``.
 
     Returns
     -------
     EpochChoice
-        The broadest member is the reference, so that all others can be convolved to
-        its PSF and nothing has to be sharpened.
+        The ``min_epochs`` best by each rule stay whatever the limit.  The broadest
+        member is the reference, so that all others can be convolved to its PSF and
+        nothing has to be sharpened.
 
     Raises
     ------
@@ -76,7 +78,7 @@ def choose_epochs(
         msg = "epochs must not be empty"
         raise ValueError(msg)
     left_out: dict[int, str] = {}
-    kept = range(len(epochs))
+    kept = list(range(len(epochs)))
     for rule in (_off_the_middle, _too_broad, _too_shallow, _too_many):
         reasons = rule([epochs[index] for index in kept], settings)
         left_out |= {i: why for i, why in zip(kept, reasons, strict=True) if why}
@@ -88,16 +90,24 @@ def choose_epochs(
     )
 
 
-# Rules: why each epoch is not stacked, or an empty text; none drops the best one.
+# Rules: why each epoch is not stacked, or an empty text.
+
+
+def _allowed(
+    values: Sequence[float], limit: float, settings: StackingSettings
+) -> float:
+    """Return the largest value allowed: the limit, or that of enough epochs."""
+    return max(limit, sorted(values)[: settings.min_epochs][-1])
 
 
 def _off_the_middle(
     epochs: Sequence[EpochQuality], settings: StackingSettings
 ) -> list[str]:
-    limit = min(settings.min_overlap, max(epoch.overlap for epoch in epochs))
+    missing = [1.0 - epoch.overlap for epoch in epochs]
+    limit = _allowed(missing, 1.0 - settings.min_overlap, settings)
     return [
         ""
-        if epoch.overlap >= limit
+        if 1.0 - epoch.overlap <= limit
         else f"{100.0 * epoch.overlap:.0f} % of it lies on the frame in the middle "
         f"(stacking.min_overlap = {settings.min_overlap:g})"
         for epoch in epochs
@@ -105,10 +115,12 @@ def _off_the_middle(
 
 
 def _too_broad(epochs: Sequence[EpochQuality], settings: StackingSettings) -> list[str]:
-    sharpest = min(epoch.seeing for epoch in epochs)
+    seeing = [epoch.seeing for epoch in epochs]
+    sharpest = min(seeing)
+    limit = _allowed(seeing, settings.max_seeing * sharpest, settings)
     return [
         ""
-        if epoch.seeing <= settings.max_seeing * sharpest
+        if epoch.seeing <= limit
         else f"seeing {epoch.seeing / sharpest:.2f} times that of the sharpest "
         f"(stacking.max_seeing = {settings.max_seeing:g})"
         for epoch in epochs
@@ -118,14 +130,15 @@ def _too_broad(epochs: Sequence[EpochQuality], settings: StackingSettings) -> li
 def _too_shallow(
     epochs: Sequence[EpochQuality], settings: StackingSettings
 ) -> list[str]:
-    quietest = min(epoch.noise for epoch in epochs)
-    weights = [(quietest / epoch.noise) ** 2 for epoch in epochs]
+    noise = [epoch.noise for epoch in epochs]
+    quietest = min(noise)
+    limit = _allowed(noise, quietest / settings.min_weight**0.5, settings)
     return [
         ""
-        if weight >= settings.min_weight
-        else f"weight {weight:.3f} of the deepest's "
+        if epoch.noise <= limit
+        else f"weight {(quietest / epoch.noise) ** 2:.3f} of the deepest's "
         f"(stacking.min_weight = {settings.min_weight:g})"
-        for weight in weights
+        for epoch in epochs
     ]
 
 

@@ -30,7 +30,7 @@ class StackingSettings(StageSettings):
     )
     min_weight: float = Field(
         0.1,
-        ge=0,
+        gt=0,
         le=1,
         description="Least weight (1 / variance of a star's flux) of an epoch in a "
         "stack, in that of the deepest.",
