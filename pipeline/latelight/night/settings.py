@@ -8,7 +8,7 @@ from latelight.settings import StageSettings
 
 __all__ = ["TEMPLATE_CHOICES", "NightSettings", "PairSettings"]
 
-TEMPLATE_CHOICES = ("earliest", "sharpest", "deepest")
+TEMPLATE_CHOICES = ("earliest", "sharpest", "deepest", "stack")
 """Ways to choose the template of a group; anything else is a path."""
 
 
@@ -34,7 +34,8 @@ class PairSettings(StageSettings):
         "earliest",
         min_length=1,
         description="Template of each field and filter: earliest, sharpest, deepest, "
-        "or the path of one frame, relative to this file.",
+        "stack (of the other epochs, from the third epoch on), or the path of one "
+        "frame, relative to this file.",
     )
     min_days: float = Field(
         0.5, gt=0, description="Least time between the epochs of a pair [day]."
