@@ -201,6 +201,107 @@ def moving_ridge():
 
 
 @pytest.fixture(scope="session")
+def ridge_series():
+    """Return a drawer of straight ridges that move evenly over several epochs.
+
+    ``draw(rng, ridges, years=..., noise=..., size=...)`` gives an EpochSeries of
+    white noise, or of none without ``rng``, with the ridges in it: dicts of
+    ``angle`` (degrees, of the motion), ``speed`` (pixels a year), ``height`` (a
+    number, or one an epoch), ``sigma``, ``tail`` (Gaussian and exponential, pixels),
+    ``length`` and ``place`` (x, y at time 0, MJD 60000).  ``seed_of(series, ridge,
+    epoch, ...)`` is a first guess of one, off by ``turn`` degrees and ``off`` pixels.
+    """
+    from types import SimpleNamespace
+
+    from latelight.records import ArcTrace, EpochSeries, TrackSeed
+
+    def profile(u, sigma, tail):
+        """A Gaussian blurred backwards by an exponential, peak 1 at 0."""
+        fine = np.arange(-60.0, 30.0, 0.02)
+        gauss = np.exp(-0.5 * (fine / sigma) ** 2)
+        decay = np.exp(-np.arange(0.0, 12.0 * tail + 0.02, 0.02) / max(tail, 1e-9))
+        height = np.convolve(gauss, decay[::-1])[decay.size - 1 :] if tail else gauss
+        height = height[: fine.size] / height[: fine.size].max()
+        top = fine[np.argmax(height)]
+        return np.interp(u + top, fine, height, left=0.0, right=0.0)
+
+    usual = {
+        "angle": 30.0,
+        "speed": 20.0,
+        "height": 1.0,
+        "sigma": 2.2,
+        "tail": 2.0,
+        "length": 80.0,
+        "place": None,
+    }
+
+    def complete(ridge, size):
+        full = {**usual, **ridge}
+        if full["place"] is None:
+            full["place"] = (0.5 * (size - 1), 0.5 * (size - 1))
+        return full
+
+    def draw(
+        rng=None,
+        ridges=({},),
+        *,
+        years=(-1.0, -0.4, 0.1, 0.5, 1.0),
+        noise=0.3,
+        size=180,
+        template=None,
+    ):
+        n = len(years)
+        y, x = np.mgrid[:size, :size].astype(float)
+        pixels = np.zeros((n, size, size))
+        for ridge in ridges:
+            full = complete(ridge, size)
+            c, d = np.cos(np.radians(full["angle"])), np.sin(np.radians(full["angle"]))
+            u = (x - full["place"][0]) * c + (y - full["place"][1]) * d
+            s = (y - full["place"][1]) * c - (x - full["place"][0]) * d
+            light = np.exp(-np.log(2.0) * (2.0 * s / full["length"]) ** 6)
+            for i, height in enumerate(np.broadcast_to(full["height"], n)):
+                at = u - full["speed"] * years[i]
+                pixels[i] += height * light * profile(at, full["sigma"], full["tail"])
+        if rng is not None:
+            pixels += rng.normal(0.0, noise, pixels.shape)
+        if template is not None:
+            pixels -= pixels[template].copy()
+        return EpochSeries(
+            pixels=pixels.astype(np.float32),
+            variance=np.full(pixels.shape, noise**2, np.float32),
+            mask=np.zeros(pixels.shape, np.uint16),
+            mjd=60000.0 + 365.25 * np.array(years),
+            fwhm_px=np.full(n, 3.0),
+            noise_ratio=np.ones(n),
+            names=tuple(f"larkspur_{i}" for i in range(n)),
+        )
+
+    def seed_of(series, ridge=None, epoch=2, *, turn=0.0, off=0.0, **changes):
+        full = complete(ridge or {}, series.pixels.shape[1])
+        years = (series.mjd[epoch] - 60000.0) / 365.25
+        angle = full["angle"] + turn
+        c, d = np.cos(np.radians(angle)), np.sin(np.radians(angle))
+        way = full["speed"] * years
+        x0 = full["place"][0] + way * np.cos(np.radians(full["angle"])) + off * c
+        y0 = full["place"][1] + way * np.sin(np.radians(full["angle"])) + off * d
+        half = 0.5 * full["length"]
+        s = np.arange(-half, half + 1.0)
+        guess = {
+            "trace": ArcTrace(x0 - s * d, y0 + s * c, np.full(s.size, angle)),
+            "direction_angle": angle % 360.0,
+            "speed_px_yr": full["speed"],
+            "mjd": float(series.mjd[epoch]),
+            "width_px": 7.0,
+            "snr": 10.0,
+            "origin": f"larkspur_{epoch}-larkspur_0",
+            "arc": epoch,
+        }
+        return TrackSeed(**{**guess, **changes})
+
+    return SimpleNamespace(draw=draw, seed_of=seed_of)
+
+
+@pytest.fixture(scope="session")
 def star_pair(star_plane):
     """Return a maker of two registered frames of the same Gaussian stars.
 

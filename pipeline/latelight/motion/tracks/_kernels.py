@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 from numba import njit
 
 from latelight.records import FloatArray, IntArray, MaskArray, PixelArray
 
-__all__ = ["path_log_p", "strip_sums"]
+__all__ = ["lit_knots", "lit_ridge", "path_log_p", "strip_sums"]
 
 
 @njit(nogil=True, cache=True)
@@ -174,4 +176,113 @@ def path_log_p(
             gain = 0.5 * spread * (off @ np.linalg.solve(inner, off))
             gain += 0.5 * height * r.sum()
             out[a, b] = gain - 0.5 * np.log(np.linalg.det(inner))
+    return out
+
+
+@njit(nogil=True, cache=True)
+def _scaled_erfc(z: float) -> float:
+    """Return exp(z**2) erfc(z): Abramowitz & Stegun 7.1.23 (from memory) far out."""
+    if z < 6.0:
+        return math.exp(z * z) * math.erfc(z)
+    q = 0.5 / (z * z)
+    series = 1.0 - q * (1.0 - 3.0 * q * (1.0 - 5.0 * q * (1.0 - 7.0 * q)))
+    return series / (z * math.sqrt(math.pi))
+
+
+@njit(nogil=True, cache=True)
+def _lobe(x: float, sigma: float, tail: float) -> float:
+    """Return the unit-area exponentially modified Gaussian, tail towards -x."""
+    gauss = math.exp(-0.5 * (x / sigma) ** 2)
+    if tail < 1e-3 * sigma:
+        return gauss / (sigma * math.sqrt(2.0 * math.pi))
+    z = (sigma / tail + x / sigma) / math.sqrt(2.0)
+    if z < -5.0:
+        return math.exp(0.5 * (sigma / tail) ** 2 + x / tail) / tail
+    return 0.5 * gauss * _scaled_erfc(z) / tail
+
+
+@njit(nogil=True, cache=True)
+def lit_ridge(
+    offsets: FloatArray,
+    centres: FloatArray,
+    blurred: FloatArray,
+    shares: FloatArray,
+    tail: float,
+    front: float,
+    scale: float,
+    first_knot: float,
+    spacing: float,
+    density: FloatArray,
+) -> FloatArray:
+    """Return the brightness of a ridge that sweeps over dust.
+
+    Parameters
+    ----------
+    offsets : float64 array, shape (m,)
+        Pixels along the motion.
+    centres : float64 array, shape (b, n)
+        Places of the ridge.
+    blurred, shares : float64 array, shape (n,)
+        Sigma of the Gaussian, and part of an offset from the ridge that was there
+        before the PSF.
+    tail, front, scale : float
+        Scale of the exponential, the Gaussian's centre ahead of the ridge, and the
+        factor that makes the ridge 1 high.
+    first_knot, spacing : float
+        Knots of the dust.
+    density : float64 array, shape (b, k)
+        Dust at the knots; that of the outermost ones beyond them.
+
+    Returns
+    -------
+    float64 array, shape (b, m, n)
+    """
+    n_bins, n = centres.shape
+    last = density.shape[1] - 1
+    out = np.zeros((n_bins, offsets.size, n))
+    for b in range(n_bins):
+        for i in range(n):
+            for u in range(offsets.size):
+                x = offsets[u] - centres[b, i]
+                height = scale * _lobe(x - front, blurred[i], tail)
+                if height < 1e-4:
+                    continue
+                t = (offsets[u] - (1.0 - shares[i]) * x - first_knot) / spacing
+                t = min(max(t, 0.0), float(last))
+                k = min(int(t), last - 1)
+                part = t - k
+                dust = (1.0 - part) * density[b, k] + part * density[b, k + 1]
+                out[b, u, i] = height * dust
+    return out
+
+
+@njit(nogil=True, cache=True)
+def lit_knots(
+    offsets: FloatArray,
+    centres: FloatArray,
+    blurred: FloatArray,
+    shares: FloatArray,
+    tail: float,
+    front: float,
+    scale: float,
+    first_knot: float,
+    spacing: float,
+    n_knots: int,
+) -> FloatArray:
+    """Return the same for dust of density 1 at one knot, shape (b, m, n, n_knots)."""
+    n_bins, n = centres.shape
+    last = n_knots - 1
+    out = np.zeros((n_bins, offsets.size, n, n_knots))
+    for b in range(n_bins):
+        for i in range(n):
+            for u in range(offsets.size):
+                x = offsets[u] - centres[b, i]
+                height = scale * _lobe(x - front, blurred[i], tail)
+                if height < 1e-4:
+                    continue
+                t = (offsets[u] - (1.0 - shares[i]) * x - first_knot) / spacing
+                t = min(max(t, 0.0), float(last))
+                k = min(int(t), last - 1)
+                out[b, u, i, k] = height * (1.0 - t + k)
+                out[b, u, i, k + 1] = height * (t - k)
     return out

@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from latelight.motion.settings import MotionSettings
+from latelight.motion.tracks.crest import find_crest
 from latelight.motion.tracks.follow import DAYS_PER_YEAR, Followed
 from latelight.motion.tracks.joint import JointFit
 from latelight.motion.tracks.lines import flipped, shifted
@@ -67,7 +68,7 @@ def usable_epochs(followed: Followed) -> BoolArray:
     return finite & (errs <= _WORSE * np.median(errs[finite]))
 
 
-def drift_of(fit: JointFit, law: PathLaw, usable: BoolArray, pull: float) -> Drift:
+def drift_of(fit: JointFit, law: PathLaw, usable: BoolArray) -> Drift:
     """Return place, speed and change of a fitted ridge.
 
     Parameters
@@ -78,8 +79,6 @@ def drift_of(fit: JointFit, law: PathLaw, usable: BoolArray, pull: float) -> Dri
         How its places hang together.
     usable : bool array, shape (n,)
         Epochs with data.
-    pull : float
-        1 sigma by which the ridge seen at one time lies off the way, pixels.
 
     Notes
     -----
@@ -108,7 +107,8 @@ def drift_of(fit: JointFit, law: PathLaw, usable: BoolArray, pull: float) -> Dri
         )
     place, speed, change = (float(v) for v in to_motion @ way)
     covariance = to_motion @ covariance @ to_motion.T
-    covariance[0, 0] += pull**2
+    # Without hills the change is none; rounding must not make it less.
+    np.fill_diagonal(covariance, np.maximum(np.diag(covariance), 0.0))
     return Drift(middle, place, speed, change if fitted else np.nan, covariance)
 
 
@@ -136,23 +136,25 @@ def assemble(
     n = len(series)
     length = max(followed.light.length, 8.0)
     patches = max(length / motion.texture_length_px, 1.0)
-    pull = motion.texture * lobe.full_width / np.sqrt(patches)
-    drift = drift_of(fit, followed.law, usable_epochs(followed), pull)
+    drift = drift_of(fit, followed.law, usable_epochs(followed))
+    crest, crest_err = find_crest(followed.sums, fit, drift.place)
+    crest_err = float(np.hypot(crest_err, motion.texture * lobe.full_width))
     sense = 1.0 if drift.speed >= 0.0 else -1.0
 
-    slope = _slope_at(followed, drift.place)
-    trace = shifted(followed.trace, drift.place, slope)
+    ridge = drift.place + crest
+    trace = shifted(followed.trace, ridge, _slope_at(followed, drift.place))
     if sense < 0.0:
         trace = flipped(trace)
     middle = trace.x.size // 2
     slope_err = float(np.sqrt(fit.covariance[n + 2, n + 2]))
-    bent = np.hypot(pull, motion.relief_px / np.sqrt(patches))
+    bent = np.hypot(followed.law.pull, motion.relief_px / np.sqrt(patches))
     # A line through evenly spread points, each off by so much.
     turn_err = np.hypot(slope_err, np.sqrt(12.0) * bent / length)
-    flip = np.diag([sense, sense, sense])
-    covariance = flip @ drift.covariance @ flip
+    covariance = drift.covariance.copy()
+    # The crest of an unknown light curve lies off the front at all times alike.
+    covariance[0, 0] += crest_err**2
     width, width_err = _width(fit)
-    offsets = sense * (followed.sums.offsets - drift.place)
+    offsets = sense * (followed.sums.offsets - ridge)
     profiles = position_time(followed.sums, fit)
     order = slice(None) if sense > 0.0 else slice(None, None, -1)
     return Track(

@@ -10,9 +10,10 @@ import numpy as np
 from latelight.motion.settings import MotionSettings
 from latelight.motion.tracks.assemble import assemble, unfollowed
 from latelight.motion.tracks.follow import follow_seed
-from latelight.motion.tracks.judge import Case, verdict_of
+from latelight.motion.tracks.judge import Case, is_moving, verdict_of
 from latelight.motion.tracks.link import common_light, explains, group_seeds
 from latelight.motion.tracks.noise import SeriesNoise, measure_noise
+from latelight.motion.tracks.others import meet, without_light
 from latelight.motion.tracks.settings import TrackSettings
 from latelight.records import EpochSeries, Track, TrackSeed
 
@@ -85,6 +86,8 @@ def build_tracks(
         left = builder.absorbed(tracks, group)
         if left:
             tracks.append(builder.best_track(left))
+    tracks = builder.without_duplicates(tracks)
+    tracks = builder.apart(tracks)
     return (*builder.without_duplicates(tracks), *broken)
 
 
@@ -122,18 +125,38 @@ class _Builder:
                 break
         return min(found, key=_rank)
 
-    def _track(self, seeds: tuple[TrackSeed, ...]) -> Track:
+    def apart(self, tracks: list[Track]) -> list[Track]:
+        """Fit ridges that do not look like one again, without the others' light."""
+        lit = [track for track in tracks if is_moving(track)]
+        out = []
+        for track in tracks:
+            others = [
+                other
+                for other in lit
+                if other is not track and meet(track, other, self.series)
+            ]
+            if track.verdict != "track" and is_moving(track) and others:
+                series = without_light(self.series, others)
+                again = self._track(track.seeds, series)
+                track = again if again.verdict == "track" else track
+            out.append(track)
+        return out
+
+    def _track(
+        self, seeds: tuple[TrackSeed, ...], series: EpochSeries | None = None
+    ) -> Track:
         """Follow the first of some seeds; whatever fails, the others go on."""
+        series = self.series if series is None else series
         try:
             followed = follow_seed(
-                self.series,
+                series,
                 seeds[0],
                 noise=self.noise,
                 settings=self.settings,
                 motion=self.motion,
             )
-            track = assemble(self.series, seeds, followed, motion=self.motion)
-            case = Case(track, followed, self.series, self.settings)
+            track = assemble(series, seeds, followed, motion=self.motion)
+            case = Case(track, followed, series, self.settings)
             return replace(track, verdict=verdict_of(case))
         except (ValueError, np.linalg.LinAlgError) as error:
             return unfollowed(seeds, f"cannot be followed: {error}")

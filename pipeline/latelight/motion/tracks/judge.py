@@ -12,7 +12,7 @@ from latelight.motion.tracks.follow import DAYS_PER_YEAR, Followed
 from latelight.motion.tracks.settings import TrackSettings
 from latelight.records import EpochSeries, FloatArray, IntArray, Track
 
-__all__ = ["REASONS", "Case", "verdict_of"]
+__all__ = ["REASONS", "Case", "is_moving", "verdict_of"]
 
 _FEWEST_EPOCHS = 3
 # A track must be seen without its best epoch: in sigmas, and as a part of the whole.
@@ -20,6 +20,14 @@ _WITHOUT_BEST, _SHARE_WITHOUT_BEST = 3.5, 0.15
 # Without its two best epochs it must be seen, where it should be at half their height.
 _FADED, _SHOULD_SHOW, _SHOWS = 0.5, 5.0, 2.0
 _LEAST_SPEED_SIGMAS = 3.0
+# A place off by less than this part of the width is patchy dust's doing.
+_OFF_WIDTHS = 0.3
+# Excess of the reduced chi-square that passes: a constant, and for bright ridges, of
+# which no model is exact, this part of the significance, squared.
+_MISFIT, _MISFIT_PER_SNR = 1.5, 0.01
+
+
+_DISAGREE, _NO_RIDGE = "epochs disagree", "no moving ridge"
 
 
 @dataclass(frozen=True, slots=True)
@@ -39,6 +47,12 @@ def verdict_of(case: Case) -> str:
         if text is not None:
             return text
     return "track"
+
+
+def is_moving(track: Track) -> bool:
+    """Say whether a track moves, though the light of another may spoil it."""
+    spoilt = track.verdict.startswith((_DISAGREE, _NO_RIDGE))
+    return track.verdict == "track" or spoilt
 
 
 def few_epochs(case: Case) -> str | None:
@@ -104,11 +118,21 @@ def disagreeing(case: Case) -> str | None:
     weight = np.diag(precision)
     sigmas = np.abs(pull) / np.sqrt(weight)
     worst = int(np.argmax(sigmas))
-    if sigmas[worst] <= case.settings.largest_residual:
+    gap = pull[worst] / weight[worst]
+    least = _OFF_WIDTHS * case.followed.fit.ridge.lobe.full_width
+    if sigmas[worst] <= case.settings.largest_residual or abs(gap) <= least:
         return None
     name = case.series.names[int(np.flatnonzero(has)[worst])]
-    gap = pull[worst] / weight[worst]
-    return f"epochs disagree: {name} lies {gap:+.1f} px off"
+    return f"{_DISAGREE}: {name} lies {gap:+.1f} px off"
+
+
+def misfit(case: Case) -> str | None:
+    """Another light is taken for a ridge."""
+    track = case.track
+    limit = 1.0 + _MISFIT + (_MISFIT_PER_SNR * track.snr) ** 2
+    if track.chi2 <= limit:
+        return None
+    return f"{_NO_RIDGE}: reduced chi-square {track.chi2:.1f}"
 
 
 REASONS: tuple[Callable[[Case], str | None], ...] = (
@@ -118,6 +142,7 @@ REASONS: tuple[Callable[[Case], str | None], ...] = (
     unmoved,
     two_epochs,
     disagreeing,
+    misfit,
 )
 """In the order in which they are tried."""
 

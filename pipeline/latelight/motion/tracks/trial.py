@@ -84,7 +84,7 @@ def search_paths(
     evidence = -np.inf
     for scale in _SCALES:
         lobe = Lobe.of_width(psf, scale * width, _SKEW)
-        level = Lobe(np.array([np.median(psf)]), lobe.log_size, lobe.skew)
+        level = Lobe(np.full(1, lobe.seeing), lobe.seeing, lobe.log_size, lobe.skew)
         lobes = level.heights((sums.offsets - places[:, None])[None])[0]
         log_p = path_log_p(
             signal,
