@@ -116,7 +116,7 @@ def test_a_forecast_leaves_a_table_and_charts(night, capsys):
         61000.0 + 3.6 / 20.0 * YEAR, abs=0.01
     )
     assert 22.5 < rows["surface_brightness"][0] < 22.95
-    assert not rows["surface_brightness"].mask.any()
+    assert not np.ma.is_masked(rows["surface_brightness"])
     assert list(rows["in_field"]) == ["unknown", "unknown"]
     for column in rows.colnames:
         info = rows[column].info
