@@ -51,7 +51,9 @@ def test_run_leaves_every_product(night):
     assert len(candidates) > 0
     expected = {
         "candidates.ecsv", "candidates.fits", "candidates.vot", "arcs.ecsv",
-        "pairs.ecsv", "residuals.ecsv", "run.json", "log.jsonl",
+        "pairs.ecsv", "residuals.ecsv", "run.json", "log.jsonl", "series.ecsv",
+        "tracks.ecsv", "tracks.fits", "tracks.vot", "track_points.ecsv",
+        "interpretations.ecsv",
     }  # fmt: skip
     for name in candidates["id"]:
         expected |= {f"cutouts/{name}.fits", f"cutouts/{name}.png"}

@@ -11,6 +11,8 @@ from latelight.cli import main
 
 ROOT = Path(__file__).parents[2]
 pytestmark = pytest.mark.e2e
+# Files that hold seconds and memory; all others are the same to the byte.
+TELL_THE_TIME = ("run.json", "log.jsonl", "pairs.ecsv", "series.ecsv")
 
 
 def run(settings, output, jobs):
@@ -78,12 +80,22 @@ def test_another_observatory_s_frames_are_read_by_its_words(other_words):
     assert set(found["source"]) == {"Gorse Event"}
 
 
+def test_every_echo_is_followed_over_its_epochs(sample):
+    """One track an echo, the same arc at all three epochs, and nothing else."""
+    tracks = Table.read(sample / "tracks.ecsv")
+    tracks = tracks[tracks["verdict"] == "track"]
+    assert len(tracks) == 5
+    assert set(tracks["n_epochs"]) == {3}
+    assert set(tracks["found_in"]) == {"both"}
+    assert set(tracks["source"]) == {"Sorrel 1713"}
+
+
 def test_two_workers_give_the_catalogues_of_one(sample, tmp_path):
     other = run("sample_night.toml", tmp_path / "night", "2")
     names = sorted(
         p.relative_to(sample)
         for p in sample.rglob("*")
-        if p.is_file() and p.name not in ("run.json", "log.jsonl", "pairs.ecsv")
+        if p.is_file() and p.name not in TELL_THE_TIME
     )
     assert len(names) > 20
     for name in names:

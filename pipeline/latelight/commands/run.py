@@ -25,6 +25,8 @@ from latelight.commands.shared import (
 if TYPE_CHECKING:
     from latelight.night.run import NightResult, Progress
     from latelight.products.rows import CandidateRow, PairRow
+    from latelight.products.series_rows import SeriesRow
+    from latelight.products.track_rows import TrackRow
 
 __all__ = ["add_to"]
 
@@ -91,6 +93,9 @@ class _Silence:
     def end(self) -> None:
         """Show nothing."""
 
+    def followed(self, row: SeriesRow) -> None:
+        """Show nothing."""
+
 
 class _Lines(_Silence):
     """Writes one plain line a pair, for logs of scheduled runs."""
@@ -103,6 +108,15 @@ class _Lines(_Silence):
         where = f"[{self._done}/{self._total}] {row.pair}"
         if row.status == "done":
             text = f"{count(row.n_candidates or 0, 'candidate')}, {row.seconds:.1f} s"
+        else:
+            text = f"failed: {row.reason}"
+        print(f"{where}: {text}", file=sys.stderr, flush=True)
+
+    def followed(self, row: SeriesRow) -> None:
+        where = f"{row.field or row.grid} {row.filter}".strip()
+        if row.status == "done":
+            tracks = count(row.n_tracks or 0, "track")
+            text = f"{count(row.n_epochs, 'epoch')}, {tracks}, {row.seconds:.1f} s"
         else:
             text = f"failed: {row.reason}"
         print(f"{where}: {text}", file=sys.stderr, flush=True)
@@ -126,32 +140,47 @@ class _Bar(_Silence):
 
 
 def _print_result(result: NightResult, folder: Path) -> None:
-    """Print the closing table: candidates best first, what failed, the totals."""
+    """Print the closing tables, best first, what failed, and the totals."""
+    motion = ("arcsec/yr", "towards", "source", "score")
     print_table(
-        ("candidate", "position", "S/N", "arcsec/yr", "towards", "source", "score"),
-        [_candidate_cells(row) for row in result.candidates],
+        ("candidate", "position", "S/N", *motion),
+        [
+            (row.id, _position(row), f"{row.snr:.1f}", *_motion(row))
+            for row in result.candidates
+        ],
     )
-    for row in result.pairs:
-        if row.status == "failed":
-            print(f"failed  {row.pair}: {row.reason}")
-    done = len(result.pairs) - result.n_failed
+    print_table(
+        ("track", "epochs", "position", "S/N", *motion),
+        [
+            (row.id, str(row.n_epochs), _position(row), f"{row.snr:.1f}", *_motion(row))
+            for row in result.tracks
+        ],
+    )
+    for pair in result.pairs:
+        if pair.status == "failed":
+            print(f"failed  {pair.pair}: {pair.reason}")
+    for series in result.series:
+        if series.status == "failed":
+            print(f"failed  epochs of {series.grid}: {series.reason}")
     print(
-        f"{count(done, 'pair')} done, {result.n_failed} failed; "
-        f"{count(len(result.candidates), 'candidate')} in {folder}"
+        f"{count(result.n_pairs_done, 'pair')} done, {result.n_failed} failed; "
+        f"{count(len(result.candidates), 'candidate')} and "
+        f"{count(len(result.tracks), 'track')} in {folder}"
     )
 
 
-def _candidate_cells(row: CandidateRow) -> tuple[str, ...]:
+def _position(row: CandidateRow | TrackRow) -> str:
     if row.ra is None or row.dec is None:
-        position = f"x {row.x:.1f} y {row.y:.1f}"
-    else:
-        position = f"{row.ra:.5f} {row.dec:+.5f}"
-    speed = "-"
+        return f"x {row.x:.1f} y {row.y:.1f}"
+    return f"{row.ra:.5f} {row.dec:+.5f}"
+
+
+def _motion(row: CandidateRow | TrackRow) -> tuple[str, str, str, str]:
+    """Return speed, direction, source and score."""
+    speed = towards = "-"
     if row.speed is not None and row.speed_err is not None:
         speed = f"{row.speed:.1f} ± {row.speed_err:.1f}"
-    towards = "-"
     if row.normal_pa is not None and row.normal_pa_err is not None:
         towards = f"{row.normal_pa:.1f}° ± {row.normal_pa_err:.1f}°"
     score = "-" if row.score is None else f"{row.score:+.1f}"
-    snr = f"{row.snr:.1f}"
-    return row.id, position, snr, speed, towards, row.source or "-", score
+    return speed, towards, row.source or "-", score

@@ -1,4 +1,4 @@
-"""Run a night: plan it, hand the pairs out, gather what comes back, write it down.
+"""Run a night: plan it, hand the pairs out, put epochs together, write it all down.
 
 Results are taken in the order of the pairs, whatever the order in which they
 finish, so that the catalogues do not depend on the number of workers.
@@ -6,39 +6,49 @@ finish, so that the catalogues do not depend on the number of workers.
 
 from __future__ import annotations
 
-import json
 import logging
+import shutil
 import time
 import uuid
-from collections.abc import Iterator, Sequence
+from collections import Counter
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, replace
-from datetime import UTC, datetime
 from pathlib import Path
-from typing import Any, Protocol
+from typing import Protocol, TypeVar
 
 from latelight.config import NightConfig
 from latelight.night.chain import Outcome, PairTask, process_pair
 from latelight.night.engine import Lost, run_tasks
-from latelight.night.pairing import failed_pair
-from latelight.night.record import Event, log_event, log_to, versions, write_record
+from latelight.night.pairing import AnyPair, Plan, failed_pair
+from latelight.night.record import Event, log_event, log_to
+from latelight.night.run_book import RunBook
 from latelight.night.scan import Night, plan_night
-from latelight.products.atomic import make_folder
-from latelight.products.cutouts import Cutout, write_cutout
-from latelight.products.designation import (
-    pixel_designation,
-    sky_designation,
-    unique_ids,
+from latelight.night.series import group_parts
+from latelight.night.stacked import StackTask, process_stack
+from latelight.night.tracking import (
+    SeriesOutcome,
+    SeriesTask,
+    failed_series,
+    process_series,
 )
+from latelight.night.writing import name_all, write_products
+from latelight.products.atomic import make_folder
 from latelight.products.difference import (
     write_difference,
     write_difference_picture,
 )
-from latelight.products.picture import write_picture
-from latelight.products.rows import ArcRow, CandidateRow, PairRow
-from latelight.products.tables import write_tables
+from latelight.products.rows import CandidateRow, PairRow
+from latelight.products.series_rows import SeriesRow
+from latelight.products.track_rows import TrackRow
 from latelight.records import Source
 
 __all__ = ["NightResult", "Progress", "run_night"]
+
+AnyTask = PairTask | StackTask
+Task = TypeVar("Task")
+Result = TypeVar("Result")
+
+_INTERRUPTED = "interrupted before it was finished; run again"
 
 
 class Progress(Protocol):
@@ -53,6 +63,9 @@ class Progress(Protocol):
     def end(self) -> None:
         """Hear that no more pairs will come."""
 
+    def followed(self, row: SeriesRow) -> None:
+        """Take a series of epochs that is done or has failed."""
+
 
 @dataclass(frozen=True, slots=True)
 class NightResult:
@@ -62,20 +75,32 @@ class NightResult:
     ----------
     pairs : tuple of PairRow
         Pairs in order, then frames that took part in none.
+    series : tuple of SeriesRow
+        Fields of three epochs or more.
     candidates : tuple of CandidateRow
         Best first.
+    tracks : tuple of TrackRow
+        Worth a look, best first.
     interrupted : bool
         Whether it was stopped before all pairs were finished.
     """
 
     pairs: tuple[PairRow, ...]
+    series: tuple[SeriesRow, ...]
     candidates: tuple[CandidateRow, ...]
+    tracks: tuple[TrackRow, ...]
     interrupted: bool
 
     @property
     def n_failed(self) -> int:
-        """How many rows failed."""
-        return sum(row.status == "failed" for row in self.pairs)
+        """How many pairs and series failed."""
+        rows: tuple[PairRow | SeriesRow, ...] = (*self.pairs, *self.series)
+        return sum(row.status == "failed" for row in rows)
+
+    @property
+    def n_pairs_done(self) -> int:
+        """How many pairs were finished."""
+        return sum(row.status == "done" for row in self.pairs)
 
 
 def run_night(
@@ -110,25 +135,36 @@ def run_night(
     if config.products.differences:
         make_folder(folder / "differences")
     run_id = uuid.uuid4().hex[:12]
-    record = _Record(folder, run_id, config, jobs)
-    record.write()  # before any work: an unwritable folder shows at once
+    book = RunBook(folder, run_id, config, jobs)
+    book.write()  # before any work: an unwritable folder shows at once
     with log_to(folder / "log.jsonl", run_id=run_id):
         log_event(Event(f"run started, {jobs} at a time"))
         night = plan_night(config, jobs=jobs)
-        record.inputs = night.digests
+        book.inputs = night.digests
         for remark in night.plan.remarks:
             log_event(Event(remark))
         for row in night.plan.failed:
             reason = f"failed: {row.reason}"
             log_event(Event(reason, pair=row.pair, level=logging.ERROR))
-        result = _work_through(night, config, sources, jobs, progress, record)
+        result = _work_through(night, config, sources, jobs, progress, book)
         log_event(
             Event(
-                f"run ended: {len(result.pairs) - result.n_failed} done, "
-                f"{result.n_failed} failed, {len(result.candidates)} candidates"
+                f"run ended: {result.n_pairs_done} pairs done, {result.n_failed} "
+                f"failed, {len(result.candidates)} candidates, "
+                f"{len(result.tracks)} tracks"
             )
         )
-        record.close(result)
+        book.close(
+            "interrupted" if result.interrupted else "ended",
+            {
+                "pairs_done": result.n_pairs_done,
+                "pairs_failed": len(result.pairs) - result.n_pairs_done,
+                "series_done": sum(row.status == "done" for row in result.series),
+                "series_failed": sum(row.status == "failed" for row in result.series),
+                "candidates": len(result.candidates),
+                "tracks": len(result.tracks),
+            },
+        )
     return result
 
 
@@ -138,58 +174,161 @@ def _work_through(
     sources: tuple[Source, ...],
     jobs: int,
     progress: Progress,
-    record: _Record,
+    book: RunBook,
 ) -> NightResult:
-    """Run the pairs, then write everything that needs the whole night."""
-    tasks = [PairTask(pair, config, sources) for pair in night.plan.pairs]
-    outcomes: list[Outcome] = []
-    interrupted = False
-    progress.begin(len(tasks))
+    """Run pairs and series, then write everything that needs the whole night."""
+    scratch = book.folder / f".series-{book.run_id}"
+    make_folder(scratch)
     try:
-        for outcome in _in_order(tasks, jobs):
-            for event in outcome.events:
-                log_event(event)
-            outcomes.append(_keep_difference(outcome, config, record))
-            progress.step(outcome.row)
+        outcomes, interrupted = _run_pairs(
+            _tasks(night.plan, config, sources, scratch),
+            config,
+            jobs,
+            progress,
+            book,
+        )
+        series: list[SeriesOutcome] = []
+        if not interrupted:
+            series, interrupted = _run_series(outcomes, config, sources, jobs, progress)
+    finally:
+        shutil.rmtree(scratch, ignore_errors=True)
+    start = time.perf_counter()
+    named = name_all(outcomes, series)
+    pairs = tuple(outcome.row for outcome in outcomes) + night.plan.failed
+    rows = tuple(outcome.row for outcome in series)
+    book.products += write_products(
+        book.folder, named, outcomes=outcomes, pairs=pairs, series=rows, config=config
+    )
+    seconds = time.perf_counter() - start
+    log_event(Event("tables and cutouts written", stage="products", seconds=seconds))
+    return NightResult(pairs, rows, named.candidates, named.track_rows, interrupted)
+
+
+def _tasks(
+    plan: Plan, config: NightConfig, sources: tuple[Source, ...], scratch: Path
+) -> list[AnyTask]:
+    """Return the tasks; pairs of a field of three epochs or more leave a part."""
+    count = Counter((pair.template.path, pair.template.chip) for pair in plan.pairs)
+    pairs = [
+        PairTask(
+            pair,
+            config,
+            sources,
+            scratch if count[pair.template.path, pair.template.chip] > 1 else None,
+        )
+        for pair in plan.pairs
+    ]
+    stacks = [StackTask(stack, config, sources, scratch) for stack in plan.stacks]
+    return [*pairs, *stacks]
+
+
+def _process(task: AnyTask) -> tuple[Outcome, ...]:
+    """Work on one pair, or on one field whose template is a stack."""
+    if isinstance(task, StackTask):
+        return process_stack(task)
+    return (process_pair(task),)
+
+
+def _failed(task: AnyTask, reason: str) -> tuple[Outcome, ...]:
+    """Return what there is to say of a task that came to nothing."""
+    return tuple(
+        Outcome(
+            failed_pair(pair, reason),
+            events=(Event(f"failed: {reason}", pair=pair.name, level=logging.ERROR),),
+        )
+        for pair in _pairs(task)
+    )
+
+
+def _pairs(task: AnyTask) -> tuple[AnyPair, ...]:
+    return task.stack.pairs if isinstance(task, StackTask) else (task.pair,)
+
+
+def _run_pairs(
+    tasks: Sequence[AnyTask],
+    config: NightConfig,
+    jobs: int,
+    progress: Progress,
+    book: RunBook,
+) -> tuple[list[Outcome], bool]:
+    """Return the outcomes of all pairs, and whether they were cut short."""
+    outcomes: list[Outcome] = []
+    n_done = 0
+    progress.begin(sum(len(_pairs(task)) for task in tasks))
+    try:
+        for of_task in _in_order(_process, tasks, jobs, _failed):
+            for outcome in of_task:
+                for event in outcome.events:
+                    log_event(event)
+                outcomes.append(_keep_difference(outcome, config, book))
+                progress.step(outcome.row)
+            n_done += 1
     except KeyboardInterrupt:
-        interrupted = True
-        reason = "interrupted before it was finished; run again"
-        for task in tasks[len(outcomes) :]:
-            outcomes.append(Outcome(failed_pair(task.pair, reason)))
+        for task in tasks[n_done:]:
+            outcomes += _failed(task, _INTERRUPTED)
         log_event(Event("interrupted", level=logging.ERROR))
+        return outcomes, True
     finally:
         progress.end()
-    arcs, cutouts = _with_ids(outcomes)
-    rows = tuple(outcome.row for outcome in outcomes) + night.plan.failed
-    _write_products(outcomes, arcs, cutouts, rows, config, record)
-    best_first = sorted((c.row for c in cutouts), key=lambda row: (-row.snr, row.id))
-    return NightResult(rows, tuple(best_first), interrupted)
+    return outcomes, False
 
 
-def _in_order(tasks: Sequence[PairTask], jobs: int) -> Iterator[Outcome]:
-    """Yield the outcomes of the pairs in the pairs' order."""
-    waiting: dict[int, Outcome] = {}
+def _run_series(
+    outcomes: Sequence[Outcome],
+    config: NightConfig,
+    sources: tuple[Source, ...],
+    jobs: int,
+    progress: Progress,
+) -> tuple[list[SeriesOutcome], bool]:
+    """Return the outcomes of all series, and whether they were cut short."""
+    parts = [outcome.part for outcome in outcomes if outcome.part is not None]
+    tasks = [SeriesTask(group, config, sources) for group in group_parts(parts)]
+    done: list[SeriesOutcome] = []
+    try:
+        for outcome in _in_order(process_series, tasks, jobs, _lost_series):
+            for event in outcome.events:
+                log_event(event)
+            done.append(outcome)
+            progress.followed(outcome.row)
+    except KeyboardInterrupt:
+        for task in tasks[len(done) :]:
+            done.append(SeriesOutcome(failed_series(task.parts, _INTERRUPTED)))
+        log_event(Event("interrupted", level=logging.ERROR))
+        return done, True
+    return done, False
+
+
+def _lost_series(task: SeriesTask, reason: str) -> SeriesOutcome:
+    """Return what there is to say of a series whose worker was lost."""
+    name = task.parts[0].grid.name
+    event = Event(f"failed: {reason}", pair=name, level=logging.ERROR)
+    return SeriesOutcome(failed_series(task.parts, reason), events=(event,))
+
+
+def _in_order(
+    work: Callable[[Task], Result],
+    tasks: Sequence[Task],
+    jobs: int,
+    lost: Callable[[Task, str], Result],
+) -> Iterator[Result]:
+    """Yield the results of tasks in the tasks' order."""
+    waiting: dict[int, Result] = {}
     upcoming = 0
-    for index, result in run_tasks(process_pair, tasks, jobs=jobs):
+    for index, result in run_tasks(work, tasks, jobs=jobs):
         if isinstance(result, Lost):
-            name = tasks[index].pair.name
-            message = f"failed: {result.reason}"
-            result = Outcome(
-                row=failed_pair(tasks[index].pair, result.reason),
-                events=(Event(message, pair=name, level=logging.ERROR),),
-            )
+            result = lost(tasks[index], result.reason)
         waiting[index] = result
         while upcoming in waiting:
             yield waiting.pop(upcoming)
             upcoming += 1
 
 
-def _keep_difference(outcome: Outcome, config: NightConfig, record: _Record) -> Outcome:
+def _keep_difference(outcome: Outcome, config: NightConfig, book: RunBook) -> Outcome:
     """Write a difference at once, where the settings ask for it, and let it go."""
     if outcome.difference is None:
         return outcome
     name = outcome.row.pair
-    stem = record.folder / "differences" / name
+    stem = book.folder / "differences" / name
     image, picture = Path(f"{stem}.fits"), Path(f"{stem}.png")
     write_difference(image, outcome.difference, wcs=outcome.wcs)
     write_difference_picture(
@@ -199,123 +338,5 @@ def _keep_difference(outcome: Outcome, config: NightConfig, record: _Record) -> 
         rows=[c.cutout.row for c in outcome.findings.candidates],
         settings=config.products,
     )
-    record.products += [image, picture]
+    book.products += [image, picture]
     return replace(outcome, difference=None, wcs=None)
-
-
-def _with_ids(outcomes: Sequence[Outcome]) -> tuple[list[ArcRow], list[Cutout]]:
-    """Name the candidates of the whole night, and tell their ridges."""
-    found = [
-        (number, candidate)
-        for number, outcome in enumerate(outcomes)
-        for candidate in outcome.findings.candidates
-    ]
-    rows = [candidate.cutout.row for _, candidate in found]
-    ids = unique_ids(
-        [_designation(row) for row in rows],
-        keys=[(row.pair, row.x, row.y) for row in rows],
-    )
-    arcs = [list(outcome.findings.arcs) for outcome in outcomes]
-    cutouts: list[Cutout] = []
-    for (number, candidate), row, name in zip(found, rows, ids, strict=True):
-        arc = arcs[number][candidate.arc]
-        arcs[number][candidate.arc] = replace(arc, candidate=name)
-        cutouts.append(replace(candidate.cutout, row=replace(row, id=name)))
-    return [arc for of_pair in arcs for arc in of_pair], cutouts
-
-
-def _designation(row: CandidateRow) -> str:
-    if row.ra is None or row.dec is None:
-        return pixel_designation(row.pair, row.x, row.y)
-    return sky_designation(row.ra, row.dec)
-
-
-def _write_products(
-    outcomes: Sequence[Outcome],
-    arcs: Sequence[ArcRow],
-    cutouts: Sequence[Cutout],
-    rows: Sequence[PairRow],
-    config: NightConfig,
-    record: _Record,
-) -> None:
-    start = time.perf_counter()
-    for cutout in cutouts:
-        stem = record.folder / "cutouts" / cutout.row.id
-        image, picture = Path(f"{stem}.fits"), Path(f"{stem}.png")
-        write_cutout(image, cutout)
-        write_picture(picture, cutout, settings=config.products)
-        record.products += [image, picture]
-    record.products += write_tables(
-        record.folder,
-        candidates=[cutout.row for cutout in cutouts],
-        arcs=arcs,
-        pairs=rows,
-        residuals=[r for outcome in outcomes for r in outcome.findings.residuals],
-    )
-    seconds = time.perf_counter() - start
-    log_event(Event("tables and cutouts written", stage="products", seconds=seconds))
-
-
-class _Record:
-    """What ``run.json`` will say; it also clears away products of earlier runs."""
-
-    def __init__(
-        self, folder: Path, run_id: str, config: NightConfig, jobs: int
-    ) -> None:
-        self.folder = folder
-        self.products: list[Path] = []
-        self.inputs: dict[Path, str] = {}
-        self._path = folder / "run.json"
-        self._earlier = _products_of(self._path)
-        self._start = time.perf_counter()
-        self._text: dict[str, Any] = {
-            "run": run_id,
-            "status": "running",
-            "started": _now(),
-            "jobs": jobs,
-            "versions": versions(),
-            "settings": config.model_dump(mode="json"),
-        }
-
-    def write(self) -> None:
-        """Write what is known so far; earlier products stay listed until the end."""
-        write_record(self._path, {**self._text, "products": sorted(self._earlier)})
-
-    def close(self, result: NightResult) -> None:
-        """Write the end of a run, and remove what an earlier one left behind."""
-        names = sorted(str(p.relative_to(self.folder)) for p in self.products)
-        for name in sorted(self._earlier - set(names)):
-            (self.folder / name).unlink(missing_ok=True)
-        self._text |= {
-            "status": "interrupted" if result.interrupted else "ended",
-            "ended": _now(),
-            "seconds": round(time.perf_counter() - self._start, 3),
-            "pairs_done": len(result.pairs) - result.n_failed,
-            "pairs_failed": result.n_failed,
-            "candidates": len(result.candidates),
-            "inputs": [
-                {"path": str(path), "sha256": digest}
-                for path, digest in sorted(self.inputs.items())
-            ],
-            "products": names,
-        }
-        write_record(self._path, self._text)
-
-
-def _products_of(path: Path) -> set[str]:
-    """Return the products an earlier ``run.json`` lists; none if it is unreadable."""
-    try:
-        listed = json.loads(path.read_text(encoding="utf-8"))["products"]
-    except (OSError, ValueError, KeyError, TypeError):
-        return set()
-    # Only what lies in the two folders of cutouts and differences, by plain names.
-    folders = ("cutouts", "differences")
-    return {
-        name
-        for name in listed
-        if len(parts := Path(name).parts) == 2 and parts[0] in folders
-    }
-
-
-def _now() -> str:
-    return datetime.now(tz=UTC).isoformat(timespec="seconds").replace("+00:00", "Z")
