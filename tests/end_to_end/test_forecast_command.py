@@ -206,3 +206,26 @@ def test_a_folder_without_tables(tmp_path, capsys):
     assert "candidates.ecsv: does not exist" in capsys.readouterr().err
     assert main(["forecast", str(tmp_path / "none"), "--at", "61000"]) == 2
     assert "give the output folder of a finished night" in capsys.readouterr().err
+
+
+def test_the_shape_of_a_track_is_that_of_its_trace(night, tmp_path):
+    """A trace on a circle of 60 arcsec about a point behind: ahead is -s^2 / 120."""
+    from latelight.reports.finder_ground import arc_shape
+    from latelight.reports.moving_arcs import read_arcs
+
+    arc = read_arcs(night).arcs[0].arc
+    along = np.linspace(-15.0, 15.0, 31)
+    ahead = np.sqrt(60.0**2 - along**2) - 60.0
+    pa = arc.pa + np.degrees(np.arctan2(along, ahead))
+    ra, dec = offset_position(arc.ra, arc.dec, pa, np.hypot(along, ahead) / 3600.0)
+    columns = [
+        fits.Column(name=name, format="D", array=values)
+        for name, values in (("ra", ra), ("dec", dec))
+    ]
+    table_hdu = fits.BinTableHDU.from_columns(columns, name="TRACE")
+    path = tmp_path / "track.fits"
+    fits.HDUList([fits.PrimaryHDU(), table_hdu]).writeto(path)
+    shape = arc_shape(path, arc)
+    assert shape.along == pytest.approx(along, abs=1e-3)
+    assert shape.ahead == pytest.approx(ahead, abs=1e-3)
+    assert not arc_shape(night / "cutouts" / "C2.fits", arc).ahead.any()

@@ -2,16 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from pathlib import Path
-from typing import Any
-
-import numpy as np
-from astropy.io import fits
-from astropy.wcs import WCS
 from PIL import Image, ImageDraw
 
-from latelight.errors import ProductError
 from latelight.forecast.predict import predict
 from latelight.products.captions import measured, shortened
 from latelight.products.drawing import (
@@ -27,43 +19,35 @@ from latelight.products.drawing import (
     write,
 )
 from latelight.products.forecast_rows import ForecastRow
-from latelight.records import PixelArray
 from latelight.reports.dates import date_words
 from latelight.reports.finder_chart import PREDICTED, SLIT, draw_chart
+from latelight.reports.finder_ground import ArcShape, Ground
 from latelight.reports.moving_arcs import FollowedArc
 
-__all__ = ["Ground", "cutout_ground", "draw_finder", "sexagesimal"]
+__all__ = ["draw_finder", "sexagesimal"]
 
 _SIDE, _EDGE, _HEAD, _FACTS = 820, 24, 70, 380
 _WIDTH, _HEIGHT = _SIDE + _FACTS + 3 * _EDGE, _HEAD + _SIDE + _EDGE
 _LEFT = _SIDE + 2 * _EDGE
 _SMALL, _TEXT, _LARGE, _NAME = 15, 19, 23, 28
+_KINDS = {
+    "track": "track, not a confirmed echo",
+    "candidate": "candidate, not confirmed",
+}
 _WARNING: Colour = (160, 30, 20)
 
 
-@dataclass(frozen=True, slots=True)
-class Ground:
-    """The image under a chart.
-
-    Attributes
-    ----------
-    pixels : float32 array, shape (ny, nx)
-        Counts; NaN without value.
-    wcs : astropy.wcs.WCS
-        Celestial WCS.
-    """
-
-    pixels: PixelArray
-    wcs: Any
-
-
-def draw_finder(ground: Ground, row: ForecastRow, followed: FollowedArc) -> Image.Image:
+def draw_finder(
+    ground: Ground, shape: ArcShape, row: ForecastRow, followed: FollowedArc
+) -> Image.Image:
     """Draw the chart of one arc.
 
     Parameters
     ----------
     ground : Ground
         The image: a whole frame or a cutout.
+    shape : ArcShape
+        The arc's ridge.
     row : ForecastRow
         The forecast.
     followed : FollowedArc
@@ -75,7 +59,7 @@ def draw_finder(ground: Ground, row: ForecastRow, followed: FollowedArc) -> Imag
         RGB, on a light ground.
     """
     last = predict(followed.arc, followed.mjd_last)
-    chart = draw_chart(ground.pixels, ground.wcs, row=row, last=last, side=_SIDE)
+    chart = draw_chart(ground, shape, row=row, last=last, side=_SIDE)
     picture = Image.new("RGB", (_WIDTH, _HEIGHT), PAPER)
     picture.paste(chart, (_EDGE, _HEAD))
     draw = ImageDraw.Draw(picture)
@@ -84,30 +68,8 @@ def draw_finder(ground: Ground, row: ForecastRow, followed: FollowedArc) -> Imag
     _write_heading(draw, row)
     bottom = _write_facts(draw, row)
     _write_remark(draw, row.remark, top=bottom)
-    _draw_legend(picture, row)
+    _draw_legend(picture, row, ground.note)
     return picture
-
-
-def cutout_ground(path: Path) -> Ground:
-    """Read the science image of a cutout.
-
-    Raises
-    ------
-    ProductError
-        If the file cannot be read or has no image with a celestial WCS.
-    """
-    try:
-        with fits.open(path) as file:
-            image = next((hdu for hdu in file if hdu.name == "SCIENCE"), None)
-            if image is None:
-                raise ProductError(path, "has no image SCIENCE: run the night again")
-            ground = Ground(np.array(image.data, np.float32), WCS(image.header))
-    except OSError as error:
-        reason = f"cannot be read ({error.strerror or error}): run the night again"
-        raise ProductError(path, reason) from None
-    if not ground.wcs.has_celestial:
-        raise ProductError(path, "has no celestial WCS: a chart needs one")
-    return ground
 
 
 def sexagesimal(ra: float, dec: float) -> tuple[str, str]:
@@ -124,7 +86,7 @@ def sexagesimal(ra: float, dec: float) -> tuple[str, str]:
 
 def _write_heading(draw: ImageDraw.ImageDraw, row: ForecastRow) -> None:
     write(draw, (_EDGE, 16), row.id, size=_NAME)
-    words = [row.field, f"filter {row.filter}" if row.filter else "", row.kind]
+    words = [row.field, f"filter {row.filter}" if row.filter else "", _KINDS[row.kind]]
     context = shortened(" · ".join(word for word in words if word), 60)
     place = (_WIDTH - _EDGE, 26)
     write(draw, place, context, size=_SMALL, colour=QUIET, anchor="ra")
@@ -201,7 +163,7 @@ def _write_remark(draw: ImageDraw.ImageDraw, remark: str, *, top: int) -> None:
     write(draw, (_LEFT, y), line, size=_TEXT, colour=_WARNING)
 
 
-def _draw_legend(picture: Image.Image, row: ForecastRow) -> None:
+def _draw_legend(picture: Image.Image, row: ForecastRow, note: str) -> None:
     """Explain the marks at the foot of the facts."""
     day = date_words(row.mjd_last)[:10]
     entries = (
@@ -228,7 +190,7 @@ def _draw_legend(picture: Image.Image, row: ForecastRow) -> None:
     write(
         draw,
         (_LEFT, _HEAD + _SIDE),
-        "dark is bright; a candidate, not a confirmed echo",
+        shortened(f"image: {note}; dark is bright", 56),
         size=_SMALL - 2,
         colour=QUIET,
         anchor="ld",

@@ -26,6 +26,7 @@ from latelight.products.drawing import (
 from latelight.products.forecast_rows import ForecastRow
 from latelight.products.panels import colour_epochs, enlarge
 from latelight.records import FloatArray, PixelArray
+from latelight.reports.finder_ground import ArcShape, Ground
 from latelight.sky import pixel_scale_arcsec, position_angle, separation_deg
 
 __all__ = ["PREDICTED", "SLIT", "draw_chart"]
@@ -41,16 +42,16 @@ _BAND_OPACITY, _PLATE_OPACITY = 0.28, 0.85
 
 
 def draw_chart(
-    pixels: PixelArray, wcs: Any, *, row: ForecastRow, last: Forecast, side: int
+    ground: Ground, shape: ArcShape, *, row: ForecastRow, last: Forecast, side: int
 ) -> Image.Image:
     """Draw the sky about the predicted place with the arc, its error and both slits.
 
     Parameters
     ----------
-    pixels : float32 array, shape (ny, nx)
-        The image, counts; NaN without value.
-    wcs : astropy.wcs.WCS
-        Its celestial WCS.
+    ground : Ground
+        The image.
+    shape : ArcShape
+        The arc's ridge.
     row : ForecastRow
         The forecast; its place is the middle of the chart.
     last : Forecast
@@ -63,16 +64,24 @@ def draw_chart(
     PIL.Image.Image
         RGB: the tangent plane about the middle, north up, east to the left.
     """
-    return _Chart(row, last, side=side, around=_reach(pixels, wcs)).drawn(pixels, wcs)
+    around = _reach(ground.pixels, ground.wcs)
+    return _Chart(row, last, shape, side=side, around=around).drawn(ground)
 
 
 class _Chart:
     """A square of sky; places on it are arcsec east and north of its middle."""
 
     def __init__(
-        self, row: ForecastRow, last: Forecast, *, side: int, around: float
+        self,
+        row: ForecastRow,
+        last: Forecast,
+        shape: ArcShape,
+        *,
+        side: int,
+        around: float,
     ) -> None:
         self._row, self._last, self._side = row, last, side
+        self._shape = _resampled(shape)
         self._length = row.length or 0.0
         # Without bound the band of a hopeless forecast would leave nothing to see.
         away = math.hypot(*self._place(last.ra, last.dec))
@@ -82,15 +91,16 @@ class _Chart:
         self._half = min(max(_MARGIN * extent, least), _WIDEST)
         self._scale = 0.5 * side / self._half
 
-    def drawn(self, pixels: PixelArray, wcs: Any) -> Image.Image:
+    def drawn(self, ground: Ground) -> Image.Image:
+        """Return the panel with everything on it."""
         row, here = self._row, (0.0, 0.0)
         there = self._place(self._last.ra, self._last.dec)
-        canvas = Canvas(self._ground(pixels, wcs))
+        canvas = Canvas(self._sky(ground.pixels, ground.wcs))
         self._band(canvas)
         for pa in (row.slit_pa_along, row.slit_pa_motion):
             self._slit(canvas, pa)
-        self._dots(canvas, there, self._last.pa + 90.0, ARC)
-        self._dots(canvas, here, row.slit_pa_along, PREDICTED)
+        self._dots(canvas, there, self._last.pa, ARC)
+        self._dots(canvas, here, row.motion_pa, PREDICTED)
         self._motion(canvas)
         self._compass(canvas)
         self._bar(canvas)
@@ -98,7 +108,7 @@ class _Chart:
         self._write(ImageDraw.Draw(panel))
         return panel
 
-    def _ground(self, pixels: PixelArray, wcs: Any) -> Image.Image:
+    def _sky(self, pixels: PixelArray, wcs: Any) -> Image.Image:
         """Return the image on the chart's grid, dark is bright."""
         native = pixel_scale_arcsec(wcs, *_middle(pixels))
         n = int(min(max(2.0 * self._half / native, 64.0), float(self._side)))
@@ -127,17 +137,17 @@ class _Chart:
 
     def _band(self, canvas: Canvas) -> None:
         """Shade 1 sigma along the motion, over the arc and 1 sigma beyond its ends."""
-        row = self._row
+        row, shape = self._row, self._shape
         ahead = min(row.offset_err, 2.0 * self._half)
-        along = min(0.5 * self._length + row.across_err, 2.0 * self._half)
+        beyond = min(row.across_err, 2.0 * self._half)
+        along = shape.along + beyond * np.sign(shape.along)
+        edge = [*zip(along, shape.ahead + ahead, strict=True)]
+        edge += [*zip(along, shape.ahead - ahead, strict=True)][::-1]
         corners = [
-            self._panel(*_add(_polar(row.motion_pa, a), _polar(row.motion_pa + 90, b)))
-            for a, b in (
-                (ahead, along),
-                (ahead, -along),
-                (-ahead, -along),
-                (-ahead, along),
+            self._panel(
+                *_add(_polar(row.motion_pa + 90.0, a), _polar(row.motion_pa, b))
             )
+            for a, b in edge
         ]
         canvas.fill(_clipped(corners, self._side), PREDICTED, opacity=_BAND_OPACITY)
 
@@ -150,11 +160,15 @@ class _Chart:
         canvas.line([*corners, corners[0]], SLIT, width=1.3)
 
     def _dots(self, canvas: Canvas, place: Point, pa: float, colour: Colour) -> None:
-        """Dot the arc, so that what is under it shows."""
-        pitch = 9.0 / self._scale
-        n = max(round(self._length / pitch), 2)
-        along = np.linspace(-0.5 * self._length, 0.5 * self._length, n)
-        dots = [self._panel(*_add(place, _polar(pa, step))) for step in along]
+        """Dot the arc that moves towards a position angle; what is under it shows."""
+        shape = self._shape
+        n = max(round(np.ptp(shape.along) * self._scale / 9.0), 2)
+        along = np.linspace(shape.along[0], shape.along[-1], n)
+        ahead = np.interp(along, shape.along, shape.ahead)
+        dots = [
+            self._panel(*_add(place, _add(_polar(pa + 90.0, a), _polar(pa, b))))
+            for a, b in zip(along, ahead, strict=True)
+        ]
         canvas.dots(dots, colour, radius=2.2)
 
     def _motion(self, canvas: Canvas) -> None:
@@ -209,6 +223,13 @@ class _Chart:
         return middle - east * self._scale, middle - north * self._scale
 
 
+def _resampled(shape: ArcShape) -> ArcShape:
+    """Return a ridge from end to end in even steps, the coordinate along it rising."""
+    order = np.argsort(shape.along)
+    along = np.linspace(shape.along[order[0]], shape.along[order[-1]], 33)
+    return ArcShape(along, np.interp(along, shape.along[order], shape.ahead[order]))
+
+
 def _polar(pa: float, distance: float) -> Point:
     """Return arcsec east and north of a step along a position angle."""
     turn = math.radians(pa)
@@ -235,7 +256,7 @@ def _within(pixels: PixelArray, x: FloatArray, y: FloatArray) -> Any:
 
 
 def _clipped(corners: list[Point], side: int) -> list[Point]:
-    """Return a convex polygon inside the panel (Sutherland and Hodgman 1974)."""
+    """Return the part of a polygon in the panel (Sutherland and Hodgman 1974)."""
     for axis, limit, sign in (
         (0, 0.0, 1.0),
         (0, float(side), -1.0),

@@ -8,7 +8,7 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
-from latelight.errors import FrameError, ProductError
+from latelight.errors import ProductError
 from latelight.forecast.brightness import predict_brightness
 from latelight.forecast.predict import Forecast, date_moved, predict
 from latelight.products.atomic import make_folder, write_bytes
@@ -17,7 +17,8 @@ from latelight.products.forecast_rows import ForecastRow
 from latelight.products.picture import png_bytes
 from latelight.products.tables import make_table, to_ecsv
 from latelight.records import FloatArray
-from latelight.reports.finder import Ground, cutout_ground, draw_finder
+from latelight.reports.finder import draw_finder
+from latelight.reports.finder_ground import Grounds
 from latelight.reports.known_frames import KnownFrame, inside, known_frames
 from latelight.reports.moving_arcs import FollowedArc, NightArcs, read_arcs
 from latelight.sky import separation_deg
@@ -96,7 +97,7 @@ def forecast_arcs(
     make_folder(folder / "forecast")
     table = folder / "forecast.ecsv"
     write_bytes(table, to_ecsv(make_table("forecast", rows, FORECAST_COLUMNS)))
-    grounds = _Grounds(output, frames)
+    grounds = Grounds(output, frames)
     charts, no_chart = [], {}
     for arc, row in zip(chosen, rows, strict=True):
         try:
@@ -104,8 +105,9 @@ def forecast_arcs(
         except ProductError as error:
             no_chart[arc.id] = str(error)
             continue
+        chart = draw_finder(ground, grounds.shape(arc), row, arc)
         charts.append(folder / "forecast" / f"{arc.id}.png")
-        write_bytes(charts[-1], png_bytes(draw_finder(ground, row, arc)))
+        write_bytes(charts[-1], png_bytes(chart))
     left_out = {} if ids else night.left_out
     return ForecastResult(rows, left_out, table, tuple(charts), no_chart)
 
@@ -180,32 +182,6 @@ def forecast_row(
         source=followed.source,
         remark="; ".join(_remarks(followed, there, corners, in_field)),
     )
-
-
-class _Grounds:
-    """Finds the image under a chart: the frame, or the cutout where it is gone."""
-
-    def __init__(self, output: Path, frames: Mapping[str, KnownFrame]) -> None:
-        self._output, self._frames = output, frames
-        self._name = ""
-        self._ground: Ground | None = None
-
-    def under(self, followed: FollowedArc) -> Ground:
-        # Arcs of one frame follow each other: only the last one is kept.
-        if followed.frame != self._name:
-            self._name, self._ground = followed.frame, self._frame(followed.frame)
-        if self._ground is not None:
-            return self._ground
-        return cutout_ground(self._output / "cutouts" / f"{followed.id}.fits")
-
-    def _frame(self, name: str) -> Ground | None:
-        if name not in self._frames:
-            return None
-        try:
-            frame = self._frames[name].read()
-        except FrameError:
-            return None
-        return Ground(frame.plane.pixels, frame.wcs)
 
 
 def _chosen(
