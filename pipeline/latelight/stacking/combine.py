@@ -55,14 +55,15 @@ def combine(
 
     Notes
     -----
-    A value x is left out when ``(x - m)^2 > clip^2 V + (tolerance (m - sky))^2`` with
-    m the median of the n planes there and V the variance of ``x - m``: to first order
-    ``v (1 - 2 / n) + (pi / 2) sum v / n^2``, the median taken for a mean whose
-    variance is pi / 2 times as large (its limit for many values of one normal
+    The worst value x is left out while ``(x - m)^2 > clip^2 V + (tolerance (m -
+    sky))^2``, m the median of the n values left and V the variance of ``x - m``: to
+    first order ``v (1 - 2 / n) + (pi / 2) sum v / n^2``, the median taken for a mean
+    whose variance is pi / 2 times as large (its limit for many values of one normal
     distribution, from memory; for 3 to 5 equal planes V is 3-12 % too large).  At
-    most a minority, ``(n - 1) // 2``, is left out; when more deviate nobody can tell
-    which are right, and all are used.  Of two planes neither can be left out.  The
-    rule is even in ``x - m``, so blank sky is not biased.
+    most a minority, ``(n - 1) // 2``, is left out; when one more deviates by half as
+    much as the last or more, nobody can tell which are right, and all are used.  Of
+    two values neither can be left out.  The rule is even in ``x - m``, so blank sky
+    is not biased.
     """
     if not planes:
         msg = "planes must not be empty"
