@@ -16,14 +16,14 @@ from latelight.echo.geometry import (
     light_speed_arcsec_yr,
     observer_distance_pc,
 )
-from latelight.origin.score import motion_density
+from latelight.origin.score import AGE_RANGE_YR, motion_density
 from latelight.origin.settings import OriginSettings
 from latelight.records import FloatArray, Source
 from latelight.sky import position_angle, separation_deg
 
 __all__ = ["AgeEstimate", "estimate_age"]
 
-_AGES = np.geomspace(1.0, 3e4, 1201)
+_AGES = np.geomspace(*AGE_RANGE_YR, 1201)
 _DISTANCE_NODES = np.array([-1.2816, -0.5244, 0.0, 0.5244, 1.2816])
 _SPEED_NODES = np.array([-1.2816, -0.5244, 0.0, 0.5244, 1.2816])
 

@@ -34,6 +34,15 @@ __all__ = ["best_origin", "direction_density", "motion_density", "score_origins"
 ANGLE_NODES = 33
 SPEED_NODES = 17
 GEOMETRY_NODES = 5
+AGE_NODES = 24
+AGE_RANGE_YR = (1.0, 3e4)
+"""Ages of an outburst of unknown age: every decade between is equally likely."""
+
+# The middle of an arc is known to about an arcsec.
+_PLACE_DEG = 1.0 / 3600.0
+# Normal errors wider than this leave a direction all but even over the circle.
+_ANY_DIRECTION_DEG = 60.0
+_NO_BLUR_DEG = 0.1
 
 
 @dataclass(frozen=True, slots=True)
@@ -94,7 +103,10 @@ def score_origins(
     ``score = log10[ (1 - f) P(motion | source) / P(motion | random) + f ]`` with f
     the share of arcs that may move in any direction.  Random arcs are even in
     direction and in the logarithm of the speed.  Measurement errors, and those of
-    age and distance, are averaged over.
+    age and distance, are averaged over; so is the age of a source of known distance
+    whose age is not known.  A source in the arc itself has no direction away from it:
+    its away angle is NaN and it scores 0 like a random arc.  One 90 degrees away or
+    farther cannot be the origin, for the dust would lie behind the observer.
     """
     if not (np.isfinite(ra) and np.isfinite(dec)):
         return ()
@@ -196,13 +208,19 @@ def _score(source: Source, seen: _Observed, settings: OriginSettings) -> OriginS
     separation = float(separation_deg(source.ra, source.dec, seen.ra, seen.dec))
     away_pa = position_angle(seen.ra, seen.dec, source.ra, source.dec) + 180.0
     away = float(wrap_180(seen.normal_pa - away_pa))
+    # How well the place of the arc gives the direction away from a source near it.
+    blur = float(np.degrees(np.arctan2(_PLACE_DEG, separation)))
+    if blur > _ANY_DIRECTION_DEG:
+        away = np.nan
+    elif blur < _NO_BLUR_DEG:
+        blur = 0.0  # far sources in one direction score alike, to the last digit
     age = age_yr(source, seen.mjd)
-    unborn = age is not None and age <= 0.0
+    impossible = (age is not None and age <= 0.0) or separation >= 90.0
     known = _geometry(source, separation, age)
-    ratio = 0.0 if unborn else _likelihood_ratio(away, known, seen, settings)
+    ratio = 0.0 if impossible else _likelihood_ratio(away, blur, known, seen, settings)
     floor = settings.outlier_fraction
     score = float(np.log10((1.0 - floor) * ratio + floor))
-    if known is None:
+    if known is None or known.age is None:
         return OriginScore(source.name, score, away, separation)
     return OriginScore(
         source=source.name,
@@ -224,10 +242,10 @@ def _score(source: Source, seen: _Observed, settings: OriginSettings) -> OriginS
 
 @dataclass(frozen=True, slots=True)
 class _Geometry:
-    """What is needed to place the dust: degrees, years, pc."""
+    """What is needed to place the dust: degrees, years (None: any age), pc."""
 
     theta: float
-    age: float
+    age: float | None
     age_err: float
     distance: float
     distance_err: float
@@ -235,7 +253,8 @@ class _Geometry:
 
 def _geometry(source: Source, theta: float, age: float | None) -> _Geometry | None:
     """Return the geometry, or None where it is unknown or impossible."""
-    if age is None or age <= 0.0 or source.distance_pc is None or theta >= 90.0:
+    unborn = age is not None and age <= 0.0
+    if unborn or source.distance_pc is None or theta >= 90.0:
         return None
     return _Geometry(
         theta=theta,
@@ -247,13 +266,17 @@ def _geometry(source: Source, theta: float, age: float | None) -> _Geometry | No
 
 
 def _likelihood_ratio(
-    away: float, known: _Geometry | None, seen: _Observed, settings: OriginSettings
+    away: float,
+    blur: float,
+    known: _Geometry | None,
+    seen: _Observed,
+    settings: OriginSettings,
 ) -> float:
     """Return P(motion | source) / P(motion | random), errors averaged over."""
     if not np.isfinite(away):
         return 1.0
     error = seen.normal_pa_err if np.isfinite(seen.normal_pa_err) else 0.0
-    angles = away + error * ndtri(_midpoints(ANGLE_NODES))
+    angles = away + np.hypot(error, blur) * ndtri(_midpoints(ANGLE_NODES))
     right = _density_ratio(angles, known, seen, settings)
     wrong = _density_ratio(angles + 180.0, known, seen, settings)
     return (1.0 - seen.wrong_sense) * right + seen.wrong_sense * wrong
@@ -291,7 +314,11 @@ def _gradients(
 
     One value for each combination of ages and distances within their errors.
     """
-    age = _positive_nodes(known.age, known.age_err, count=GEOMETRY_NODES)
+    if known.age is None:
+        low, high = np.log(AGE_RANGE_YR)
+        age = np.exp(low + (high - low) * _midpoints(AGE_NODES))
+    else:
+        age = _positive_nodes(known.age, known.age_err, count=GEOMETRY_NODES)
     distance = _positive_nodes(known.distance, known.distance_err, count=GEOMETRY_NODES)
     ages, distances = (grid.ravel() for grid in np.meshgrid(age, distance))
     across, per_tilt = delay_gradient(known.theta, ages, distances)
