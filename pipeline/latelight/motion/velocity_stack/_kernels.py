@@ -8,13 +8,66 @@ from numba import njit
 __all__ = [
     "block_rows",
     "block_sums",
+    "clipped_sums",
     "compress",
     "keep_best",
     "project_rows",
     "ridge_sums",
     "sample_trial",
+    "subtract_smooth",
     "take_out_ridge",
 ]
+
+
+@njit(nogil=True, cache=True)
+def clipped_sums(
+    pixels: np.ndarray,
+    variance: np.ndarray,
+    mask: np.ndarray,
+    limit: float,
+    size: int,
+    top: np.ndarray,
+    bottom: np.ndarray,
+) -> None:
+    """Sum w y and w over blocks, but for pixels of more than ``limit`` sigma."""
+    ny, nx = pixels.shape
+    square = limit * limit
+    for y in range(ny):
+        for x in range(nx):
+            value = pixels[y, x]
+            if mask[y, x] == 0 and value * value < square * variance[y, x]:
+                w = 1.0 / variance[y, x]
+                top[y // size, x // size] += w * value
+                bottom[y // size, x // size] += w
+
+
+@njit(nogil=True, cache=True)
+def subtract_smooth(
+    pixels: np.ndarray,
+    mask: np.ndarray,
+    smooth: np.ndarray,
+    size: int,
+    out: np.ndarray,
+    first: int,
+    last: int,
+) -> None:
+    """Subtract what is given at the middles of blocks, linear between them."""
+    nx = pixels.shape[1]
+    n_rows, n_cols = smooth.shape
+    for y in range(first, last):
+        v = min(max((y + 0.5) / size - 0.5, 0.0), n_rows - 1.0)
+        row = min(int(v), max(n_rows - 2, 0))
+        below = min(row + 1, n_rows - 1)
+        fy = v - row
+        for x in range(nx):
+            u = min(max((x + 0.5) / size - 0.5, 0.0), n_cols - 1.0)
+            col = min(int(u), max(n_cols - 2, 0))
+            right = min(col + 1, n_cols - 1)
+            fx = u - col
+            near = (1.0 - fx) * smooth[row, col] + fx * smooth[row, right]
+            far = (1.0 - fx) * smooth[below, col] + fx * smooth[below, right]
+            level = (1.0 - fy) * near + fy * far
+            out[y, x] = pixels[y, x] - level if mask[y, x] == 0 else 0.0
 
 
 @njit(nogil=True, cache=True)

@@ -17,6 +17,7 @@ from latelight.motion.velocity_stack._kernels import (
     block_sums,
     project_rows,
 )
+from latelight.motion.velocity_stack.background import without_background
 from latelight.records import EpochSeries, FloatArray, PixelArray
 from latelight.threads import over_rows
 from latelight.widths import FWHM_PER_SIGMA
@@ -35,6 +36,8 @@ class Moving:
 
     Attributes
     ----------
+    pixels : float32 array, shape (n, ny, nx)
+        ``y_i``.
     weight : float32 array, shape (n, ny, nx)
         ``w_i``; 0 where masked.
     signal : float32 array, shape (n, ny, nx)
@@ -43,6 +46,7 @@ class Moving:
         ``sum_i w_i``.
     """
 
+    pixels: PixelArray
     weight: PixelArray
     signal: PixelArray
     total: PixelArray
@@ -84,15 +88,18 @@ def base_bin(fwhm_px: float) -> int:
     return max(1, round(fwhm_px / 1.65))
 
 
-def take_out_static(series: EpochSeries) -> Moving:
+def take_out_static(series: EpochSeries, *, smooth_px: float) -> Moving:
     """Take the weighted mean over the epochs out of every pixel.
 
     Parameters
     ----------
     series : EpochSeries
         Shape (n, ny, nx).
+    smooth_px : float
+        Sigma over which the background is smooth, pixels; it goes first.
     """
-    pixels, variance, mask = series.pixels, series.variance, series.mask
+    variance, mask = series.variance, series.mask
+    pixels = without_background(series, sigma_px=smooth_px)
     weight, signal = np.empty_like(pixels), np.empty_like(pixels)
     total = np.empty(pixels.shape[1:], np.float32)
 
@@ -100,7 +107,7 @@ def take_out_static(series: EpochSeries) -> Moving:
         project_rows(pixels, variance, mask, weight, signal, total, first, last)
 
     over_rows(project, pixels.shape[1])
-    return Moving(weight, signal, total)
+    return Moving(pixels, weight, signal, total)
 
 
 def build_levels(

@@ -79,7 +79,9 @@ class _Search:
 
     def case(self, match: Match) -> Case:
         """Return what the tests look at."""
-        return Case(match, self.ratio(match.ridge.sigma_px), self.settings)
+        ratio = self.ratio(match.ridge.sigma_px)
+        fwhm = float(np.median(self.series.fwhm_px))
+        return Case(match, ratio, fwhm, self.settings)
 
 
 def search_velocities(
@@ -125,7 +127,7 @@ def _prepare(
 ) -> tuple[_Search, list[Guess]]:
     """Search coarsely; return the guesses, most significant first."""
     middle, span = _time(series)
-    moving = take_out_static(series)
+    moving = take_out_static(series, smooth_px=settings.widest_px)
     passage = Passage(
         phase=(series.mjd - middle) / span,
         share=moving.shares(),
@@ -144,7 +146,7 @@ def _prepare(
         guesses += found
         calibration.append(point)
     guesses.sort(key=lambda g: (-g.snr, g.y, g.x))
-    narrowest = 0.9 * float(np.min(series.fwhm_px)) / FWHM_PER_SIGMA
+    narrowest = float(np.min(series.fwhm_px)) / FWHM_PER_SIGMA
     reach = Reach(
         half_length=_LONGEST_HALF_PX,
         shift=1.1 * settings.largest_shift_px,
@@ -244,7 +246,7 @@ def _take_out(search: _Search, match: Match) -> None:
     half_width = float(far) * ridge.sigma_px + 1.0
     for i, shift in enumerate(ridge.shift_px * search.passage.phase):
         take_out_ridge(
-            search.series.pixels,
+            search.moving.pixels,
             search.moving.weight,
             search.moving.signal,
             search.moving.total,

@@ -24,13 +24,13 @@ class VelocityStackSettings(StageSettings):
         description="Fewest epochs of a field with which to search.",
     )
     threshold: float = Field(
-        7.0,
+        6.8,
         ge=4.0,
         le=100.0,
         description="Least significance of a ridge in all epochs together [sigma].",
     )
     seed_threshold: float = Field(
-        5.2,
+        5.1,
         ge=3.0,
         le=100.0,
         description="Least response of the coarse filters worth a closer look [sigma].",
@@ -43,7 +43,7 @@ class VelocityStackSettings(StageSettings):
         "[pixel].",
     )
     shortest_px: float = Field(
-        45.0,
+        50.0,
         ge=16.0,
         le=1000.0,
         description="Least length of a ridge [pixel].",

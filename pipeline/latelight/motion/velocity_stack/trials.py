@@ -39,7 +39,7 @@ CodeArray = NDArray[np.int16]
 
 _LENGTH = 14.0
 """Sigma along the ridge in units of sigma across."""
-_LEAST_SHIFT = 3.5
+_LEAST_SHIFT = 3.0
 """Least distance moved over all epochs, units of sigma across: residues of stars,
 which stay, are not taken for slow ridges."""
 _SHIFT_STEP = 2.0
@@ -199,8 +199,8 @@ def _strongest(
         floor = _floor(power, bank.margin, shape)
         if floor <= 0.0:
             continue
-        for i in range(len(signal)):
-            compress(response[i], power[i], passage.cap, floor / len(signal))
+        for one_response, one_power in zip(response, power, strict=True):
+            _compress(one_response, one_power, passage.cap, floor / len(signal))
         widths += _stack(best, code, response, power, bank, passage, number, floor)
     return _Found(best, code, widths or [1.0])
 
@@ -211,6 +211,19 @@ def _floor(power: PixelArray, margin: int, shape: tuple[int, int]) -> float:
     total = inner.sum(axis=0)
     lit = total[total > 1e-3 * total.max(initial=0.0)]
     return 0.2 * float(np.median(lit)) if lit.size else 0.0
+
+
+def _compress(
+    response: PixelArray, power: PixelArray, cap: float, floor: float
+) -> None:
+    """Hold back responses above the cap, in sigmas of what they really scatter by."""
+    stride = max(1, round(np.sqrt(response.size / _CALIBRATION_POINTS)))
+    value = response[::stride, ::stride].astype(float)
+    noise = power[::stride, ::stride].astype(float)
+    lit = noise > floor
+    if lit.any():
+        sigma = MAD_TO_SIGMA * np.median(np.abs(value[lit] / np.sqrt(noise[lit])))
+        compress(response, power, cap * max(float(sigma), 0.3), floor)
 
 
 def _stack(

@@ -31,10 +31,12 @@ _WORST_CHI2 = 1.8
 _LEAST_AREA = 0.5
 """Part of the ridge that must lie on good pixels at an epoch that counts."""
 _LEAST_EPOCHS = 3
-_LEAST_ASPECT = 4.0
+_LEAST_ASPECT = 5.5
 """Length over full width at half maximum."""
-_LEAST_SHIFT = 1.8
+_LEAST_SHIFT = 1.5
 """Distance moved over all epochs, in full widths at half maximum."""
+_LEAST_PSF_SHIFT = 2.5
+"""The same in widths of the PSF: residues of stars reach so far."""
 _LEAST_RADIUS_PX = 190.0
 """Haloes and ghosts of bright stars are rings, up to 120 pixels in radius."""
 _NEAR_LIMIT = 0.95
@@ -51,12 +53,15 @@ class Case:
         The ridge against all epochs.
     noise_ratio : float
         Noise of such ridges over that stated by the variance.
+    fwhm_px : float
+        PSF width, pixels.
     settings : VelocityStackSettings
         Limits of what is looked for.
     """
 
     match: Match
     noise_ratio: float
+    fwhm_px: float
     settings: VelocityStackSettings
 
     @property
@@ -119,8 +124,8 @@ def well_shaped(case: Case) -> bool:
 def well_moved(case: Case) -> bool:
     """Tell whether it leaves its own place, and does not outrun the search."""
     shift = abs(case.match.ridge.shift_px)
-    far = shift <= case.settings.largest_shift_px
-    return far and shift >= _LEAST_SHIFT * case.width_px
+    least = max(_LEAST_SHIFT * case.width_px, _LEAST_PSF_SHIFT * case.fwhm_px)
+    return least <= shift <= case.settings.largest_shift_px
 
 
 def seen_at_enough_epochs(case: Case) -> bool:
