@@ -138,20 +138,32 @@ def find_origins(
     likelihood = origin_likelihood(arcs, laws)
     places = unit_vectors([s.ra for s in sources], [s.dec for s in sources])
     search = _Search(likelihood, choose_pairs(arcs, rng), settings, rng, places)
-    components, chances, rest = search.claimed()
-    origins = [search.finished(components, index) for index in range(len(components))]
+    claimed, rest = search.claimed()
+    origins = [
+        search.finished(claimed.components, index, region=region)
+        for index, region in enumerate(claimed.regions)
+    ]
     origins.sort(key=_rank)
     # The smallest chance was that of the first origin to be found, the strongest.
     origins = [
         replace(origin, chance=chance)
-        for origin, chance in zip(origins, sorted(chances), strict=True)
+        for origin, chance in zip(origins, sorted(claimed.chances), strict=True)
     ]
-    origins += search.listed(components, sources)
+    origins += search.listed(claimed, sources)
     return JointOrigins(tuple(sorted(origins, key=_rank)), likelihood, rest)
 
 
 def _rank(origin: JointOrigin) -> tuple[float, ...]:
     return (-origin.score, *(float(v) for v in origin.direction))
+
+
+@dataclass(frozen=True, slots=True)
+class _Claimed:
+    """Origins that are claimed: fits, regions, and the chance of each step."""
+
+    components: tuple[Component, ...] = ()
+    regions: tuple[Ellipse | Ridge, ...] = ()
+    chances: tuple[float, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -164,24 +176,20 @@ class _Search:
     rng: np.random.Generator
     places: FloatArray
 
-    def claimed(self) -> tuple[tuple[Component, ...], list[float], Unclaimed | None]:
+    def claimed(self) -> tuple[_Claimed, Unclaimed | None]:
         """Add origins as long as random directions hardly ever gain as much.
 
-        Returns the origins, the chance of each step, and the next one that is not
-        claimed.
+        Returns those claimed, and the next one that is not.
         """
-        mixture = Mixture()
-        chances: list[float] = []
+        mixture, claimed = Mixture(), _Claimed()
         while True:
             after = add_origin(self.likelihood, mixture, self.pairs, extra=self.places)
             gain = (after.value - mixture.value) / np.log(10.0)
             if len(after.components) == len(mixture.components) or gain <= 0.0:
-                return mixture.components, chances, None
-            level = (
-                self.settings.further_chance_level
-                if chances
-                else self.settings.chance_level
-            )
+                return claimed, None
+            level = self.settings.chance_level
+            if claimed.chances:
+                level = self.settings.further_chance_level
             chance = chance_of_score(
                 self.likelihood,
                 mixture.components,
@@ -190,42 +198,45 @@ class _Search:
                 skies=self.settings.random_skies,
                 level=level,
             )
+            regions = self._regions(after.components)
             if (
                 chance > level
-                or len(chances) == self.settings.max_origins
-                or not self._separate(after.components)
+                or len(claimed.chances) == self.settings.max_origins
+                or not _separate(after.components, regions)
             ):
-                last = len(after.components) - 1
-                region = self._region(after.components, last)
-                direction = after.components[last].direction
-                rest = Unclaimed(direction, gain, chance, region)
-                return mixture.components, chances, rest
+                last = after.components[-1].direction
+                return claimed, Unclaimed(last, gain, chance, regions[-1])
             mixture = after
-            chances.append(chance)
+            chances = (*claimed.chances, chance)
+            claimed = _Claimed(after.components, regions, chances)
 
-    def listed(
-        self, components: tuple[Component, ...], sources: Sequence[Source]
-    ) -> list[JointOrigin]:
+    def listed(self, claimed: _Claimed, sources: Sequence[Source]) -> list[JointOrigin]:
         """Return listed sources that explain arcs which no origin found explains.
 
         Each is one place among as many as are listed: its likelihood ratio exceeds
         n / level by accident with at most the probability level (Markov).
         """
-        added: list[tuple[Component, float, str]] = []
-        while len(added) < len(sources):
-            known = (*components, *(one for one, _, _ in added))
+        known = claimed.components
+        added: list[tuple[float, str]] = []
+        # A source where an origin was found is that origin already.
+        open_ = np.array(
+            [not any(_holds(r, s) for r in claimed.regions) for s in sources], bool
+        )
+        while open_.any():
             beside = self.likelihood.beside(mixture_base(self.likelihood, known))
             scores = beside.marginal(self.places) / np.log(10.0)
-            best = int(np.argmax(scores))
+            best = int(np.argmax(np.where(open_, scores, -np.inf)))
             chance = min(1.0, len(sources) * 10.0 ** -float(scores[best]))
             if chance > self.settings.chance_level:
                 break
-            new = fit_component(beside, self.places[best])
-            added.append((new, chance, sources[best].name))
-        known = (*components, *(one for one, _, _ in added))
+            known = (*known, fit_component(beside, self.places[best]))
+            added.append((chance, sources[best].name))
+            open_[best] = False
         return [
-            self.finished(known, len(components) + i, chance=chance, listed=name)
-            for i, (_, chance, name) in enumerate(added)
+            self.finished(
+                known, len(claimed.components) + i, chance=chance, listed=name
+            )
+            for i, (chance, name) in enumerate(added)
         ]
 
     def finished(
@@ -233,23 +244,33 @@ class _Search:
         components: tuple[Component, ...],
         index: int,
         *,
+        region: Ellipse | Ridge | None = None,
         chance: float = 0.0,
         listed: str = "",
     ) -> JointOrigin:
-        """Return a claimed origin with its region and its arcs."""
+        """Return a claimed origin with its arcs."""
         one = components[index]
         beside = self._beside_others(components, index)
-        membership = _membership(beside, one)
         widths = law_widths(self.settings.direction_scatter_deg)
         return JointOrigin(
-            region=None if listed else self._region(components, index),
+            region=region,
             direction=one.direction,
-            score=float(beside.marginal(one.direction[None])[0]) / np.log(10.0),
+            score=float(beside.marginal(one.direction[None])[0] / np.log(10.0)),
             chance=chance,
-            membership=membership,
+            membership=_membership(beside, one),
             scatter_deg=float(one.law_weights @ widths),
             listed=listed,
         )
+
+    def _regions(
+        self, components: tuple[Component, ...]
+    ) -> tuple[Ellipse | Ridge, ...]:
+        regions = []
+        for index, one in enumerate(components):
+            beside = self._beside_others(components, index)
+            support = _membership(beside, one)
+            regions.append(error_region(beside, one.direction, support))
+        return tuple(regions)
 
     def _beside_others(
         self, components: tuple[Component, ...], index: int
@@ -257,22 +278,23 @@ class _Search:
         others = without(components, index)
         return self.likelihood.beside(mixture_base(self.likelihood, others))
 
-    def _region(self, components: tuple[Component, ...], index: int) -> Ellipse | Ridge:
-        beside = self._beside_others(components, index)
-        one = components[index]
-        return error_region(beside, one.direction, _membership(beside, one))
 
-    def _separate(self, components: tuple[Component, ...]) -> bool:
-        """Whether no origin lies within the 99 % region of another."""
-        for index, one in enumerate(components if len(components) > 1 else ()):
-            region = self._region(components, index)
-            if not isinstance(region, Ellipse):
-                continue
-            for other in components:
-                ra, dec = (float(v) for v in sky_of(other.direction))
-                if other is not one and region.chi2(ra, dec) < CHI2_99:
-                    return False
-        return True
+def _holds(region: Ellipse | Ridge, source: Source) -> bool:
+    """Whether a source lies within the 99 % region of an origin."""
+    return isinstance(region, Ellipse) and region.chi2(source.ra, source.dec) < CHI2_99
+
+
+def _separate(
+    components: tuple[Component, ...], regions: tuple[Ellipse | Ridge, ...]
+) -> bool:
+    """Whether no origin lies within the 99 % region of another."""
+    for one, region in zip(components, regions, strict=True):
+        for other in components:
+            ra, dec = (float(v) for v in sky_of(other.direction))
+            near = isinstance(region, Ellipse) and region.chi2(ra, dec) < CHI2_99
+            if other is not one and near:
+                return False
+    return True
 
 
 def _membership(beside: OriginLikelihood, one: Component) -> FloatArray:

@@ -15,7 +15,13 @@ import numpy as np
 from latelight.origin.joint_arcs import MovingArcs
 from latelight.origin.joint_laws import turns
 from latelight.origin.joint_likelihood import OriginLikelihood
-from latelight.origin.joint_mixture import Component, Mixture, add_origin, mixture_base
+from latelight.origin.joint_mixture import (
+    Component,
+    Mixture,
+    add_origin,
+    mixture_base,
+    refined,
+)
 from latelight.origin.joint_search import choose_pairs
 from latelight.records import FloatArray, IntArray
 
@@ -24,7 +30,7 @@ __all__ = ["chance_of_score"]
 # Draw skies in lots, and stop as soon as the answer is clear.
 _LOT = 8
 _CLEAR_DEX = 5.0
-_MAX_ARCS = 1000
+_MAX_ARCS, _MOST_PAIRS = 300, 1000
 
 
 def chance_of_score(
@@ -62,15 +68,15 @@ def chance_of_score(
     The median hardly depends on the number of arcs: of many, a sample is drawn.
     """
     some = _sample(likelihood, rng)
-    pairs = choose_pairs(some.arcs, rng)
+    pairs = choose_pairs(some.arcs, rng, most=_MOST_PAIRS)
+    known = Mixture(tuple(components), -np.inf if components else 0.0)
     draw = _drawer(some, components)
     best: list[float] = []
     while len(best) < skies:
         for _ in range(min(_LOT, skies - len(best))):
             sky = replace(some, arcs=draw(rng))
-            before = Mixture()
-            for _ in components:
-                before = add_origin(sky, before, pairs)
+            # What is known to be there is fitted anew, like the real arcs.
+            before = refined(sky, known, pairs)
             after = add_origin(sky, before, pairs)
             best.append((after.value - before.value) / np.log(10.0))
         chance = _gumbel_tail(score - float(np.median(best)))

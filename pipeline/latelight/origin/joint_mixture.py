@@ -18,10 +18,15 @@ __all__ = [
     "add_origin",
     "fit_component",
     "mixture_base",
+    "refined",
     "without",
 ]
 
 _PASSES = 3
+# Gain of the log likelihood below which a mixture is settled.
+_SETTLED = 0.05
+# Pairs times arcs when origins are sought anew.
+_REFINING_EFFORT = 1e6
 # The law averaged over a posterior counts like so many arcs when it is fitted.
 _LAW_ARCS = 4.0
 _LAW_ROUNDS = 8
@@ -119,15 +124,37 @@ def add_origin(
     best = _inserted(likelihood, before.components, pairs, extra)
     if best is None:
         return before
-    trial = best
-    for _ in range(_PASSES * len(before.components)):
-        # The oldest first: the new one goes to the end.
-        again = _inserted(likelihood, without(trial.components, 0), pairs, extra)
-        if again is None:
+    return refined(likelihood, best, pairs) if before.components else best
+
+
+def refined(likelihood: OriginLikelihood, mixture: Mixture, pairs: PairList) -> Mixture:
+    """Seek every origin anew beside the others, in turns, until nothing is gained.
+
+    Parameters
+    ----------
+    likelihood : OriginLikelihood
+        Of a single origin.
+    mixture : Mixture
+        Origins near which and over the whole sky is sought.
+    pairs : int array, shape (m, 2)
+        Pairs of arcs whose crossings are tried; some of them when there are many arcs.
+    """
+    some = pairs[:: 1 + int(len(pairs) * len(likelihood.arcs) / _REFINING_EFFORT)]
+    best = trial = mixture
+    for _ in range(_PASSES):
+        start = best.value
+        for _ in mixture.components:
+            # The oldest first: the new one goes to the end.
+            here = trial.components[0].direction[None]
+            others = without(trial.components, 0)
+            again = _inserted(likelihood, others, some, here)
+            if again is None:
+                return best
+            trial = again
+            if trial.value > best.value:
+                best = trial
+        if best.value < start + _SETTLED:
             break
-        trial = again
-        if trial.value > best.value:
-            best = trial
     return best
 
 

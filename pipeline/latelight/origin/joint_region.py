@@ -24,7 +24,8 @@ CHI2_95 = 5.991464547107979
 _OPEN_DROP = 0.5 * CHI2_95
 # So far away, degrees, arcs of any field are parallel.
 _FAR_DEG = 75.0
-_GRID = 41
+# Points a side of the grid, for few and for many arcs, whose posterior is smooth.
+_FINE, _COARSE, _MANY_ARCS = 41, 17, 1000
 _REACH_SIGMA = 4.0
 _ROUNDS = 7
 _RIDGE_DISTANCES = np.geomspace(0.02, _FAR_DEG, 60)
@@ -174,7 +175,8 @@ def _ellipse(
     places = likelihood.arcs.frames[support > 0.5, 0]
     gaps = np.degrees(np.arccos(np.clip(places @ origin, -1.0, 1.0)))
     axes = np.eye(2) * (0.15 * float(np.median(gaps)) if gaps.size else 1.0)
-    level = np.linspace(-_REACH_SIGMA, _REACH_SIGMA, _GRID)
+    side = _FINE if len(likelihood.arcs) <= _MANY_ARCS else _COARSE
+    level = np.linspace(-_REACH_SIGMA, _REACH_SIGMA, side)
     unit = np.stack(np.meshgrid(level, level), axis=-1).reshape(-1, 2)
     cov, offset, chance = np.eye(2), np.zeros((len(unit), 2)), np.ones(len(unit))
     for _ in range(_ROUNDS):

@@ -28,14 +28,25 @@ _SHRINK = 6
 _DOUBTFUL = 0.02
 
 
-def choose_pairs(arcs: MovingArcs, rng: np.random.Generator) -> PairList:
+def choose_pairs(
+    arcs: MovingArcs, rng: np.random.Generator, *, most: int = 0
+) -> PairList:
     """Return the pairs of arcs whose crossings are tried, shape (m, 2).
 
     All of them, or a sample: half among neighbours, half of any distance, so that an
     origin that lit few of many arcs is not missed.
+
+    Parameters
+    ----------
+    arcs : MovingArcs
+        The arcs.
+    rng : numpy.random.Generator
+        Draws the sample.
+    most : int
+        Size of the sample; by default what the number of arcs allows.
     """
     n = len(arcs)
-    most = int(np.clip(_EFFORT / max(n, 1), _FEWEST_PAIRS, _MOST_PAIRS))
+    most = most or int(np.clip(_EFFORT / max(n, 1), _FEWEST_PAIRS, _MOST_PAIRS))
     if n * (n - 1) // 2 <= most:
         return np.stack(np.triu_indices(n, 1), axis=1)
     half = most // 2
