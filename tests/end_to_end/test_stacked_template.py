@@ -68,6 +68,7 @@ def test_every_epoch_has_a_row_of_its_own(done):
     assert {o.row.status for o in done} == {"done"}
     assert done[0].row.template == "stack of 3: epoch_2, epoch_3, epoch_4"
     for outcome in done:
+        assert outcome.row.notes.endswith("pixels and counts are those of epoch_4")
         others = [o.row.mjd_science for o in done if o is not outcome]
         assert min(others) < outcome.row.mjd_template < max(others)
 

@@ -82,7 +82,9 @@ def _template(
     if len(members) < _LEAST_FOR_OUTLIERS:
         text = f"{template.name}: too few to tell outliers, none are left out"
         journal.say(text, stage=_STAGE)
+    pixels = f"pixels and counts are those of {field.reference.name}"
     journal.add(
+        notes="; ".join(note for note in (journal.row.notes, pixels) if note),
         template=template.name,
         mjd_template=template.mjd,
         fwhm_template_px=field.stars.fwhm_px,
