@@ -169,6 +169,22 @@ def test_even_motion_is_predicted_exactly():
     assert np.all(np.diff(np.diag(covariance)) > 0.0)
 
 
+def test_places_known_exactly_leave_what_hills_may_do():
+    """At an epoch nothing is uncertain; far off, a line through free hills is.
+
+    With hills alone, independent at the epochs and far from them, prediction is
+    regression: roll**2 (1 + 1/n + (t - <t>)**2 / sum (t_i - <t>)**2).
+    """
+    hills = law(pull=0.0, roll_length=1e-3)
+    times = hills.times
+    _, covariance = law(pull=0.0).predict(times)
+    np.testing.assert_allclose(covariance, 0.0, atol=1e-3)
+    _, covariance = hills.predict(np.array([3.0]))
+    off = times - times.mean()
+    spread = 1.0 + 1.0 / 4.0 + (3.0 - times.mean()) ** 2 / (off**2).sum()
+    assert covariance[0, 0] == pytest.approx(0.7**2 * spread, rel=1e-3)
+
+
 def test_leaving_one_out_by_the_precision():
     """[P x]_k / P_kk is x_k less its prediction from the others, and 1 / P_kk is
     the variance: prediction by kriging without epoch k, done in full.

@@ -9,7 +9,7 @@ from latelight.motion.settings import MotionSettings
 from latelight.motion.tracks._kernels import lit_knots, lit_ridge
 from latelight.motion.tracks.build import build_tracks
 from latelight.motion.tracks.lines import distance_between, lengthened
-from latelight.motion.tracks.link import group_seeds
+from latelight.motion.tracks.link import explains, group_seeds
 from latelight.motion.tracks.lobe import Lobe
 from latelight.motion.tracks.settings import TrackSettings
 from latelight.records import ArcTrace
@@ -93,6 +93,8 @@ def test_arc_at_the_other_epoch_of_its_pair_is_absorbed(ridge_series, rng):
     )
     (track,) = build(series, [best, astray])
     assert len(track.seeds) == 2
+    assert explains(track, astray, series)
+    assert not explains(track, replace(astray, origin="stack"), series)
 
 
 def test_crossing_ridges_stay_two(ridge_series, rng):

@@ -13,6 +13,14 @@ __all__ = ["lit_knots", "lit_ridge", "path_log_p", "strip_sums"]
 
 
 @njit(nogil=True, cache=True)
+def _between(image: PixelArray, row: int, col: int, fy: float, fx: float) -> float:
+    """Return an image between four pixels, ``fy, fx`` from the first."""
+    upper = (1.0 - fx) * image[row, col] + fx * image[row, col + 1]
+    lower = (1.0 - fx) * image[row + 1, col] + fx * image[row + 1, col + 1]
+    return (1.0 - fy) * upper + fy * lower
+
+
+@njit(nogil=True, cache=True)
 def strip_sums(
     pixels: PixelArray,
     variance: PixelArray,
@@ -72,20 +80,10 @@ def strip_sums(
                     | mask[i, row + 1, col + 1]
                 ):
                     continue
-                upper = (1.0 - fx) * variance[i, row, col] + fx * variance[
-                    i, row, col + 1
-                ]
-                lower = (1.0 - fx) * variance[i, row + 1, col] + fx * variance[
-                    i, row + 1, col + 1
-                ]
-                v = (1.0 - fy) * upper + fy * lower
+                v = _between(variance[i], row, col, fy, fx)
                 if not v > 0.0:
                     continue
-                upper = (1.0 - fx) * pixels[i, row, col] + fx * pixels[i, row, col + 1]
-                lower = (1.0 - fx) * pixels[i, row + 1, col] + fx * pixels[
-                    i, row + 1, col + 1
-                ]
-                d[i] = (1.0 - fy) * upper + fy * lower
+                d[i] = _between(pixels[i], row, col, fy, fx)
                 w[i] = 1.0 / (v * excess[i])
                 total += w[i]
                 mean += w[i] * d[i]
@@ -101,6 +99,20 @@ def strip_sums(
                 omega[b, k, i, i] += w[i]
                 for j in range(n):
                     omega[b, k, i, j] -= w[i] * w[j] / total
+
+
+@njit(nogil=True, cache=True)
+def _height_free(r: FloatArray, g: FloatArray, scatter: float) -> float:
+    """Return ln p of products r and g of a ridge, its heights integrated out."""
+    norm, response = g.sum(), r.sum()
+    if norm <= 0.0 or response <= 0.0:
+        return 0.0
+    height = response / norm
+    spread = (scatter * height) ** 2
+    off = r - height * g.sum(axis=1)
+    inner = np.eye(r.size) + spread * g
+    gain = 0.5 * spread * (off @ np.linalg.solve(inner, off))
+    return gain + 0.5 * height * response - 0.5 * np.log(np.linalg.det(inner))
 
 
 @njit(nogil=True, cache=True)
@@ -166,16 +178,7 @@ def path_log_p(
                     for u in range(low, high):
                         g[i, j] += lobes[at[i], u] * omega[u, i, j] * lobes[at[j], u]
                     g[j, i] = g[i, j]
-            norm = g.sum()
-            if norm <= 0.0 or r.sum() <= 0.0:
-                continue
-            height = r.sum() / norm
-            spread = (scatter * height) ** 2
-            off = r - height * g.sum(axis=1)
-            inner = np.eye(n) + spread * g
-            gain = 0.5 * spread * (off @ np.linalg.solve(inner, off))
-            gain += 0.5 * height * r.sum()
-            out[a, b] = gain - 0.5 * np.log(np.linalg.det(inner))
+            out[a, b] = _height_free(r, g, scatter)
     return out
 
 

@@ -6,7 +6,6 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from latelight.motion.settings import MotionSettings
 from latelight.motion.tracks.crest import find_crest
 from latelight.motion.tracks.follow import DAYS_PER_YEAR, Followed
 from latelight.motion.tracks.joint import JointFit
@@ -17,6 +16,7 @@ from latelight.motion.tracks.points import (
     reduced_chi2,
     single_places,
 )
+from latelight.motion.tracks.settings import TrackSettings
 from latelight.records import (
     BoolArray,
     EpochSeries,
@@ -117,7 +117,7 @@ def assemble(
     seeds: tuple[TrackSeed, ...],
     followed: Followed,
     *,
-    motion: MotionSettings,
+    settings: TrackSettings,
 ) -> Track:
     """Put a followed ridge into the record; its verdict is still ``"track"``.
 
@@ -129,16 +129,13 @@ def assemble(
         What it was found from, that with which it was followed first.
     followed : Followed
         The ridge.
-    motion : MotionSettings
-        Texture and relief of dust.
+    settings : TrackSettings
+        What dust does to direction and place.
     """
-    fit, lobe = followed.fit, followed.fit.ridge.lobe
-    n = len(series)
-    length = max(followed.light.length, 8.0)
-    patches = max(length / motion.texture_length_px, 1.0)
+    fit = followed.fit
     drift = drift_of(fit, followed.law, usable_epochs(followed))
     crest, crest_err = find_crest(followed.sums, fit, drift.place)
-    crest_err = float(np.hypot(crest_err, motion.texture * lobe.full_width))
+    crest_err = float(np.hypot(crest_err, settings.crest * fit.ridge.lobe.full_width))
     sense = 1.0 if drift.speed >= 0.0 else -1.0
 
     ridge = drift.place + crest
@@ -146,16 +143,15 @@ def assemble(
     if sense < 0.0:
         trace = flipped(trace)
     middle = trace.x.size // 2
-    slope_err = float(np.sqrt(fit.covariance[n + 2, n + 2]))
-    bent = np.hypot(followed.law.pull, motion.relief_px / np.sqrt(patches))
-    # A line through evenly spread points, each off by so much.
-    turn_err = np.hypot(slope_err, np.sqrt(12.0) * bent / length)
     covariance = drift.covariance.copy()
     # The crest of an unknown light curve lies off the front at all times alike.
     covariance[0, 0] += crest_err**2
+    n = followed.times.size
+    slope_err = np.degrees(np.sqrt(fit.covariance[n + 2, n + 2]))
     width, width_err = _width(fit)
-    offsets = sense * (followed.sums.offsets - ridge)
-    profiles = position_time(followed.sums, fit)
+    change_err = (
+        float(np.sqrt(covariance[2, 2])) if np.isfinite(drift.change) else np.nan
+    )
     order = slice(None) if sense > 0.0 else slice(None, None, -1)
     return Track(
         trace=trace,
@@ -163,24 +159,23 @@ def assemble(
         y=float(trace.y[middle]),
         mjd=float(seeds[0].mjd + DAYS_PER_YEAR * drift.time),
         direction_angle=float(trace.normal_angle[middle] % 360.0),
-        direction_angle_err=float(np.degrees(np.arctan(turn_err))),
+        direction_angle_err=float(np.hypot(slope_err, settings.turn_deg)),
         speed_px_yr=abs(drift.speed),
         speed_err_px_yr=float(np.sqrt(covariance[1, 1])),
         change_px_yr2=sense * drift.change,
-        change_err_px_yr2=float(np.sqrt(covariance[2, 2]))
-        if np.isfinite(drift.change)
-        else float("nan"),
+        change_err_px_yr2=change_err,
         place_err_px=float(np.sqrt(covariance[0, 0])),
         covariance=covariance,
         snr=float(np.sqrt(max(fit.gain - fit.freedom, 0.0))),
         length_px=followed.light.length,
         width_px=width,
         width_err_px=width_err,
-        sense_odds=followed.sense_odds,
+        # A fit that turned round has left what the odds were of.
+        sense_odds=followed.sense_odds if sense > 0.0 else 0.0,
         chi2=reduced_chi2(followed.sums, fit),
         points=_points(series, followed, drift.place, sense),
-        profile_offsets=offsets[order].copy(),
-        profiles=profiles[:, order].copy(),
+        profile_offsets=sense * (followed.sums.offsets[order] - ridge),
+        profiles=position_time(followed.sums, fit)[:, order].copy(),
         seeds=seeds,
         verdict="track",
     )

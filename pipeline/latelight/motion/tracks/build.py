@@ -114,13 +114,16 @@ class _Builder:
                 left.append(seed)
         return tuple(left)
 
-    def best_track(self, group: tuple[TrackSeed, ...]) -> Track:
+    def best_track(
+        self, group: tuple[TrackSeed, ...], series: EpochSeries | None = None
+    ) -> Track:
         """Follow the seeds of one arc, the best first, until one gives a track."""
+        series = self.series if series is None else series
         tries = sorted(group, key=lambda seed: not np.isfinite(seed.speed_px_yr))
         found: list[Track] = []
         for seed in tries[:_MOST_TRIES]:
             others = tuple(other for other in group if other is not seed)
-            found.append(self._track((seed, *others)))
+            found.append(self._track((seed, *others), series))
             if found[-1].verdict == "track":
                 break
         return min(found, key=_rank)
@@ -137,16 +140,13 @@ class _Builder:
             ]
             if track.verdict != "track" and is_moving(track) and others:
                 series = without_light(self.series, others)
-                again = self._track(track.seeds, series)
+                again = self.best_track(track.seeds, series)
                 track = again if again.verdict == "track" else track
             out.append(track)
         return out
 
-    def _track(
-        self, seeds: tuple[TrackSeed, ...], series: EpochSeries | None = None
-    ) -> Track:
+    def _track(self, seeds: tuple[TrackSeed, ...], series: EpochSeries) -> Track:
         """Follow the first of some seeds; whatever fails, the others go on."""
-        series = self.series if series is None else series
         try:
             followed = follow_seed(
                 series,
@@ -155,7 +155,7 @@ class _Builder:
                 settings=self.settings,
                 motion=self.motion,
             )
-            track = assemble(series, seeds, followed, motion=self.motion)
+            track = assemble(series, seeds, followed, settings=self.settings)
             case = Case(track, followed, series, self.settings)
             return replace(track, verdict=verdict_of(case))
         except (ValueError, np.linalg.LinAlgError) as error:

@@ -39,6 +39,8 @@ _ROUNDS = 3
 # and carried on by so many before that.
 _TRIM, _CARRIED_ON = 0.65, 0.25
 _SHORTEST_PX = 16.0
+# Below this significance a ridge is not worth another round.
+_HOPELESS = 3.0
 # Trial speeds go up to so many times that of the seed.
 _FASTER = 2.0
 _TRIAL_TURNS = np.linspace(-1.0, 1.0, 11)
@@ -191,6 +193,8 @@ class _Follower:
             ridge = fit.ridge
             speed = float(np.polyfit(self._times, ridge.places, 1)[0])
             length = max(light.length, 8.0)
+            if fit.gain - fit.freedom < _HOPELESS**2:
+                break
             if number + 1 < _ROUNDS:
                 fan_at_trace = ridge.turn[2] * float(ridge.places.mean())
                 trace = _corrected(trace, ridge.turn, fan_at_trace, light)

@@ -93,11 +93,20 @@ def moved(trace: ArcTrace, angle: float, distance: float) -> ArcTrace:
     )
 
 
-def distance_between(one: ArcTrace, other: ArcTrace) -> float:
+def distance_between(
+    one: ArcTrace, other: ArcTrace, *, carried_on: float = 0.2
+) -> float:
     """Return how far two ridges are apart where they run side by side, pixels.
 
-    The median distance of the points of the shorter one from the longer one, which
-    is carried on at both ends by a fifth; infinite when they cross.
+    The median distance of the points of the shorter one from the longer one;
+    infinite when they cross.
+
+    Parameters
+    ----------
+    one, other : ArcTrace
+        The ridges.
+    carried_on : float
+        By how much of its length the longer one is carried on at both ends.
     """
     short, long = (one, other) if one.x.size <= other.x.size else (other, one)
     turn = float(
@@ -111,7 +120,7 @@ def distance_between(one: ArcTrace, other: ArcTrace) -> float:
     )
     if abs(turn) > 2.0 * 30.0:
         return float("inf")
-    rest = lengthened(long, 0.2 * long.x.size)
+    rest = lengthened(long, carried_on * long.x.size)
     step = max(1, short.x.size // 24)
     return float(np.median(_nearest(short.x[::step], short.y[::step], rest)))
 

@@ -17,6 +17,8 @@ _NEAR_WIDTHS = 0.6
 # Error of a speed measured in one pair, and how far a seed is trusted to carry.
 _SPEED_ERR = 0.25
 _FARTHEST_WIDTHS = 3.0
+# A piece that carries a ridge on by less than this part of it is of the same front.
+_SAME_FRONT = 0.4
 
 
 def group_seeds(seeds: Sequence[TrackSeed]) -> list[tuple[TrackSeed, ...]]:
@@ -107,7 +109,8 @@ def common_light(one: Track, other: Track, series: EpochSeries) -> float:
         if not light > 0.0:
             continue
         total += light**2
-        gap = distance_between(line_at(one, point.mjd), line_at(other, point.mjd))
+        lines = line_at(one, point.mjd), line_at(other, point.mjd)
+        gap = distance_between(*lines, carried_on=_SAME_FRONT)
         if gap <= _NEAR_WIDTHS * width:
             shared += light**2
     return shared / total if total > 0.0 else 0.0

@@ -72,3 +72,18 @@ class TrackSettings(StageSettings):
         le=1000.0,
         description="Distance an echo moves over which that changes [pixel].",
     )
+    turn_deg: float = Field(
+        0.37,
+        ge=0.0,
+        le=45.0,
+        description="How far the hills of a dust sheet turn the line through an echo "
+        "off its mean normal, 1 sigma [degree].",
+    )
+    crest: float = Field(
+        0.045,
+        ge=0.0,
+        le=1.0,
+        description="How far the brightest line of an echo lies off its front's place "
+        "for patchy dust and light curves of any shape, 1 sigma as a fraction of its "
+        "width.",
+    )
