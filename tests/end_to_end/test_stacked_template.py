@@ -104,12 +104,6 @@ def test_no_speed_and_no_sense_are_claimed_beside_a_stack_of_both_sides(done):
             assert (row.sense_odds == 0.0) == (0 < epoch < EPOCHS - 1)
 
 
-def test_what_only_other_epochs_have_is_set_aside(done):
-    kept = [arc for o in done for arc in o.findings.arcs if arc.verdict == "arc"]
-    assert kept
-    assert all(arc.sign > 0 for arc in kept)
-
-
 def test_epochs_make_a_series_minus_one_and_the_same_sky(done, field):
     """Echo by echo the mean over the epochs vanishes but for what was left out."""
     (group,) = group_parts([outcome.part for outcome in done])

@@ -10,6 +10,7 @@ from latelight.config import NightConfig
 from latelight.frames.headers import FrameHeader
 from latelight.night.findings import _motions
 from latelight.night.pairing import Pair, StackPair, StackTemplate
+from latelight.night.stacked import _at_science
 
 CONFIG = NightConfig.model_validate({"night": {"frames": ("a.fits",), "output": "o"}})
 
@@ -73,9 +74,38 @@ def test_no_sense_is_told_when_the_stack_was_on_both_sides(ridge):
 
 
 def test_a_ridge_of_the_stack_alone_is_set_aside(ridge):
+    """The early lobe alone, the other half of the difference emptied."""
     difference, arc = ridge
-    (judged,), moving = _motions(
-        difference, (replace(arc, sign=-1),), against(59000.0, 59500.0), CONFIG
+    y, x = np.mgrid[:220, :220] - 109.5
+    ahead = x * np.cos(np.radians(25.0)) + y * np.sin(np.radians(25.0)) > 1.0
+    rng = np.random.default_rng(5)
+    noise = np.sqrt(difference.variance) * rng.normal(size=ahead.shape)
+    alone = replace(
+        difference,
+        pixels=np.where(ahead, noise, difference.pixels).astype(np.float32),
     )
-    assert judged.verdict == "of the stack: brighter in other epochs"
+    way = np.array([np.cos(np.radians(25.0)), np.sin(np.radians(25.0))]) * -12.0
+    trace = replace(arc.trace, x=arc.trace.x + way[0], y=arc.trace.y + way[1])
+    early = replace(
+        arc, sign=-1, trace=trace, x=arc.x + way[0], y=arc.y + way[1], shift_px=np.nan
+    )
+    (judged,), moving = _motions(alone, (early,), against(59000.0, 59500.0), CONFIG)
+    assert judged.verdict == "not measurable: only the stack shows it, in other epochs"
     assert not moving
+
+
+def test_a_ridge_whose_deeper_lobe_is_the_stacks_stays(ridge):
+    """Traced on the negative lobe, it is placed on the positive one."""
+    difference, arc = ridge
+    way = np.array([np.cos(np.radians(25.0)), np.sin(np.radians(25.0))]) * -12.0
+    trace = replace(arc.trace, x=arc.trace.x + way[0], y=arc.trace.y + way[1])
+    early = replace(arc, sign=-1, trace=trace, x=arc.x + way[0], y=arc.y + way[1])
+    motion = motion_of((difference, (early,)), against(59000.0, 59500.0))
+    # The trace is off by a little; the lobes are 12 px apart.
+    assert np.hypot(motion.x - arc.x, motion.y - arc.y) < 4.0
+    moved = _at_science(early, motion)
+    assert moved.sign == 1
+    assert (
+        np.hypot(moved.trace.x - arc.trace.x, moved.trace.y - arc.trace.y).max() < 4.0
+    )
+    assert _at_science(arc, motion) is arc

@@ -174,8 +174,6 @@ def _motions(
     moving: dict[int, Motion] = {}
     for index, arc in enumerate(arcs):
         verdict = arc.verdict
-        if verdict == "arc" and isinstance(pair, StackPair) and arc.sign < 0:
-            verdict = "of the stack: brighter in other epochs"
         if verdict == "arc":
             try:
                 moving[index] = _motion(difference, arc, pair, config)
@@ -192,11 +190,19 @@ def _motion(
 
     A stack is not of one moment: what it has of the arc tells no shift, and nothing
     of the sense when it was taken before as well as after.
+
+    Raises
+    ------
+    ValueError
+        If it cannot be measured, or the stack alone shows it.
     """
     motion = measure_motion(
         difference, arc, later=pair.later or "science", settings=config.motion
     )
     if isinstance(pair, StackPair):
+        if arc.sign < 0 and motion.lobes == 1:
+            msg = "only the stack shows it, in other epochs"
+            raise ValueError(msg)
         motion = replace(motion, shift_px=np.nan, shift_err_px=np.nan, lobes=1)
     return motion if pair.later else replace(motion, sense_odds=0.0)
 

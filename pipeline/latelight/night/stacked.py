@@ -24,7 +24,15 @@ from latelight.night.gathering import GridEpoch, gather, read_epochs
 from latelight.night.journal import Journal
 from latelight.night.pairing import Stack
 from latelight.night.series import Epoch, Grid, SeriesPart, seed_on_grid, write_part
-from latelight.records import Difference, Plane, Source, StarList
+from latelight.records import (
+    Arc,
+    ArcTrace,
+    Difference,
+    Motion,
+    Plane,
+    Source,
+    StarList,
+)
 from latelight.stacking.combine import plane_weight
 from latelight.subtraction.difference import subtract
 
@@ -197,7 +205,7 @@ def _part(
     )
     seeds = tuple(
         seed_on_grid(
-            moving.arc,
+            _at_science(moving.arc, moving.motion),
             moving.motion,
             index=moving.index,
             pair=pair.name,
@@ -218,3 +226,22 @@ def _part(
         seeds=seeds,
         noise_ratio=difference.noise_ratio,
     )
+
+
+def _at_science(arc: Arc, motion: Motion) -> Arc:
+    """Return an arc that follows the ridge of the science epoch.
+
+    Where the stack's lobe is the deeper, the trace runs along that one.
+    """
+    if arc.sign > 0:
+        return arc
+    trace = arc.trace
+    normals = np.radians(trace.normal_angle)
+    middle = normals[trace.x.size // 2]
+    way = (motion.x - arc.x) * np.cos(middle) + (motion.y - arc.y) * np.sin(middle)
+    moved = ArcTrace(
+        trace.x + way * np.cos(normals),
+        trace.y + way * np.sin(normals),
+        trace.normal_angle,
+    )
+    return replace(arc, trace=moved, sign=1)
