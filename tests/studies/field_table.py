@@ -10,7 +10,9 @@ clock unless given, and is printed.  Exit code 1 when a line misses its target.
 """
 
 import argparse
+import contextlib
 import dataclasses
+import io
 import sys
 import tempfile
 import time
@@ -92,7 +94,8 @@ def run_night(folder, name, paths, template):
         SETTINGS.format(frames=frames, output=output, template=template)
     )
     start = time.perf_counter()
-    code = latelight(["run", str(settings), "--quiet"])
+    with contextlib.redirect_stdout(io.StringIO()):
+        code = latelight(["run", str(settings), "--quiet"])
     if code != 0:
         msg = f"the run of {settings} ended with {code}"
         raise RuntimeError(msg)
