@@ -30,6 +30,7 @@ __all__ = ["chance_of_score"]
 # Draw skies in lots, and stop as soon as the answer is clear.
 _LOT = 8
 _CLEAR_DEX = 5.0
+_ANCHORS = (0.5, 0.75)
 _MAX_ARCS, _MOST_PAIRS = 300, 1000
 
 
@@ -63,9 +64,10 @@ def chance_of_score(
     -----
     At any one place the likelihood ratio of random directions has the mean 1, so the
     chance that it exceeds 10**x is at most 10**-x (Markov); the best of many places has
-    a Gumbel law of that slope, whose median is measured.  So small chances need few
-    skies, and are overstated rather than understated (the measured tail is steeper).
-    The median hardly depends on the number of arcs: of many, a sample is drawn.
+    a Gumbel law of that slope, whose median and quartile are measured.  So small
+    chances need few skies, and are overstated rather than understated (the measured
+    tail is steeper).  The law hardly depends on the number of arcs: of many, a sample
+    is drawn.
     """
     some = _sample(likelihood, rng)
     pairs = choose_pairs(some.arcs, rng, most=_MOST_PAIRS)
@@ -79,7 +81,7 @@ def chance_of_score(
             before = refined(sky, known, pairs)
             after = add_origin(sky, before, pairs)
             best.append((after.value - before.value) / np.log(10.0))
-        chance = _gumbel_tail(score - float(np.median(best)))
+        chance = _gumbel_tail(score, best)
         hopeless = chance > min(0.3, 10.0 * level)
         certain = score > max(best) + _CLEAR_DEX
         if hopeless or certain:
@@ -96,8 +98,17 @@ def _sample(likelihood: OriginLikelihood, rng: np.random.Generator) -> OriginLik
     return likelihood.of(rows)
 
 
-def _gumbel_tail(above_median: float) -> float:
-    return float(-np.expm1(-np.log(2.0) * 10.0 ** min(-above_median, 300.0)))
+def _gumbel_tail(score: float, best: Sequence[float]) -> float:
+    """Return the chance of a score, from the best scores of random skies.
+
+    The law is anchored at the median or at the quartile, whichever is less favourable:
+    of few arcs, circles often do not cross at all.
+    """
+    chances = [
+        -np.expm1(np.log(share) * 10.0 ** min(place - score, 300.0))
+        for share, place in zip(_ANCHORS, np.quantile(best, _ANCHORS), strict=True)
+    ]
+    return float(max(chances))
 
 
 def _drawer(

@@ -25,7 +25,7 @@ _OPEN_DROP = 0.5 * CHI2_95
 # So far away, degrees, arcs of any field are parallel.
 _FAR_DEG = 75.0
 # Points a side of the grid, for few and for many arcs, whose posterior is smooth.
-_FINE, _COARSE, _MANY_ARCS = 41, 17, 1000
+_FINE, _COARSE, _MANY_ARCS = 41, 17, 400
 _REACH_SIGMA = 4.0
 _ROUNDS = 7
 _RIDGE_DISTANCES = np.geomspace(0.02, _FAR_DEG, 60)

@@ -24,7 +24,7 @@ WIDE_DEG = 20.0
 _LEAST_DEG, _MOST_DEG = 0.25, 100.0
 _MARGIN = 1.25
 # Places times arcs that are asked for at most: seconds.
-_EFFORT = 1.2e8
+_EFFORT = 8e7
 _SIDES = (96, 400)
 _NSIDES = (64, 32, 16)
 
