@@ -24,7 +24,7 @@ class VelocityStackSettings(StageSettings):
         description="Fewest epochs of a field with which to search.",
     )
     threshold: float = Field(
-        6.8,
+        6.7,
         ge=4.0,
         le=100.0,
         description="Least significance of a ridge in all epochs together [sigma].",
