@@ -1,3 +1,3 @@
 """Find light echoes in pairs of survey frames."""
 
-__version__ = "0.1.0"
+__version__ = "0.2.0"
