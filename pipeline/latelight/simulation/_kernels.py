@@ -70,8 +70,8 @@ def light_sheet(
                 out[row, col] = 0.0
                 continue
             t0, t1, t2 = early[row, col], middle[row, col], late[row, col]
-            # Delay grows steadily with depth: no light before t0, none after t2.
-            if t0 <= 0.0 or t2 >= top * step:
+            # The delay changes steadily with depth: the faces are the extremes.
+            if max(t0, t2) <= 0.0 or min(t0, t2) >= top * step:
                 out[row, col] = 0.0
                 continue
             slope, bend = 0.5 * (t2 - t0), 0.5 * (t2 + t0) - t1

@@ -156,8 +156,12 @@ def nuisance_rows(truth: FrameTruth, **labels: str) -> list[Row]:
 
 
 def source_rows(sources: Iterable[Source]) -> list[Row]:
-    """Return one row a source, with the columns of a source list."""
-    return [asdict(source) for source in sources]
+    """Return one row a source, with those columns of a source list that are known."""
+    rows = [asdict(source) for source in sources]
+    known = {name for row in rows for name, value in row.items() if value is not None}
+    return [
+        {name: value for name, value in row.items() if name in known} for row in rows
+    ]
 
 
 def _as_table(rows: list[Row]) -> Table:
