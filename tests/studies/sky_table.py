@@ -136,7 +136,7 @@ def drawn_sky(number, kind, seed, *_):
 
     set_threads(1)
     rng = np.random.default_rng(seed)
-    events, ra, dec, pa, err = drawn_arcs(rng, kind, cauchy=bool(number % 2))
+    events, ra, dec, pa, err, speed = drawn_arcs(rng, kind, cauchy=bool(number % 2))
     settings = OriginSettings()
     start = time.perf_counter()
     found = find_origins(
@@ -146,6 +146,8 @@ def drawn_sky(number, kind, seed, *_):
             pa,
             pa_err=err,
             sense_odds=rng.exponential(5.0, len(pa)),
+            speed=speed,
+            speed_err=0.06 * speed,
             correlation_arcmin=settings.tilt_correlation_arcmin,
         ),
         settings=settings,
@@ -162,9 +164,11 @@ def drawn_sky(number, kind, seed, *_):
 def drawn_arcs(rng, kind, *, cauchy):
     """Draw six fields of 3-5 echoes around events, most of them found, and false arcs.
 
-    Returns the events and the places, directions and errors of the arcs, degrees.
+    Returns the events, and the places, directions, their errors (degrees) and the
+    speeds (arcsec/yr) of the arcs.
     """
     from latelight.simulation.layouts import random_layout
+    from latelight.simulation.outbursts import flat_speed
     from latelight.sky import offset_position, position_angle
 
     layout = random_layout(rng, fields=6, two=kind == "two", epochs=2, half_deg=0.045)
@@ -179,21 +183,27 @@ def drawn_arcs(rng, kind, *, cauchy):
         for _ in range(rng.integers(3, 6)):
             ra, dec = place(field)
             # Each of two events lights most echoes in every other field.
-            event = events[(field + (rng.random() < 0.35)) % len(events)]
+            lit_by = (field + (rng.random() < 0.35)) % len(events)
+            event, source = events[lit_by], layout.outbursts[lit_by].source
             turn = TURN_DEG * rng.normal()
             if cauchy:
                 turn = HALF_DEG * np.tan(np.pi * (rng.random() - 0.5))
             pa = float(position_angle(ra, dec, *event)) + 180.0 + turn
             if kind == "scattered":
                 pa = rng.uniform(0.0, 360.0)
+            speed = flat_speed(source, ra, dec, layout.middle)
+            if kind == "scattered":
+                speed = 10.0 ** rng.uniform(0.3, 1.3)
             if rng.random() < FOUND:
-                arcs.append((ra, dec, pa))
+                spread = 10.0 ** (rng.uniform(-0.2, 0.2) + 0.026 * rng.normal())
+                arcs.append((ra, dec, pa, speed * spread))
     for _ in range(rng.poisson(FALSE_ARCS)):
-        arcs.append((*place(rng.integers(6)), rng.uniform(0.0, 360.0)))
-    ra, dec, pa = np.array(arcs, dtype=float).reshape(-1, 3).T
+        pa, speed = rng.uniform(0.0, 360.0), 10.0 ** rng.uniform(0.3, 1.3)
+        arcs.append((*place(rng.integers(6)), pa, speed))
+    ra, dec, pa, speed = np.array(arcs, dtype=float).reshape(-1, 4).T
     err = rng.uniform(1.0, 4.0, len(pa))
     lit = events if kind in ("one", "two") else []
-    return lit, ra, dec, (pa + err * rng.normal(size=len(pa))) % 360.0, err
+    return lit, ra, dec, (pa + err * rng.normal(size=len(pa))) % 360.0, err, speed
 
 
 def tell(outcome):

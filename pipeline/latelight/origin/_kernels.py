@@ -28,7 +28,7 @@ class Asked(NamedTuple):
     weight : float64 array, shape (n,)
         Share of an independent arc.
     per_base : float64 array, shape (n,)
-        One over the likelihood ratio without the origin asked for.
+        Gain from elsewhere over the likelihood ratio without the origin asked for.
     ratio : float64 array, shape (n_classes, n_nodes, n_laws)
         Likelihood ratio by pseudo angle of the turn.
     prior : float64 array, shape (n_laws,)

@@ -3,7 +3,9 @@
 One origin after the other is found on what the others leave unexplained, claimed when
 random directions hardly ever score as high, and refined beside the others.  The score
 of an origin is the log10 likelihood ratio of the arcs with it and without it, averaged
-over the unknown law of the tilts, the share of the arcs it lit and their reach.
+over the unknown law of the tilts, the share of the arcs it lit and their reach.  It is
+of directions alone; where there are several origins, speeds help to say which arc is
+whose.
 
 Listed sources that have too few arcs for an origin of their own anywhere on the sky are
 asked last: their place is known, so the bar is lower.
@@ -13,6 +15,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
+from itertools import combinations
 
 import numpy as np
 
@@ -24,9 +27,14 @@ from latelight.origin.joint_mixture import (
     Component,
     Mixture,
     add_origin,
+    beside_others,
+    first_origin,
     fit_component,
+    membership,
     mixture_base,
-    without,
+    refined,
+    valued,
+    with_speeds,
 )
 from latelight.origin.joint_region import Ellipse, Ridge, error_region
 from latelight.origin.joint_search import PairList, choose_pairs
@@ -38,6 +46,8 @@ __all__ = ["CHI2_99", "JointOrigin", "JointOrigins", "Unclaimed", "find_origins"
 SEED = 20270101
 # Chi-square of two degrees of freedom that holds 99 %.
 CHI2_99 = 9.210340371976184
+_CHI2_68 = 2.278868566376729
+_DEX = float(np.log(10.0))
 
 
 @dataclass(frozen=True, slots=True)
@@ -181,34 +191,78 @@ class _Search:
 
         Returns those claimed, and the next one that is not.
         """
-        mixture, claimed = Mixture(), _Claimed()
+        claimed = _Claimed()
         while True:
-            after = add_origin(self.likelihood, mixture, self.pairs, extra=self.places)
-            gain = (after.value - mixture.value) / np.log(10.0)
-            if len(after.components) == len(mixture.components) or gain <= 0.0:
-                return claimed, None
-            level = self.settings.chance_level
-            if claimed.chances:
-                level = self.settings.further_chance_level
-            chance = chance_of_score(
-                self.likelihood,
-                mixture.components,
-                gain,
-                rng=self.rng,
-                skies=self.settings.random_skies,
-                level=level,
-            )
-            regions = self._regions(after.components)
-            if (
-                chance > level
-                or len(claimed.chances) == self.settings.max_origins
-                or not _separate(after.components, regions)
-            ):
-                last = after.components[-1].direction
-                return claimed, Unclaimed(last, gain, chance, regions[-1])
-            mixture = after
-            chances = (*claimed.chances, chance)
-            claimed = _Claimed(after.components, regions, chances)
+            found, rest = self._one_more(claimed)
+            if found is None and not claimed.chances and rest is not None:
+                # Of two events neither may stand out alone.
+                found = self._two_at_once()
+            if found is None:
+                return claimed, rest
+            claimed = found
+
+    def _one_more(self, claimed: _Claimed) -> tuple[_Claimed | None, Unclaimed | None]:
+        """Return the origins with one more, or the one more that is not claimed."""
+        before = self._with_speeds(claimed.components)
+        after, gain = self._next(before)
+        if len(after) == len(claimed.components) or gain <= 0.0:
+            return None, None
+        level = self.settings.chance_level
+        if claimed.chances:
+            level = self.settings.further_chance_level
+        chance = self._chance(before, gain, level=level)
+        regions = self._regions(after)
+        full = len(claimed.chances) >= self.settings.max_origins
+        if chance > level or full or not _separate(after, regions):
+            return None, Unclaimed(after[-1].direction, gain, chance, regions[-1])
+        return _Claimed(after, regions, (*claimed.chances, chance)), None
+
+    def _two_at_once(self) -> _Claimed | None:
+        """Return two origins that together are claimed, or None."""
+        pair = Mixture()
+        for _ in range(2):
+            pair = add_origin(self.likelihood, pair, self.pairs, extra=self.places)
+        gain = pair.value / _DEX
+        if len(pair.components) < 2 or self.settings.max_origins < 2 or gain <= 0.0:
+            return None
+        # A second question about the same arcs: the stricter level.
+        level = 0.5 * self.settings.chance_level
+        chance = self._chance(Mixture(), gain, level=level, more=2)
+        regions = self._regions(pair.components)
+        if chance > level or not _separate(pair.components, regions):
+            return None
+        return _Claimed(pair.components, regions, (chance, chance))
+
+    def _chance(
+        self, before: Mixture, gain: float, *, level: float, more: int = 1
+    ) -> float:
+        return chance_of_score(
+            self.likelihood,
+            before.components,
+            gain,
+            rng=self.rng,
+            skies=self.settings.random_skies,
+            level=level,
+            more=more,
+        )
+
+    def _with_speeds(self, components: tuple[Component, ...]) -> Mixture:
+        """Return the origins claimed, fitted with speeds to be compared with more."""
+        if not components:
+            return Mixture()
+        asked = tuple(
+            with_speeds(beside_others(self.likelihood, components, index), one)
+            for index, one in enumerate(components)
+        )
+        return refined(self.likelihood, valued(self.likelihood, asked), self.pairs)
+
+    def _next(self, before: Mixture) -> tuple[tuple[Component, ...], float]:
+        """Return the origins with one more, and what it gains, dex."""
+        if not before.components:
+            first = first_origin(self.likelihood, self.pairs, extra=self.places)
+            return ((), 0.0) if first is None else ((first[0],), first[1] / _DEX)
+        after = add_origin(self.likelihood, before, self.pairs, extra=self.places)
+        return after.components, (after.value - before.value) / _DEX
 
     def listed(self, claimed: _Claimed, sources: Sequence[Source]) -> list[JointOrigin]:
         """Return listed sources that explain arcs which no origin found explains.
@@ -224,7 +278,7 @@ class _Search:
         )
         while open_.any():
             beside = self.likelihood.beside(mixture_base(self.likelihood, known))
-            scores = beside.marginal(self.places) / np.log(10.0)
+            scores = beside.marginal(self.places) / _DEX
             best = int(np.argmax(np.where(open_, scores, -np.inf)))
             chance = min(1.0, len(sources) * 10.0 ** -float(scores[best]))
             if chance > self.settings.chance_level:
@@ -250,14 +304,17 @@ class _Search:
     ) -> JointOrigin:
         """Return a claimed origin with its arcs."""
         one = components[index]
-        beside = self._beside_others(components, index)
+        silent = tuple(replace(each, speeds=None) for each in components)
+        alone = beside_others(self.likelihood, silent, index)
         widths = law_widths(self.settings.direction_scatter_deg)
         return JointOrigin(
             region=region,
             direction=one.direction,
-            score=float(beside.marginal(one.direction[None])[0] / np.log(10.0)),
+            score=float(alone.marginal(one.direction[None])[0] / _DEX),
             chance=chance,
-            membership=_membership(beside, one),
+            membership=membership(
+                beside_others(self.likelihood, components, index), one
+            ),
             scatter_deg=float(one.law_weights @ widths),
             listed=listed,
         )
@@ -267,16 +324,10 @@ class _Search:
     ) -> tuple[Ellipse | Ridge, ...]:
         regions = []
         for index, one in enumerate(components):
-            beside = self._beside_others(components, index)
-            support = _membership(beside, one)
+            beside = beside_others(self.likelihood, components, index)
+            support = membership(beside, one)
             regions.append(error_region(beside, one.direction, support))
         return tuple(regions)
-
-    def _beside_others(
-        self, components: tuple[Component, ...], index: int
-    ) -> OriginLikelihood:
-        others = without(components, index)
-        return self.likelihood.beside(mixture_base(self.likelihood, others))
 
 
 def _holds(region: Ellipse | Ridge, source: Source) -> bool:
@@ -287,17 +338,13 @@ def _holds(region: Ellipse | Ridge, source: Source) -> bool:
 def _separate(
     components: tuple[Component, ...], regions: tuple[Ellipse | Ridge, ...]
 ) -> bool:
-    """Whether no origin lies within the 99 % region of another."""
-    for one, region in zip(components, regions, strict=True):
-        for other in components:
-            ra, dec = (float(v) for v in sky_of(other.direction))
-            near = isinstance(region, Ellipse) and region.chi2(ra, dec) < CHI2_99
-            if other is not one and near:
-                return False
+    """Whether no two origins lie within each other's 68 % region: one, split in two."""
+    places = [tuple(float(v) for v in sky_of(one.direction)) for one in components]
+    for first, second in combinations(range(len(components)), 2):
+        here, there = regions[first], regions[second]
+        if not (isinstance(here, Ellipse) and isinstance(there, Ellipse)):
+            continue
+        gap = max(here.chi2(*places[second]), there.chi2(*places[first]))
+        if gap < _CHI2_68:
+            return False
     return True
-
-
-def _membership(beside: OriginLikelihood, one: Component) -> FloatArray:
-    """Return the probability that each arc comes from an origin."""
-    lit = one.share * beside.arc_ratios(one.direction, one.law_weights, one.reach_deg)
-    return lit / (lit + (1.0 - one.share) * beside.base)

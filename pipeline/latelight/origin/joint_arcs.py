@@ -38,6 +38,8 @@ class MovingArcs:
         share their tilt.
     filament : int64 array, shape (n,)
         Group of neighbours to which it belongs.
+    log_speed, log_speed_err : float64 array, shape (n,)
+        Natural log of the speed in arcsec/yr and 1 sigma; NaN when unknown.
     """
 
     frames: FloatArray
@@ -45,6 +47,8 @@ class MovingArcs:
     wrong_sense: FloatArray
     weight: FloatArray
     filament: IntArray
+    log_speed: FloatArray
+    log_speed_err: FloatArray
 
     def __len__(self) -> int:
         return len(self.frames)
@@ -57,6 +61,8 @@ def moving_arcs(
     *,
     pa_err: ArrayLike,
     sense_odds: ArrayLike = np.inf,
+    speed: ArrayLike = np.nan,
+    speed_err: ArrayLike = np.nan,
     correlation_arcmin: float = 0.0,
 ) -> MovingArcs:
     """Gather arcs into arrays.
@@ -69,6 +75,8 @@ def moving_arcs(
         Position angles of the motions and 1 sigma, degrees; finite.
     sense_odds : array_like of float
         log10 of the odds that the sense of each motion is right, >= 0.
+    speed, speed_err : array_like of float
+        arcsec per Julian year and 1 sigma; NaN when unknown.
     correlation_arcmin : float
         Distance over which sheets share their tilt; 0 when all are independent.
 
@@ -99,7 +107,21 @@ def moving_arcs(
         wrong_sense=1.0 / (1.0 + 10.0 ** np.clip(odds, 0.0, 300.0)),
         weight=weight,
         filament=filament,
+        **_log_speeds(lon.shape, speed, speed_err),
     )
+
+
+def _log_speeds(
+    shape: tuple[int, ...], speed: ArrayLike, speed_err: ArrayLike
+) -> dict[str, FloatArray]:
+    value = np.broadcast_to(np.asarray(speed, float), shape)
+    error = np.broadcast_to(np.asarray(speed_err, float), shape)
+    known = np.isfinite(value) & (value > 0.0) & np.isfinite(error)
+    safe = np.where(known, value, 1.0)
+    return {
+        "log_speed": np.where(known, np.log(safe), np.nan),
+        "log_speed_err": np.where(known, error / safe, np.nan),
+    }
 
 
 def unit_vectors(ra: ArrayLike, dec: ArrayLike) -> FloatArray:

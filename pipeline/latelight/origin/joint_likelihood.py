@@ -37,11 +37,15 @@ class OriginLikelihood:
     base : float64 array, shape (n,)
         Likelihood ratio of each arc without the origin: 1 for random directions, more
         where another origin explains it.
+    gain : float64 array, shape (n,)
+        What else speaks for each arc to come from the origin: the likelihood ratio of
+        its speed, 1 when nothing does.
     """
 
     arcs: MovingArcs
     laws: DirectionLaws
     base: FloatArray
+    gain: FloatArray
 
     def marginal(self, points: FloatArray) -> FloatArray:
         """Return natural log likelihood ratios of origins, unknowns averaged over.
@@ -114,9 +118,13 @@ class OriginLikelihood:
         near = self.arcs.frames[:, 0] @ point >= np.cos(np.radians(reach_deg))
         return np.where(near, ratios, 0.0)
 
-    def beside(self, base: FloatArray) -> OriginLikelihood:
+    def beside(
+        self, base: FloatArray, gain: FloatArray | None = None
+    ) -> OriginLikelihood:
         """Return the same for arcs that other origins explain in part."""
-        return replace(self, base=base)
+        return replace(
+            self, base=base, gain=np.ones_like(base) if gain is None else gain
+        )
 
     def of(self, rows: IntArray) -> OriginLikelihood:
         """Return the likelihood of some of the arcs."""
@@ -127,9 +135,11 @@ class OriginLikelihood:
             wrong_sense=self.arcs.wrong_sense[rows],
             weight=self.arcs.weight[rows],
             filament=self.arcs.filament[rows],
+            log_speed=self.arcs.log_speed[rows],
+            log_speed_err=self.arcs.log_speed_err[rows],
         )
         laws = replace(self.laws, class_of=self.laws.class_of[rows])
-        return OriginLikelihood(arcs, laws, self.base[rows])
+        return OriginLikelihood(arcs, laws, self.base[rows], self.gain[rows])
 
     def _asked(self) -> Asked:
         order = np.argsort(self.arcs.weight, kind="stable")
@@ -137,7 +147,7 @@ class OriginLikelihood:
             frames=np.ascontiguousarray(self.arcs.frames[order]),
             class_of=self.laws.class_of[order],
             weight=self.arcs.weight[order],
-            per_base=1.0 / self.base[order],
+            per_base=(self.gain / self.base)[order],
             ratio=self.laws.ratio,
             prior=self.laws.prior,
             shares=SHARES,
@@ -147,4 +157,5 @@ class OriginLikelihood:
 
 def origin_likelihood(arcs: MovingArcs, laws: DirectionLaws) -> OriginLikelihood:
     """Return the likelihood of a first origin: all arcs unexplained so far."""
-    return OriginLikelihood(arcs, laws, np.ones(len(arcs)))
+    one = np.ones(len(arcs))
+    return OriginLikelihood(arcs, laws, one, one)

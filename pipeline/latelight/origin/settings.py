@@ -68,7 +68,7 @@ class OriginSettings(StageSettings):
         "accident, below which `latelight origins` claims it.",
     )
     further_chance_level: float = Field(
-        0.05,
+        0.03,
         gt=0.0,
         le=0.5,
         description="The same for a second and every further origin beside one that is "

@@ -166,14 +166,19 @@ def _moving(arcs: Sequence[SeenArc], settings: OriginSettings) -> MovingArcs:
         [arc.pa for arc in arcs],
         pa_err=[arc.pa_err for arc in arcs],
         sense_odds=[arc.sense_odds or 0.0 for arc in arcs],
+        speed=_known([arc.speed for arc in arcs]),
+        speed_err=_known([arc.speed_err for arc in arcs]),
         correlation_arcmin=settings.tilt_correlation_arcmin,
     )
 
 
+def _known(values: Sequence[float | None]) -> FloatArray:
+    return np.array([np.nan if v is None else v for v in values], dtype=float)
+
+
 def _motions(arcs: Sequence[SeenArc]) -> ArcMotions:
     def column(name: str) -> FloatArray:
-        values = (getattr(arc, name) for arc in arcs)
-        return np.array([np.nan if v is None else v for v in values], dtype=float)
+        return _known([getattr(arc, name) for arc in arcs])
 
     return ArcMotions(
         ra=column("ra"),
