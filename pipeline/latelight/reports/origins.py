@@ -29,12 +29,14 @@ from latelight.reports.origin_arcs import (
 )
 from latelight.reports.origin_map import make_map, map_bytes
 from latelight.reports.origin_picture import draw_origins
-from latelight.sky import position_angle, separation_deg
+from latelight.sky import offset_position, position_angle, separation_deg
 
 __all__ = ["OriginsResult", "trace_origins"]
 
 _FEW_ARCS = 4
 _DOUBTFUL_ODDS = 1.0
+# A map shows a ridge to so many times its least distance.
+_RIDGE_SHOWN = 1.5
 
 
 @dataclass(frozen=True, slots=True)
@@ -141,9 +143,7 @@ def _write(
     }
     if arc_rows:
         places = [joint.likelihood.arcs.frames[:, 0]]
-        places += [
-            unit_vectors([row.ra], [row.dec]) for row in rows if row.kind != "ridge"
-        ]
+        places += [_shown(origin)[None] for origin in joint.origins]
         sky_map = make_map(joint.likelihood, np.concatenate(places))
         made["origin_map.fits"] = map_bytes(sky_map)
         made["origins.png"] = draw_origins(sky_map, rows, arc_rows, sources)
@@ -154,6 +154,17 @@ def _write(
         for name in ("origin_map.fits", "origins.png"):
             (folder / name).unlink(missing_ok=True)
     return tuple(folder / name for name in made)
+
+
+def _shown(origin: JointOrigin) -> FloatArray:
+    """Return the place of an origin that a map must show; where a ridge begins."""
+    region = origin.region
+    if not isinstance(region, Ridge):
+        return origin.direction
+    reach = min(_RIDGE_SHOWN * region.near, region.far)
+    return unit_vectors(
+        *offset_position(region.from_ra, region.from_dec, region.pa, reach)
+    )
 
 
 # --- from rows to arrays and back --------------------------------------------
