@@ -14,7 +14,8 @@ along the motion otherwise than along the arc.  Arcs that can be found are nearl
 straight: their normal turns by some five degrees, 0.1 rad, from end to end.  So the
 speed is taken to vary by the fraction :data:`ROUGHNESS` (1 sigma) for every arc
 length that is moved: a prior of zero mean and ``ROUGHNESS * speed**2 / length`` for
-the change of speed (derived here).
+the change of speed (derived here).  A change that was fitted carries the dust in its
+own covariance already: the fit allows for hills of the sheet.
 """
 
 from __future__ import annotations
@@ -48,7 +49,8 @@ class MovingArc:
     speed : float
         At ``mjd``, arcsec per Julian year, > 0.
     change : float or None
-        Of the speed, arcsec per Julian year squared; None where it is not fitted.
+        Of the speed, arcsec per Julian year squared; None where it is not fitted.  Its
+        variance must allow for rolling dust.
     covariance : float64 array, shape (3, 3)
         Of (place along the motion, speed, change), in arcsec and Julian years; the
         last row and column are not used where the change is not fitted.
@@ -126,7 +128,8 @@ def predict(arc: MovingArc, mjd: float, *, roughness: float = ROUGHNESS) -> Fore
         The date, MJD; before the arc's own epoch too.
     roughness : float
         Relative change of the speed for one arc length moved, 1 sigma, >= 0; 0 for
-        dust without hills.
+        dust without hills.  For the direction, and for the speed where its change was
+        not fitted.
 
     Returns
     -------
@@ -140,10 +143,10 @@ def predict(arc: MovingArc, mjd: float, *, roughness: float = ROUGHNESS) -> Fore
 
     Notes
     -----
-    A fitted change of speed is combined with the prior of rolling dust.  Where none
-    was fitted, a true change c also bent the data: the straight fit took up what it
-    could, and at the date it is wrong by c times what is left of t**2 / 2 when a line
-    is fitted to it at the epochs.  For two epochs that is t * (t - t1) / 2 exactly.
+    A change that was fitted is taken as it is.  Where none was, a true change c also
+    bent the data: the straight fit took up what it could, and at the date it is wrong
+    by c times what is left of t**2 / 2 when a line is fitted to it at the epochs.  For
+    two epochs that is t * (t - t1) / 2 exactly.
     """
     if not np.isfinite(mjd):
         msg = f"mjd must be finite, got {mjd!r}"
@@ -214,21 +217,15 @@ class _Motion:
     """Place, speed and change of an arc once rolling dust is allowed for."""
 
     def __init__(self, arc: MovingArc, roughness: float) -> None:
-        prior = (roughness * arc.speed**2 / arc.length) ** 2
         self._covariance = np.array(arc.covariance, dtype=float)
         if arc.change is None:
             self._covariance[2], self._covariance[:, 2] = 0.0, 0.0
             self._state = np.array([0.0, arc.speed, 0.0])
-            self._unseen, self._line = prior, _line_through_half_square(arc)
+            self._unseen = (roughness * arc.speed**2 / arc.length) ** 2
+            self._line = _line_through_half_square(arc)
             return
-        self._unseen, self._line = 0.0, (0.0, 0.0)
         self._state = np.array([0.0, arc.speed, arc.change])
-        both = self._covariance[2, 2] + prior
-        if both > 0.0:
-            # The prior is one more measurement of the change, of value zero.
-            gain = self._covariance[:, 2] / both
-            self._state = self._state - gain * arc.change
-            self._covariance -= np.outer(gain, self._covariance[2])
+        self._unseen, self._line = 0.0, (0.0, 0.0)
 
     @property
     def change(self) -> float:

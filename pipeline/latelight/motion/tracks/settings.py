@@ -60,7 +60,7 @@ class TrackSettings(StageSettings):
         "1 sigma as a fraction of its width.",
     )
     roll_px: float = Field(
-        0.7,
+        0.85,
         ge=0.0,
         le=20.0,
         description="How far the hills of a dust sheet carry an echo ahead of even "
