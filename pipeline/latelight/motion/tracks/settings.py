@@ -53,7 +53,7 @@ class TrackSettings(StageSettings):
         description="Distance along the motion over which that changes [pixel].",
     )
     pull: float = Field(
-        0.03,
+        0.05,
         ge=0.0,
         le=1.0,
         description="How far finer dust pulls the ridge of an echo to one side, "
