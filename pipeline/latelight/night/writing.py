@@ -24,6 +24,7 @@ from latelight.products.track_cutouts import write_track_cutout
 from latelight.products.track_picture import write_track_picture
 from latelight.products.track_rows import InterpretationRow, TrackRow
 from latelight.products.track_tables import write_track_tables
+from latelight.threads import on_each
 
 __all__ = ["Named", "name_all", "write_products"]
 
@@ -146,18 +147,15 @@ def write_products(
     ProductError
         If a file cannot be written.
     """
-    written: list[Path] = []
-    for cutout in named.cutouts:
-        image, picture = _files(folder, cutout.row.id)
-        write_cutout(image, cutout)
-        write_picture(picture, cutout, settings=config.products)
-        written += [image, picture]
-    for track in named.tracks:
-        if track.cutout is not None:
-            image, picture = _files(folder, track.row.id)
-            write_track_cutout(image, track.cutout)
-            write_track_picture(picture, track.cutout, settings=config.products)
-            written += [image, picture]
+    # Pictures are drawn beside the files: the one waits for the other's compression.
+    written = [
+        path
+        for paths in on_each(
+            lambda write: write(folder, named, config),
+            (_write_images, _write_pictures),
+        )
+        for path in paths
+    ]
     written += write_tables(
         folder,
         candidates=named.candidates,
@@ -177,6 +175,32 @@ def write_products(
     return [*written, table]
 
 
-def _files(folder: Path, name: str) -> tuple[Path, Path]:
-    stem = folder / "cutouts" / name
-    return Path(f"{stem}.fits"), Path(f"{stem}.png")
+def _write_images(folder: Path, named: Named, _: NightConfig) -> list[Path]:
+    """Write the FITS files of the cutouts."""
+    written = []
+    for cutout in named.cutouts:
+        written.append(_file(folder, cutout.row.id, "fits"))
+        write_cutout(written[-1], cutout)
+    for track in named.tracks:
+        if track.cutout is not None:
+            written.append(_file(folder, track.row.id, "fits"))
+            write_track_cutout(written[-1], track.cutout)
+    return written
+
+
+def _write_pictures(folder: Path, named: Named, config: NightConfig) -> list[Path]:
+    """Draw the pictures of the cutouts."""
+    written = []
+    for cutout in named.cutouts:
+        written.append(_file(folder, cutout.row.id, "png"))
+        write_picture(written[-1], cutout, settings=config.products)
+    for track in named.tracks:
+        if track.cutout is not None:
+            written.append(_file(folder, track.row.id, "png"))
+            write_track_picture(written[-1], track.cutout, settings=config.products)
+    return written
+
+
+def _file(folder: Path, name: str, kind: str) -> Path:
+    # A name may hold dots: with_suffix would cut them off.
+    return folder / "cutouts" / f"{name}.{kind}"

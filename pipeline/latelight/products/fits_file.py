@@ -24,18 +24,28 @@ def fits_bytes(hdus: list[Any]) -> bytes:
     hdus : list of astropy HDU
         The first a primary one; compressed images are allowed.
     """
+    units = fits.HDUList(hdus)
+    # Cards of the file as a whole come first: they count in the sums.
+    units.update_extend()
+    if not any(isinstance(hdu, fits.CompImageHDU) for hdu in hdus):
+        return _summed(units)
     plain = io.BytesIO()
-    fits.HDUList(hdus).writeto(plain)
+    units.writeto(plain)
     plain.seek(0)
-    summed = io.BytesIO()
     # Read back as stored, so that the sums are those of the compressed tables
     # a verifying program sees and not of the images inside.
     with fits.open(plain, disable_image_compression=True) as stored:
-        for hdu in stored:
-            hdu.add_checksum(when="of this unit")
-        # They were verified when they were written first.
-        stored.writeto(summed, output_verify="ignore")
-    return summed.getvalue()
+        return _summed(stored)
+
+
+def _summed(units: Any) -> bytes:
+    """Return a file of units, with their sums."""
+    stream = io.BytesIO()
+    for hdu in units:
+        hdu.add_checksum(when="of this unit")
+    # They are our own: looking through every card takes as long as writing.
+    units.writeto(stream, output_verify="ignore")
+    return stream.getvalue()
 
 
 def ascii_text(text: str) -> str:
