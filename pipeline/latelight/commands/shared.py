@@ -37,8 +37,8 @@ __all__ = [
 DONE, SOME_FAILED, UNUSABLE, INTERRUPTED = 0, 1, 2, 130
 
 EXIT_CODES = (
-    "exit codes: 0 all done; 1 a pair or frame failed (pairs.ecsv says why); "
-    "2 settings, usage or output folder; 130 interrupted"
+    "exit codes: 0 all done; 1 a pair, frame or series failed (pairs.ecsv and "
+    "series.ecsv say why); 2 settings, usage or a folder; 130 interrupted"
 )
 
 Result = TypeVar("Result")
