@@ -252,25 +252,24 @@ def _run_pairs(
     book: RunBook,
 ) -> tuple[list[Outcome], bool]:
     """Return the outcomes of all pairs, and whether they were cut short."""
-    outcomes: list[Outcome] = []
-    n_done = 0
+    # In one step a task: an interrupt may come between any two lines.
+    done: list[list[Outcome]] = []
+    interrupted = False
     progress.begin(sum(len(_pairs(task)) for task in tasks))
     try:
         for of_task in _in_order(_process, tasks, jobs, _failed):
-            for outcome in of_task:
-                for event in outcome.events:
-                    log_event(event)
-                outcomes.append(_keep_difference(outcome, config, book))
+            for event in (event for outcome in of_task for event in outcome.events):
+                log_event(event)
+            done.append([_keep_difference(o, config, book) for o in of_task])
+            for outcome in done[-1]:
                 progress.step(outcome.row)
-            n_done += 1
     except KeyboardInterrupt:
-        for task in tasks[n_done:]:
-            outcomes += _failed(task, _INTERRUPTED)
+        interrupted = True
         log_event(Event("interrupted", level=logging.ERROR))
-        return outcomes, True
     finally:
         progress.end()
-    return outcomes, False
+    cut_short = [_failed(task, _INTERRUPTED) for task in tasks[len(done) :]]
+    return [outcome for each in (*done, *cut_short) for outcome in each], interrupted
 
 
 def _run_series(
