@@ -14,6 +14,7 @@ from latelight.masks import MASK_MEANINGS, MaskBit
 from latelight.products.atomic import write_bytes
 from latelight.products.candidate_columns import CANDIDATE_COLUMNS
 from latelight.products.fits_file import fits_bytes, row_card
+from latelight.products.meaning_columns import MEANING_CARDS
 from latelight.products.rows import CandidateRow
 from latelight.products.settings import ProductSettings
 from latelight.products.windows import Window, window_around
@@ -65,19 +66,7 @@ CARDS = {
     "profile_chi2": ("PROFCHI2", "reduced chi-square of profile"),
     "curvature_radius": ("CURVRAD", "radius of the arc"),
     "source_separation": ("SRCSEP", "arc to source"),
-    "dust_distance": ("DUSTDIST", "dust to source"),
-    "dust_distance_err": ("DUSTDERR", "1 sigma"),
-    "scattering_angle": ("SCATANG", "0 is forward"),
-    "scattering_angle_err": ("SCATAERR", "1 sigma"),
-    "viewing_pa": ("VIEWPA", "source to dust, on the sky"),
-    "viewing_inclination": ("VIEWINC", "source to dust, from line to us"),
-    "viewing_inclination_err": ("VIEWIERR", "1 sigma"),
-    "flat_speed": ("FLATSPD", "of a sheet across the view"),
-    "flat_speed_err": ("FLATSERR", "1 sigma"),
-    "sheet_slope": ("SLOPE", "of the sheet, dz/drho"),
-    "sheet_slope_err": ("SLOPEERR", "1 sigma"),
-    "implied_age": ("IMPAGE", "for a sheet across the view"),
-    "implied_age_err": ("IMPAGERR", "1 sigma"),
+    **MEANING_CARDS,
     "track": ("TRACK", "track on which it lies"),
 }
 

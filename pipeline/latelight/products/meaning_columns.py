@@ -13,6 +13,7 @@ __all__ = [
     "DEPTH_COLUMNS",
     "FLAT_COLUMNS",
     "LIGHT_COLUMNS",
+    "MEANING_CARDS",
     "MEANING_COLUMNS",
     "SLOPE_COLUMNS",
     "error_column",
@@ -107,3 +108,20 @@ FLAT_COLUMNS = (_FLAT_SPEED, error_column(_FLAT_SPEED, "phys.veloc.ang"))
 SLOPE_COLUMNS = (_SLOPE, error_column(_SLOPE, "phys.dust"))
 AGE_COLUMNS = (_AGE, error_column(_AGE, "time.age"))
 MEANING_COLUMNS = (*LIGHT_COLUMNS, *FLAT_COLUMNS, *SLOPE_COLUMNS, *AGE_COLUMNS)
+
+# Header keyword and comment of each in the cutouts.
+MEANING_CARDS = {
+    "dust_distance": ("DUSTDIST", "dust to source"),
+    "dust_distance_err": ("DUSTDERR", "1 sigma"),
+    "scattering_angle": ("SCATANG", "0 is forward"),
+    "scattering_angle_err": ("SCATAERR", "1 sigma"),
+    "viewing_pa": ("VIEWPA", "source to dust, on the sky"),
+    "viewing_inclination": ("VIEWINC", "source to dust, from line to us"),
+    "viewing_inclination_err": ("VIEWIERR", "1 sigma"),
+    "flat_speed": ("FLATSPD", "of a sheet across the view"),
+    "flat_speed_err": ("FLATSERR", "1 sigma"),
+    "sheet_slope": ("SLOPE", "of the sheet, dz/drho"),
+    "sheet_slope_err": ("SLOPEERR", "1 sigma"),
+    "implied_age": ("IMPAGE", "for a sheet across the view"),
+    "implied_age_err": ("IMPAGERR", "1 sigma"),
+}

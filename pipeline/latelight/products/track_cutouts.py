@@ -14,6 +14,7 @@ import latelight
 from latelight.products.atomic import write_bytes
 from latelight.products.coadding import part_moving
 from latelight.products.fits_file import ascii_text, fits_bytes, row_card
+from latelight.products.meaning_columns import MEANING_CARDS
 from latelight.products.settings import ProductSettings
 from latelight.products.track_columns import TRACK_COLUMNS
 from latelight.products.track_rows import TrackRow
@@ -79,19 +80,7 @@ TRACK_CARDS = {
     "speed_px": ("SPEEDPX", "along the normal"),
     "speed_err_px": ("SPEEDPXE", "1 sigma"),
     "source_separation": ("SRCSEP", "track to source"),
-    "dust_distance": ("DUSTDIST", "dust to source"),
-    "dust_distance_err": ("DUSTDERR", "1 sigma"),
-    "scattering_angle": ("SCATANG", "0 is forward"),
-    "scattering_angle_err": ("SCATAERR", "1 sigma"),
-    "viewing_pa": ("VIEWPA", "source to dust, on the sky"),
-    "viewing_inclination": ("VIEWINC", "source to dust, from line to us"),
-    "viewing_inclination_err": ("VIEWIERR", "1 sigma"),
-    "flat_speed": ("FLATSPD", "of a sheet across the view"),
-    "flat_speed_err": ("FLATSERR", "1 sigma"),
-    "sheet_slope": ("SLOPE", "of the sheet, dz/drho"),
-    "sheet_slope_err": ("SLOPEERR", "1 sigma"),
-    "implied_age": ("IMPAGE", "for a sheet across the view"),
-    "implied_age_err": ("IMPAGERR", "1 sigma"),
+    **MEANING_CARDS,
 }
 
 
