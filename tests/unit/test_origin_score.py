@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from latelight.origin.score import score_origins
+from latelight.origin.score import best_origin, score_origins
 from latelight.origin.settings import OriginSettings
 from latelight.records import Source
 from latelight.sky import offset_position
@@ -33,6 +33,15 @@ def ring(ra=100.0, dec=0.0, distance=3.0, **extra):
         place = offset_position(ra, dec, pa, distance)
         out.append(Source(f"at {pa}", float(place[0]), float(place[1]), **extra))
     return out
+
+
+def test_only_a_source_that_explains_the_arc_is_named():
+    scores = score(ring())
+    settings = OriginSettings(min_score=scores[0].score - 0.01)
+    assert best_origin(scores, settings=settings) is scores[0]
+    settings = OriginSettings(min_score=scores[0].score + 0.01)
+    assert best_origin(scores, settings=settings) is None
+    assert best_origin((), settings=settings) is None
 
 
 def test_the_source_behind_the_motion_comes_first():
