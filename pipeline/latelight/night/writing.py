@@ -24,7 +24,6 @@ from latelight.products.track_cutouts import write_track_cutout
 from latelight.products.track_picture import write_track_picture
 from latelight.products.track_rows import InterpretationRow, TrackRow
 from latelight.products.track_tables import write_track_tables
-from latelight.threads import on_each
 
 __all__ = ["Named", "name_all", "write_products"]
 
@@ -147,14 +146,11 @@ def write_products(
     ProductError
         If a file cannot be written.
     """
-    # Pictures are drawn beside the files: the one waits for the other's compression.
+    # One after the other: a FITS file turns the bytes of its arrays round, where they
+    # stand, while it is written.
     written = [
-        path
-        for paths in on_each(
-            lambda write: write(folder, named, config),
-            (_write_images, _write_pictures),
-        )
-        for path in paths
+        *_write_images(folder, named),
+        *_write_pictures(folder, named, config),
     ]
     written += write_tables(
         folder,
@@ -175,7 +171,7 @@ def write_products(
     return [*written, table]
 
 
-def _write_images(folder: Path, named: Named, _: NightConfig) -> list[Path]:
+def _write_images(folder: Path, named: Named) -> list[Path]:
     """Write the FITS files of the cutouts."""
     written = []
     for cutout in named.cutouts:
